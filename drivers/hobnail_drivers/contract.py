@@ -1,0 +1,152 @@
+"""The contract that every servo driver keeps: pulses in microseconds, `None` for no signal.
+
+A driver knows boards, channels and pulses; nothing of legs, angles or gaits.
+It is used from one thread at a time, but not always from the same one.
+"""
+
+from __future__ import annotations
+
+import math
+from abc import ABC, abstractmethod
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import final
+
+from hobnail_drivers.errors import NotOpenError, PulseError
+
+Pulses = Sequence[float | None]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BoardSettings:
+    """One PWM board as wired."""
+
+    name: str
+    bus: int
+    address: int
+    frame_hz: float
+    oscillator_hz: float = 25_000_000.0
+    output_enable: tuple[str, int] | None = None  # (gpio chip, line) of the /OE pin
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Output:
+    """One servo output: where it is, and the hard limits that no pulse may leave.
+
+    `speed_us_s` and `dead_band_us` describe the servo on it for back ends that
+    simulate one; hardware back ends ignore them.
+    """
+
+    board: str
+    channel: int
+    min_us: float
+    max_us: float
+    speed_us_s: float = 5000.0
+    dead_band_us: float = 4.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Health:
+    """What the back end reads back of itself.
+
+    `settings_kept` False: a board lost its settings (a brown-out, most often).
+    `frame_hz` is the true frame rate of each board.
+    """
+
+    settings_kept: bool
+    detail: str = ""
+    frame_hz: dict[str, float] = field(default_factory=dict)
+
+
+class Driver(ABC):
+    """Writes servo pulses to one or more boards.
+
+    Must: send no pulse before the first `write`; on `release` end every pulse
+    on every board, trying each board even when another fails; survive `close`
+    twice and `close` without `open`; raise only DriverError.
+    May: be slow in `open`, `health` and `close`; `write` takes one bus
+    transaction per board.
+    Must not: fall back to another back end, retry by itself, or log.
+    """
+
+    def __init__(
+        self, boards: Sequence[BoardSettings], outputs: Sequence[Output], *, argument: str = ""
+    ) -> None:
+        """`outputs` fixes the order of `write`; `argument` is what follows the colon in
+        a driver's name (`name:argument`), for back ends that take one."""
+        self.boards = tuple(boards)
+        self.outputs = tuple(outputs)
+        self.argument = argument
+        self._limits = tuple((output.min_us, output.max_us) for output in self.outputs)
+        self._is_open = False
+
+    @final
+    def open(self) -> None:
+        """Find the boards, set them up with every output off, and verify it.
+
+        Opening an open driver sets the boards up again.
+        Raises BusError, SetupError, MissingLibraryError.
+        """
+        self._open()
+        self._is_open = True
+
+    @final
+    def write(self, pulses_us: Pulses) -> None:
+        """Send one frame: a pulse width in microseconds per output, None for no signal.
+
+        Raises PulseError (nothing was sent), NotOpenError, BusError.
+        """
+        if not self._is_open:
+            raise NotOpenError("the driver is not open: call open() first")
+        limits = self._limits
+        if len(pulses_us) != len(limits):
+            raise PulseError(f"{len(pulses_us)} pulses for {len(limits)} outputs; nothing was sent")
+        for pulse, (low, high) in zip(pulses_us, limits, strict=True):
+            if pulse is not None and not low <= pulse <= high:
+                self._refuse(pulses_us)
+        self._write(pulses_us)
+
+    @final
+    def release(self) -> None:
+        """End every pulse on every board now.  Raises BusError after trying all."""
+        if not self._is_open:
+            raise NotOpenError("the driver is not open: call open() first")
+        self._release()
+
+    @final
+    def health(self) -> Health:
+        """Read the boards' settings back.  Raises BusError, NotOpenError."""
+        if not self._is_open:
+            raise NotOpenError("the driver is not open: call open() first")
+        return self._health()
+
+    @final
+    def close(self) -> None:
+        """End every pulse and let go of the devices; may be called twice."""
+        if self._is_open:
+            self._is_open = False
+            self._close()
+
+    def _refuse(self, pulses_us: Pulses) -> None:
+        for pulse, output in zip(pulses_us, self.outputs, strict=True):
+            if pulse is not None and not output.min_us <= pulse <= output.max_us:
+                kind = "not a number" if math.isnan(pulse) else f"{pulse:.1f} us"
+                raise PulseError(
+                    f"board {output.board} channel {output.channel}: pulse is {kind}, allowed "
+                    f"{output.min_us:.0f} to {output.max_us:.0f} us; nothing was sent"
+                )
+
+    @abstractmethod
+    def _open(self) -> None: ...
+
+    @abstractmethod
+    def _write(self, pulses_us: Pulses) -> None: ...
+
+    @abstractmethod
+    def _release(self) -> None: ...
+
+    @abstractmethod
+    def _health(self) -> Health: ...
+
+    @abstractmethod
+    def _close(self) -> None: ...

@@ -1,0 +1,42 @@
+"""Errors of the hardware abstraction, as one tree; no logic.
+
+    DriverError
+    |-- PulseError (ValueError)    a pulse outside its hard limits, or not a number; nothing was sent
+    |-- NotOpenError               used before `open` or after `close`
+    |-- SetupError                 the board answers, but does not hold what was written to it
+    |-- MissingLibraryError (ImportError)   a hardware library is not installed
+    `-- BusError (OSError)         a transfer failed; `errno` and `board` say where and why
+"""
+
+from __future__ import annotations
+
+
+class DriverError(Exception):
+    """Root of the tree."""
+
+
+class PulseError(DriverError, ValueError):
+    """A pulse outside its hard limits, or not a number; nothing was sent."""
+
+
+class NotOpenError(DriverError):
+    """Used before `open` or after `close`."""
+
+
+class SetupError(DriverError):
+    """The board answers, but does not hold what was written to it."""
+
+
+class MissingLibraryError(DriverError, ImportError):
+    """A hardware library is not installed."""
+
+
+class BusError(DriverError, OSError):
+    """A transfer failed; `errno` is the system's, `board` the one addressed."""
+
+    def __init__(self, errno: int, message: str, board: str) -> None:
+        OSError.__init__(self, errno, message)
+        self.board = board
+
+    def __str__(self) -> str:
+        return f"board {self.board}: {self.strerror} (errno {self.errno})"

@@ -1,0 +1,1 @@
+"""The running robot: loop, socket, states, faults, recorder, notify."""

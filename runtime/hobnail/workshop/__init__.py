@@ -1,0 +1,1 @@
+"""Offline tools for the bench: check, rehearse, calibrate, trim, log."""
