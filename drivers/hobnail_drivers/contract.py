@@ -10,9 +10,9 @@ import math
 from abc import ABC, abstractmethod
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from typing import final
+from typing import ClassVar, final
 
-from hobnail_drivers.errors import NotOpenError, PulseError
+from hobnail_drivers.errors import NotOpenError, PulseError, SettingsError
 
 Pulses = Sequence[float | None]
 
@@ -58,6 +58,44 @@ class Health:
     frame_hz: dict[str, float] = field(default_factory=dict)
 
 
+CHANNELS = 16  # of one board
+
+
+def _check_settings(boards: Sequence[BoardSettings], outputs: Sequence[Output]) -> None:
+    places: dict[tuple[int, int], str] = {}
+    for board in boards:
+        place = (board.bus, board.address)
+        if place in places:
+            raise SettingsError(
+                f"boards {places[place]} and {board.name} share address 0x{board.address:02x} on bus "
+                f"{board.bus}: set one board's address pins otherwise"
+            )
+        places[place] = board.name
+        if not (0.0 < board.frame_hz < math.inf and 0.0 < board.oscillator_hz < math.inf):
+            raise SettingsError(
+                f"board {board.name}: frame rate {board.frame_hz} Hz, oscillator {board.oscillator_hz} Hz; "
+                "both must be positive numbers"
+            )
+    names = [board.name for board in boards]
+    if len(set(names)) < len(names):
+        raise SettingsError(f"two boards have the same name among {', '.join(names)}: rename one")
+    taken: set[tuple[str, int]] = set()
+    for output in outputs:
+        where = f"board {output.board} channel {output.channel}"
+        if output.board not in names:
+            raise SettingsError(f"{where}: there is no such board; there are {', '.join(names) or 'none'}")
+        if not 0 <= output.channel < CHANNELS:
+            raise SettingsError(f"{where}: channels are 0 to {CHANNELS - 1}")
+        if (output.board, output.channel) in taken:
+            raise SettingsError(f"{where} is used by two outputs: give each its own")
+        taken.add((output.board, output.channel))
+        if not 0.0 < output.min_us < output.max_us:
+            raise SettingsError(
+                f"{where}: limits {output.min_us} to {output.max_us} us; allowed is a positive lower limit "
+                "below the upper one"
+            )
+
+
 class Driver(ABC):
     """Writes servo pulses to one or more boards.
 
@@ -69,11 +107,23 @@ class Driver(ABC):
     Must not: fall back to another back end, retry by itself, or log.
     """
 
+    takes_argument: ClassVar[bool] = False
+
     def __init__(
         self, boards: Sequence[BoardSettings], outputs: Sequence[Output], *, argument: str = ""
     ) -> None:
         """`outputs` fixes the order of `write`; `argument` is what follows the colon in
-        a driver's name (`name:argument`), for back ends that take one."""
+        a driver's name (`name:argument`), for back ends that take one.
+
+        Raises SettingsError when two boards have one name or address, two
+        outputs share a channel, an output names no board or has no room
+        between its limits, or an argument is given to a back end that takes none.
+        """
+        _check_settings(boards, outputs)
+        if argument and not self.takes_argument:
+            raise SettingsError(
+                f"{type(self).__name__} takes no argument, got {argument!r}: leave out the colon"
+            )
         self.boards = tuple(boards)
         self.outputs = tuple(outputs)
         self.argument = argument

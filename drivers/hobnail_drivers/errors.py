@@ -1,11 +1,12 @@
 """Errors of the hardware abstraction, as one tree; no logic.
 
-    DriverError
-    |-- PulseError (ValueError)    a pulse outside its hard limits, or not a number; nothing was sent
-    |-- NotOpenError               used before `open` or after `close`
-    |-- SetupError                 the board answers, but does not hold what was written to it
-    |-- MissingLibraryError (ImportError)   a hardware library is not installed
-    `-- BusError (OSError)         a transfer failed; `errno` and `board` say where and why
+DriverError
+|-- PulseError (ValueError)    a pulse outside its hard limits, or not a number; nothing was sent
+|-- SettingsError (ValueError) boards, outputs and argument do not fit together; nothing was opened
+|-- NotOpenError               used before `open` or after `close`
+|-- SetupError                 the board answers, but does not hold what was written to it
+|-- MissingLibraryError (ImportError)   a hardware library is not installed
+`-- BusError (OSError)         a transfer failed; `errno` and `board` say where and why
 """
 
 from __future__ import annotations
@@ -17,6 +18,10 @@ class DriverError(Exception):
 
 class PulseError(DriverError, ValueError):
     """A pulse outside its hard limits, or not a number; nothing was sent."""
+
+
+class SettingsError(DriverError, ValueError):
+    """Boards, outputs and argument do not fit together or the chip; nothing was opened."""
 
 
 class NotOpenError(DriverError):
