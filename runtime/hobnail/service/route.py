@@ -13,6 +13,7 @@ from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 from hobnail.errors import CommandError
+from hobnail.motion.planar import compose, exp_twist
 from hobnail.robot import Robot, Vec3
 from hobnail.service.route_steps import Move, Pose, Speed, Step, Wait, misfits
 
@@ -140,8 +141,8 @@ class RouteRunner:
 
     def _move(self, step: Move, tick: Tick, dt_s: float) -> Action:
         rate_limit, acceleration = pace(step.twist, self._speed, self._robot)
-        self._goal = compose(self._start, step.twist)
-        reference = compose(self._start, scaled(step.twist, self._share))
+        self._goal = moved(self._start, step.twist)
+        reference = moved(self._start, scaled(step.twist, self._share))
         ahead = self._offset(reference)
         lag = max(math.hypot(ahead[0], ahead[1]) / LAG_M, abs(ahead[2]) / LAG_RAD)
         if self._share >= 1.0 and self._arrived(ahead, tick.velocity):
@@ -287,16 +288,9 @@ def expected_seconds(steps: Sequence[Step], robot: Robot) -> tuple[float, ...]:
     return tuple(times)
 
 
-def compose(start: Vec3, twist: Vec3) -> Vec3:
-    """`start` moved by exp(twist): the arc that a constant body velocity draws in unit time
-    (Lynch & Park, Modern Robotics, planar twists).  The yaw is not wrapped."""
-    x, y, yaw = twist
-    if abs(yaw) < 1e-6:  # series: exact to 1e-12 of the length here
-        along, across = 1.0 - yaw * yaw / 6.0, yaw / 2.0
-    else:
-        along, across = math.sin(yaw) / yaw, (1.0 - math.cos(yaw)) / yaw
-    moved = rotated((along * x - across * y, across * x + along * y, yaw), start[2])
-    return (start[0] + moved[0], start[1] + moved[1], start[2] + yaw)
+def moved(start: Vec3, twist: Vec3) -> Vec3:
+    """`start` after the arc that a constant body velocity draws in unit time.  Yaw is not wrapped."""
+    return compose(start, exp_twist(*twist, 1.0))
 
 
 def scaled(twist: Vec3, factor: float) -> Vec3:
