@@ -56,7 +56,9 @@ class RouteRunner:
     def __init__(self, steps: Sequence[Step], robot: Robot) -> None:
         """Raises CommandError when there is no step, or one does not fit the robot."""
         problems = [
-            f"step {k}: {text}" for k, step in enumerate(steps, 1) for _, text in misfits(step, robot)
+            f"step {k} asks for {found}, {robot.name} allows {allowed}"
+            for k, step in enumerate(steps, 1)
+            for _, (found, allowed) in misfits(step, robot)
         ]
         if not steps:
             problems = ["the route has no steps: give at least one"]

@@ -109,41 +109,31 @@ class Speed:
 Step = Move | Wait | Pose | ChangeGait | Speed
 
 
-def misfits(step: Step, robot: Robot) -> list[tuple[str, str]]:
-    """What in a step this robot cannot do, as (name of the part, sentence with the allowed values)."""
+def misfits(step: Step, robot: Robot) -> list[tuple[str, tuple[str, str]]]:
+    """What in a step this robot cannot do: (attribute, (what was found, what is allowed))."""
     if isinstance(step, ChangeGait):
         names = [gait.name for gait in robot.gaits]
-        if step.name not in names:
-            return [("gait", f"{robot.name} has no gait {step.name!r}, it has {', '.join(names)}")]
-    if isinstance(step, Pose):
-        return _posture_misfits(step, robot)
-    return []
-
-
-def _posture_misfits(step: Pose, robot: Robot) -> list[tuple[str, str]]:
+        return [] if step.name in names else [("name", (f"gait {step.name}", " or ".join(names)))]
+    if not isinstance(step, Pose):
+        return []
     limits = robot.posture_limits
-    found: list[tuple[str, str]] = []
-    low, high = limits.height_m
-    if step.height_m is not None and not low <= step.height_m <= high:
-        found.append(
-            (
-                "height_m",
-                f"height is {step.height_m * 1000:g} mm, allowed {low * 1000:g} to {high * 1000:g} mm",
-            )
-        )
+    found: list[tuple[str, tuple[str, str]]] = []
+    low, high = (1000.0 * height for height in limits.height_m)
+    if step.height_m is not None and not limits.height_m[0] <= step.height_m <= limits.height_m[1]:
+        found.append(("height_m", (f"height {step.height_m * 1000:g} mm", f"{low:g} to {high:g} mm")))
     for name, angle, limit in (
         ("roll", step.roll_rad, limits.roll_rad),
         ("pitch", step.pitch_rad, limits.pitch_rad),
         ("yaw", step.yaw_rad, limits.yaw_rad),
     ):
-        if angle is not None and not abs(angle) <= limit:
-            degrees, most = math.degrees(angle), math.degrees(limit)
+        if angle is not None and abs(angle) > limit:
+            most = math.degrees(limit)
             found.append(
-                (f"{name}_rad", f"{name} is {degrees:.4g} deg, allowed -{most:.4g} to {most:.4g} deg")
+                (f"{name}_rad", (f"{name} {math.degrees(angle):.4g} deg", f"{-most:.4g} to {most:.4g} deg"))
             )
-    if step.lean_m is not None and not math.hypot(*step.lean_m) <= limits.lean_m:
+    if step.lean_m is not None and math.hypot(*step.lean_m) > limits.lean_m:
         length, most = 1000 * math.hypot(*step.lean_m), 1000 * limits.lean_m
-        found.append(("lean_m", f"lean is {length:.4g} mm long, allowed at most {most:.4g} mm"))
+        found.append(("lean_m", (f"a lean of {length:.4g} mm", f"at most {most:.4g} mm in any direction")))
     return found
 
 
