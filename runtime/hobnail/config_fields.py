@@ -1,0 +1,391 @@
+"""Kinds of values that a configuration holds: from a YAML node to SI units, with its bounds.
+
+A kind reads a node, says in words what is allowed, and gives its JSON Schema;
+a `Field` puts a kind beside a key and the attribute that it becomes.  Which
+fields there are stands in `hobnail.config_tables`.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Callable, Mapping as MappingType
+from dataclasses import dataclass, field
+from typing import Any, Protocol
+
+from hobnail.config_yaml import Listing, Mapping, Node, Report, Scalar, shown
+
+KGF_CM_NM = 0.0980665  # exact, by the definition of the standard gravity
+
+# What a number in the unit of its key is in SI units (pulses stay in us).
+SI: dict[str, Callable[[float], float]] = {
+    "": float,
+    "mm": lambda value: value / 1000.0,
+    "mm/s": lambda value: value / 1000.0,
+    "deg": math.radians,
+    "deg/s": math.radians,
+    "s/60 deg": lambda value: math.radians(60.0) / value,
+    "kgf cm": lambda value: value * KGF_CM_NM,
+    "ms": lambda value: value / 1000.0,
+    "MHz": lambda value: value * 1e6,
+}
+
+_DECIMAL = re.compile(r"[-+]?(?:(?:0|[1-9][0-9]{0,30})(?:\.[0-9]{0,30})?|\.[0-9]{1,30})\Z")
+_INTEGER = re.compile(r"[-+]?(?:0|[1-9][0-9]{0,18})\Z")
+_HEX = re.compile(r"0x[0-9a-fA-F]{1,8}\Z")
+_NAME = r"[A-Za-z][A-Za-z0-9_-]{0,39}"
+# Plain words that YAML 1.1 or 1.2 readers take for something else than text.
+_NOT_TEXT = frozenset("y n yes no on off true false null".split())
+
+_SURPRISES = (
+    (r"[-+]?[0-9.]+[eE][-+]?[0-9]+", "Readers of YAML differ on exponents: write the number out."),
+    (r"[-+]?0[0-9]+", "A leading zero makes it octal to some readers: write it without."),
+    (r"[-+]?0[xob][0-9a-fA-F]+", "Write it as a decimal number."),
+    (
+        r"[-+]?[0-9]+(:[0-9]+)+(\.[0-9]*)?",
+        "A colon makes it base 60 to some readers: write a decimal number.",
+    ),
+    (r"[-+]?[0-9]*,[0-9]+", "Write a decimal point, not a comma."),
+    (r"[-+]?[0-9][0-9_]*_[0-9_.]*", "Write the number without underscores."),
+    (r"[-+]?\.?(nan|inf|infinity)", "Only finite numbers are allowed."),
+    (r"(y|n|yes|no|on|off|true|false)", "YAML takes this word for true or false: write a number."),
+    (r"[-+]?[0-9]*\.?[0-9]+ *[^0-9.\s].*", "Write the number alone: its unit is in the key."),
+)
+
+
+def surprise(node: Scalar) -> str:
+    """Why what looks like a number is not taken for one; empty when there is nothing to say."""
+    if not node.plain and _DECIMAL.match(node.text):
+        return "Remove the quotes: they make it text."
+    for pattern, reason in _SURPRISES:
+        if re.fullmatch(pattern, node.text, re.IGNORECASE):
+            return reason
+    return ""
+
+
+class Kind(Protocol):
+    """How a value is read."""
+
+    def read(self, node: Node, report: Report) -> Any:
+        """The value in SI units; None when it is not allowed, with the problem told."""
+
+    def allowed(self) -> str:
+        """What is allowed, in words."""
+
+    def schema(self) -> dict[str, Any]:
+        """The same as JSON Schema."""
+
+
+@dataclass(frozen=True, slots=True)
+class Number:
+    """A decimal number from `low` to `high` in `unit`."""
+
+    low: float
+    high: float
+    unit: str = ""
+
+    def read(self, node: Node, report: Report) -> float | None:
+        if isinstance(node, Scalar):
+            if node.plain and _DECIMAL.match(node.text):
+                value = float(node.text)
+                if self.low <= value <= self.high:
+                    return SI.get(self.unit, float)(value)
+                found = f"{shown(node)} {self.unit}".rstrip()
+                report.add(node, found, self.allowed())
+                return None
+            report.add(node, shown(node), self.allowed(), surprise(node))
+        else:
+            report.add(node, shown(node), self.allowed())
+        return None
+
+    def allowed(self) -> str:
+        return f"a number from {self.low:g} to {self.high:g} {self.unit}".rstrip()
+
+    def schema(self) -> dict[str, Any]:
+        return {"type": "number", "minimum": self.low, "maximum": self.high}
+
+
+@dataclass(frozen=True, slots=True)
+class Integer:
+    """A whole number; `hexadecimal` allows 0x40 as well and shows the bounds so."""
+
+    low: int
+    high: int
+    hexadecimal: bool = False
+
+    def read(self, node: Node, report: Report) -> int | None:
+        if isinstance(node, Scalar) and node.plain:
+            value: int | None = None
+            if _INTEGER.match(node.text):
+                value = int(node.text)
+            elif self.hexadecimal and _HEX.match(node.text):
+                value = int(node.text, 16)
+            if value is not None and self.low <= value <= self.high:
+                return value
+            report.add(node, shown(node), self.allowed(), "" if value is not None else surprise(node))
+            return None
+        report.add(node, shown(node), self.allowed(), surprise(node) if isinstance(node, Scalar) else "")
+        return None
+
+    def allowed(self) -> str:
+        if self.hexadecimal:
+            return f"an address from 0x{self.low:02x} to 0x{self.high:02x}"
+        return f"a whole number from {self.low} to {self.high}"
+
+    def schema(self) -> dict[str, Any]:
+        return {"type": "integer", "minimum": self.low, "maximum": self.high}
+
+
+@dataclass(frozen=True, slots=True)
+class Text:
+    """Text that matches `pattern` as a whole; `words` says so to people."""
+
+    pattern: str = _NAME
+    words: str = "a name of up to 40 letters, digits, - and _, a letter first"
+
+    def read(self, node: Node, report: Report) -> str | None:
+        if isinstance(node, Scalar) and re.fullmatch(self.pattern, node.text):
+            if not node.plain or not _other_than_text(node.text):
+                return node.text
+            report.add(
+                node, shown(node), self.allowed(), "YAML does not take this for text: put it in quotes."
+            )
+            return None
+        report.add(node, shown(node), self.allowed())
+        return None
+
+    def allowed(self) -> str:
+        return self.words
+
+    def schema(self) -> dict[str, Any]:
+        return {"type": "string", "pattern": f"^(?:{self.pattern})$"}
+
+
+def _other_than_text(text: str) -> bool:
+    return text.lower() in _NOT_TEXT or text == "~" or bool(re.match(r"[-+.]*[0-9]", text))
+
+
+@dataclass(frozen=True, slots=True)
+class Choice:
+    """One of a few words or whole numbers, each standing for a value."""
+
+    values: MappingType[str, Any]
+
+    def read(self, node: Node, report: Report) -> Any:
+        if isinstance(node, Scalar) and node.plain and node.text in self.values:
+            return self.values[node.text]
+        hint = nearest(node.text, self.values) if isinstance(node, Scalar) else ""
+        report.add(node, shown(node), self.allowed(), hint)
+        return None
+
+    def allowed(self) -> str:
+        return " or ".join(self.values)
+
+    def schema(self) -> dict[str, Any]:
+        return {"enum": [int(word) if _INTEGER.match(word) else word for word in self.values]}
+
+
+@dataclass(frozen=True, slots=True)
+class NumberOr:
+    """A number, or a word that stands for None in the robot."""
+
+    number: Number
+    word: str
+
+    def read(self, node: Node, report: Report) -> float | str | None:
+        if isinstance(node, Scalar) and node.plain and node.text == self.word:
+            return self.word
+        before = Report(report.file)
+        value = self.number.read(node, before)
+        for problem in before.problems():
+            report.add(node, problem.found, self.allowed(), problem.hint)
+        return value
+
+    def allowed(self) -> str:
+        return f"{self.word}, or {self.number.allowed()}"
+
+    def schema(self) -> dict[str, Any]:
+        return {"anyOf": [{"const": self.word}, self.number.schema()]}
+
+
+@dataclass(frozen=True, slots=True)
+class Several:
+    """A list of `least` to `most` values of one kind, read as a tuple; `what` names them.
+
+    `ascending` asks each number to be larger than the one before.
+    """
+
+    item: Kind
+    least: int
+    most: int
+    what: str = ""
+    ascending: bool = False
+
+    def read(self, node: Node, report: Report) -> tuple[Any, ...] | None:
+        if not isinstance(node, Listing) or not self.least <= len(node.items) <= self.most:
+            report.add(node, shown(node), self.allowed())
+            return None
+        values = tuple(self.item.read(item, report) for item in node.items)
+        if None in values:
+            return None
+        if self.ascending:
+            for number, (before, after) in enumerate(zip(values, values[1:], strict=False), start=1):
+                if after <= before:
+                    item = node.items[number]
+                    report.add(
+                        item, shown(item), f"more than {shown(node.items[number - 1])}, the one before"
+                    )
+                    return None
+        return values
+
+    def allowed(self) -> str:
+        count = f"{self.least}" if self.least == self.most else f"{self.least} to {self.most}"
+        what = f" ({self.what})" if self.what else ""
+        return f"a list of {count}{what}, each {self.item.allowed()}"
+
+    def schema(self) -> dict[str, Any]:
+        return {
+            "type": "array",
+            "items": self.item.schema(),
+            "minItems": self.least,
+            "maxItems": self.most,
+        }
+
+
+@dataclass(frozen=True, slots=True)
+class Pair:
+    """A list of two values of different kinds, such as (deg, us)."""
+
+    first: Kind
+    second: Kind
+
+    def read(self, node: Node, report: Report) -> tuple[Any, Any] | None:
+        if not isinstance(node, Listing) or len(node.items) != 2:
+            report.add(node, shown(node), self.allowed())
+            return None
+        first = self.first.read(node.items[0], report)
+        second = self.second.read(node.items[1], report)
+        return None if first is None or second is None else (first, second)
+
+    def allowed(self) -> str:
+        return f"[{self.first.allowed()}, {self.second.allowed()}]"
+
+    def schema(self) -> dict[str, Any]:
+        return {
+            "type": "array",
+            "prefixItems": [self.first.schema(), self.second.schema()],
+            "minItems": 2,
+            "maxItems": 2,
+        }
+
+
+@dataclass(frozen=True, slots=True)
+class Field:
+    """A key of a section: its kind and bounds, the attribute that it becomes, and what it means.
+
+    `becomes` is empty where something else than an attribute is made of it.
+    Not `required`: left out, the default of the attribute stands.
+    `inherited`: may stand in the section of defaults instead.
+    """
+
+    key: str
+    becomes: str
+    kind: Kind
+    note: str
+    required: bool = True
+    inherited: bool = False
+
+
+@dataclass(slots=True)
+class Section:
+    """A mapping as read: `values` by key in SI units, only those that were good."""
+
+    node: Mapping
+    fields: tuple[Field, ...]
+    values: dict[str, Any] = field(default_factory=dict)
+
+    def at(self, key: str) -> Node:
+        """The node of `key`, or of the whole section when it is not written."""
+        return self.node.entries.get(key, self.node)
+
+    def arguments(self) -> dict[str, Any]:
+        """Attribute -> value, for the dataclass that the section becomes."""
+        return {
+            each.becomes: self.values[each.key]
+            for each in self.fields
+            if each.becomes and each.key in self.values
+        }
+
+
+@dataclass(frozen=True, slots=True)
+class Group:
+    """A nested mapping with its own fields.
+
+    `partial`: any of them may be left out.  `inherits` names the section of
+    defaults, for messages.  `short`: a bare scalar stands for this one key.
+    """
+
+    fields: tuple[Field, ...]
+    partial: bool = False
+    inherits: str = ""
+    short: str = ""
+
+    def read(self, node: Node, report: Report) -> Section | None:
+        if self.short and isinstance(node, Scalar):
+            node = Mapping(
+                path=node.path,
+                line=node.line,
+                column=node.column,
+                entries={self.short: node},
+                keys={self.short: node},
+            )
+        if not isinstance(node, Mapping):
+            report.add(node, shown(node), self.allowed())
+            return None
+        section = Section(node, self.fields)
+        known = {each.key: each for each in self.fields}
+        for key, entry in node.entries.items():
+            if report.full:
+                return section
+            if key not in known:
+                hint = (
+                    "Write the values out: there are no merge keys." if key == "<<" else nearest(key, known)
+                )
+                report.add(node.keys[key], "unknown key", ", ".join(known), hint)
+                continue
+            value = known[key].kind.read(entry, report)
+            if value is not None:
+                section.values[key] = value
+        if not self.partial:
+            for each in self.fields:
+                if each.required and each.key not in node.entries:
+                    where = f"Write it here or in {self.inherits}." if each.inherited else ""
+                    report.add(node, "nothing", each.kind.allowed(), where, key=each.key)
+        return section
+
+    def allowed(self) -> str:
+        return f"a mapping with {', '.join(each.key for each in self.fields)}"
+
+    def schema(self) -> dict[str, Any]:
+        required = [each.key for each in self.fields if each.required and not each.inherited]
+        schema: dict[str, Any] = {
+            "type": "object",
+            "additionalProperties": False,
+            "properties": {
+                each.key: {**each.kind.schema(), "description": each.note} for each in self.fields
+            },
+        }
+        if required and not self.partial:
+            schema["required"] = required
+        if self.short:
+            bare = next(each.kind.schema() for each in self.fields if each.key == self.short)
+            return {"anyOf": [bare, schema]}
+        return schema
+
+
+def nearest(word: str, known: MappingType[str, Any] | list[str]) -> str:
+    """`Did you mean upper_mm?`, or nothing."""
+    from difflib import get_close_matches  # only needed for bad files
+
+    match = get_close_matches(word[:80], list(known), n=1, cutoff=0.6)
+    return f"Did you mean {match[0]}?" if match else ""
