@@ -13,7 +13,7 @@ from typing import Any
 
 from hobnail.config_fields import Section, nearest
 from hobnail.config_tables import JOINT_NAMES
-from hobnail.config_yaml import Listing, Report, shown
+from hobnail.config_yaml import Listing, Report
 from hobnail.motion.gaits import BUILT_IN_GAITS, built_in_gait, fewest_feet_down
 
 ALL_CALL = 0x70
@@ -93,7 +93,8 @@ def check_pulse_map(section: Section, report: Report) -> None:
         return
     for node, (angle0, pulse0), (angle1, pulse1) in zip(listing.items[1:], points, points[1:], strict=False):
         if angle1 <= angle0 or pulse1 <= pulse0:
-            found = f"[{math.degrees(angle1):g} deg, {pulse1:g} us] after [{math.degrees(angle0):g} deg, {pulse0:g} us]"
+            angles = f"{math.degrees(angle0):g} to {math.degrees(angle1):g} deg"
+            found = f"{angles} from {pulse0:g} to {pulse1:g} us"
             hint = "For a servo that turns the other way set direction: -1 at its joint."
             report.add(node, found, "points that rise in angle and in pulse", hint)
 

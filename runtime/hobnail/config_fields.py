@@ -9,8 +9,10 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Callable, Mapping as MappingType
+from collections.abc import Callable
+from collections.abc import Mapping as MappingType
 from dataclasses import dataclass, field
+from itertools import pairwise
 from typing import Any, Protocol
 
 from hobnail.config_yaml import Listing, Mapping, Node, Report, Scalar, shown
@@ -35,7 +37,7 @@ _INTEGER = re.compile(r"[-+]?(?:0|[1-9][0-9]{0,18})\Z")
 _HEX = re.compile(r"0x[0-9a-fA-F]{1,8}\Z")
 _NAME = r"[A-Za-z][A-Za-z0-9_-]{0,39}"
 # Plain words that YAML 1.1 or 1.2 readers take for something else than text.
-_NOT_TEXT = frozenset("y n yes no on off true false null".split())
+_NOT_TEXT = frozenset(("y", "n", "yes", "no", "on", "off", "true", "false", "null"))
 
 _SURPRISES = (
     (r"[-+]?[0-9.]+[eE][-+]?[0-9]+", "Readers of YAML differ on exponents: write the number out."),
@@ -229,7 +231,7 @@ class Several:
         if None in values:
             return None
         if self.ascending:
-            for number, (before, after) in enumerate(zip(values, values[1:], strict=False), start=1):
+            for number, (before, after) in enumerate(pairwise(values), start=1):
                 if after <= before:
                     item = node.items[number]
                     report.add(

@@ -13,6 +13,7 @@ import re
 import stat
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import NoReturn
 
 import yaml
 
@@ -92,7 +93,7 @@ class Report:
         return len(self._problems) >= MAX_PROBLEMS
 
     def add(self, node: Node | None, found: str, allowed: str, hint: str = "", *, key: str = "") -> None:
-        """Note a problem at `node` (None: the file as a whole); `key` names an entry that is missing there."""
+        """Note a problem at `node` (None: the whole file); `key` names an entry missing there."""
         if self.full:
             return
         path = node.path if node else ""
@@ -159,7 +160,7 @@ def parse(data: bytes, report: Report) -> Mapping | None:
     composer = _Composer(text, report)
     try:
         root = composer.document()
-    except _Refused:
+    except _RefusedError:
         return None
     except yaml.MarkedYAMLError as error:
         mark = error.problem_mark or error.context_mark
@@ -212,7 +213,7 @@ def _place(before: str) -> Node:
     return Node(path="", line=len(lines), column=len(lines[-1]) + 1)
 
 
-class _Refused(Exception):
+class _RefusedError(Exception):
     """Reading cannot go on; the problem has been told."""
 
 
@@ -243,13 +244,14 @@ class _Composer:
 
     def _node(self, event: yaml.Event, path: str, depth: int) -> Node:
         self.path = path
-        line, column = event.start_mark.line + 1, event.start_mark.column + 1
-        if isinstance(event, yaml.AliasEvent) or event.anchor is not None:
+        line, column = _position(event)
+        tag = getattr(event, "tag", None)
+        if getattr(event, "anchor", None) is not None:  # an alias has one, too
             self._refuse(
                 event, "an anchor or alias", "values written out", "Write the value again, without & and *."
             )
-        if event.tag is not None:
-            self._refuse(event, f"the tag {event.tag[:40]}", "values without tags", "Remove the tag.")
+        if tag is not None:
+            self._refuse(event, f"the tag {tag[:40]}", "values without tags", "Remove the tag.")
         if isinstance(event, yaml.ScalarEvent):
             return Scalar(path=path, line=line, column=column, text=event.value, plain=not event.style)
         if depth >= MAX_DEPTH:
@@ -268,7 +270,8 @@ class _Composer:
         if not isinstance(event, yaml.ScalarEvent):
             self._refuse(event, "a key that is not a word", "words as keys")
         name = event.value
-        path = f"{mapping.path}.{name}" if mapping.path else name
+        word = name if re.fullmatch("[\\w<-]{1,60}", name) else repr(name[:40])
+        path = f"{mapping.path}.{word}" if mapping.path else word
         key = self._node(event, path, depth)
         value = self._node(self._loader.get_event(), path, depth + 1)
         self.path = mapping.path
@@ -276,15 +279,18 @@ class _Composer:
         if name in mapping.keys:
             first = mapping.keys[name].line
             self._report.add(
-                key, f"a second {name}", "each key once", f"The first is in line {first}; keep one of them."
+                key, f"a second {word}", "each key once", f"The first is in line {first}; keep one of them."
             )
             return
         mapping.keys[name] = key
         mapping.entries[name] = value
 
-    def _refuse(self, event: yaml.Event, found: str, allowed: str, hint: str = "") -> None:
-        mark = event.start_mark
-        self._report.add(
-            Node(path=self.path, line=mark.line + 1, column=mark.column + 1), found, allowed, hint
-        )
-        raise _Refused
+    def _refuse(self, event: yaml.Event, found: str, allowed: str, hint: str = "") -> NoReturn:
+        line, column = _position(event)
+        self._report.add(Node(path=self.path, line=line, column=column), found, allowed, hint)
+        raise _RefusedError
+
+
+def _position(event: yaml.Event) -> tuple[int, int]:
+    mark = event.start_mark
+    return (mark.line + 1, mark.column + 1) if mark else (0, 0)
