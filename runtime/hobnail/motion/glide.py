@@ -1,0 +1,173 @@
+"""Moving a few numbers smoothly to a target that may change on the way; any unit.
+
+`Slew` keeps value and slope continuous (velocities: so accelerations are
+continuous), `Glide` value, slope and curvature (positions: so accelerations
+are continuous).  Both replan from where they are when the target changes, so
+no change of mind can make a step.  Time is an argument; no clock is read.
+
+The polynomials are the cubic and quintic Hermite forms that end at rest; the
+quintic from rest is the minimum-jerk profile of Flash & Hogan (1985).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+
+# Time in which a slope at its full rate is taken off when hardly any way is left.
+EASE_S = 0.1
+
+
+def minimum_jerk(u: float) -> float:
+    """10 u^3 - 15 u^4 + 6 u^5 for u in 0..1 (Flash & Hogan 1985)."""
+    return u * u * u * (10.0 + u * (6.0 * u - 15.0))
+
+
+SlewState = tuple[list[float], list[float], list[float], float, bool]
+
+
+class Slew:
+    """Several numbers that move together to a target by cubic pieces.
+
+    The lists are replaced, never changed in place, so that `state` is a cheap
+    snapshot which `restore` takes back.
+    """
+
+    __slots__ = ("moving", "remaining_s", "slope", "target", "value")
+
+    def __init__(self, value: Sequence[float]) -> None:
+        self.value = list(value)
+        self.target = list(value)
+        self.slope = [0.0] * len(self.value)
+        self.remaining_s = 0.0
+        self.moving = False
+
+    def aim(self, target: Sequence[float], rates: Sequence[float]) -> None:
+        """Set a new target; no component's slope will pass its rate (per s)."""
+        time = 0.0
+        for value, slope, goal, rate in zip(self.value, self.slope, target, rates, strict=True):
+            change = goal - value
+            # A cubic from rest peaks at 1.5 times its mean slope.  One that first has to
+            # turn round needs a longer time to stay under the same peak.
+            need = 1.5 * abs(change) / rate
+            if change * slope < 0.0:
+                need *= 1.4143
+            # An old slope beside a small change is taken off gently as well.
+            time = max(time, need, EASE_S * abs(slope) / rate)
+        self.target = list(target)
+        self.remaining_s = time
+        self.moving = time > 0.0 or any(self.slope)
+
+    def jump(self, index: int, value: float) -> None:
+        """Set one component at once, when nothing that moves depends on it."""
+        self.value = [*self.value[:index], value, *self.value[index + 1 :]]
+        self.slope = [*self.slope[:index], 0.0, *self.slope[index + 1 :]]
+
+    def advance(self, time_s: float) -> None:
+        """Move on by `time_s`."""
+        left = self.remaining_s
+        if time_s >= left:
+            self.value = self.target
+            self.slope = [0.0] * len(self.target)
+            self.remaining_s = 0.0
+            self.moving = False
+            return
+        s = time_s / left
+        r = 1.0 - s
+        keep = r * r * (1.0 + 2.0 * s)
+        carry = time_s * r * r
+        fall = -6.0 * s * r / left
+        hold = r * (1.0 - 3.0 * s)
+        value, slope = [], []
+        for x, v, goal in zip(self.value, self.slope, self.target, strict=True):
+            gap = x - goal
+            value.append(goal + gap * keep + v * carry)
+            slope.append(gap * fall + v * hold)
+        self.value, self.slope = value, slope
+        self.remaining_s = left - time_s
+
+    def state(self) -> SlewState:
+        """A snapshot for `restore`."""
+        return self.value, self.slope, self.target, self.remaining_s, self.moving
+
+    def restore(self, state: SlewState) -> None:
+        """Go back to a snapshot."""
+        self.value, self.slope, self.target, self.remaining_s, self.moving = state
+
+
+Motion = tuple[float, float, float]  # offset from the target, its slope, its curvature
+
+AT_REST: Motion = (0.0, 0.0, 0.0)
+
+
+def settle(offset: Motion, time_s: float, remaining_s: float) -> Motion:
+    """An offset (value, slope, curvature) after `time_s` of the quintic that brings it to
+    rest at zero in `remaining_s`.
+
+    Replanning from the result with the rest of the time follows the same
+    quintic, so calling it tick by tick is the whole curve.
+    """
+    if time_s >= remaining_s:
+        return AT_REST
+    e, v, a = offset
+    s = time_s / remaining_s
+    r = 1.0 - s
+    r2 = r * r
+    v *= remaining_s
+    a *= remaining_s * remaining_s
+    # Quintic Hermite basis that ends at rest, and its two derivatives.
+    value = r2 * r * (e * (1.0 + s * (3.0 + 6.0 * s)) + v * s * (1.0 + 3.0 * s) + 0.5 * a * s * s)
+    slope = r2 * (-30.0 * e * s * s + v * (1.0 + s * (2.0 - 15.0 * s)) + 0.5 * a * s * (2.0 - 5.0 * s))
+    curve = r * (
+        -60.0 * e * s * (1.0 - 2.0 * s) + v * s * (-36.0 + 60.0 * s) + a * (1.0 + s * (-8.0 + 10.0 * s))
+    )
+    return value, slope / remaining_s, curve / (remaining_s * remaining_s)
+
+
+GlideState = tuple[list[float], list[float], list[Motion], float, bool]
+
+
+class Glide:
+    """Several numbers that move to their targets by quintic pieces, each at its own rate."""
+
+    __slots__ = ("_offset", "_remaining_s", "moving", "rates", "target", "value")
+
+    def __init__(self, value: Sequence[float], rates: Sequence[float]) -> None:
+        self.value = list(value)
+        self.target = list(value)
+        self.rates = tuple(rates)
+        self._offset: list[Motion] = [AT_REST] * len(self.value)
+        self._remaining_s = 0.0
+        self.moving = False
+
+    def aim(self, target: Sequence[float], within_s: float | None = None) -> None:
+        """Set new targets: reached together, at the rates given, or just `within_s`."""
+        time = 0.0
+        offsets: list[Motion] = []
+        for value, goal, (_, slope, curve), rate in zip(
+            self.value, target, self._offset, self.rates, strict=True
+        ):
+            offsets.append((value - goal, slope, curve))
+            # Minimum jerk peaks at 1.875 times its mean slope.
+            time = max(time, 1.875 * abs(value - goal) / rate, 5.0 * EASE_S * abs(slope) / rate)
+        self.target = list(target)
+        self._offset = offsets
+        self._remaining_s = time if within_s is None else within_s
+        self.moving = any(offset != AT_REST for offset in offsets)
+
+    def advance(self, time_s: float) -> None:
+        """Move on by `time_s`."""
+        left = self._remaining_s
+        self._offset = [settle(offset, time_s, left) for offset in self._offset]
+        self.value = [goal + offset[0] for goal, offset in zip(self.target, self._offset, strict=True)]
+        self._remaining_s = left - time_s
+        if time_s >= left:
+            self.moving = False
+
+    def state(self) -> GlideState:
+        """A snapshot for `restore`."""
+        return self.value, self.target, self._offset, self._remaining_s, self.moving
+
+    def restore(self, state: GlideState) -> None:
+        """Go back to a snapshot."""
+        self.value, self.target, self._offset, self._remaining_s, self.moving = state

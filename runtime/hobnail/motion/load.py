@@ -1,0 +1,60 @@
+"""Feed-forward for what bends and rolls: joint angles (rad) that put a loaded, round foot
+where a rigid, pointed one would be.
+
+Sag: a hobby servo holds with a stiffness k; a torque turns its shaft by
+torque/k.  Commanding the opposite in advance removes it (virtual work: the
+ground's force f on the foot makes the torque f dz/dq on each joint).
+Rolling: a foot of radius r rolls as its shank turns, and its centre moves by r
+times the angle; the leg is sent there.
+
+The load is what the schedule says each foot should carry, not a measurement.
+"""
+
+from __future__ import annotations
+
+import math
+
+from hobnail.motion.leg import LegKinematics
+from hobnail.robot import Leg, Vec3
+
+
+class LegCorrection:
+    """Corrections of one leg about its neutral angles."""
+
+    __slots__ = ("_give", "_lower_m", "_neutral", "_radius_m", "_upper_m", "active")
+
+    def __init__(self, leg: Leg, kinematics: LegKinematics, neutral_rad: Vec3) -> None:
+        self._upper_m = kinematics.upper_m
+        self._lower_m = kinematics.lower_m
+        self._radius_m = leg.foot_radius_m
+        self._neutral = (neutral_rad[0], neutral_rad[1] + neutral_rad[2])
+        stiffness = [joint.servo.stiffness_nm_rad for joint in leg.joints]
+        self._give = tuple(1.0 / k if k else 0.0 for k in stiffness)
+        self.active = self._radius_m > 0.0 or any(self._give)
+
+    def apply(self, roll: float, hip: float, knee: float, y: float, z: float, force_n: float) -> Vec3:
+        """Angles to command for the geometric angles (rad), the foot's y and z relative to
+        the hip (m) and the upward force of the ground on it (N)."""
+        shank = hip + knee
+        sin_shank, cos_shank = math.sin(shank), math.cos(shank)
+        sin_hip = math.sin(hip)
+        cos_roll = math.cos(roll)
+        shank_x, shank_z = -self._lower_m * sin_shank, -self._lower_m * cos_shank
+        foot_x = shank_x - self._upper_m * sin_hip
+        give = self._give
+        # Sag: minus f/k dz/dq.
+        down = force_n * cos_roll
+        roll_by = -force_n * y * give[0]
+        hip_by = down * foot_x * give[1]
+        knee_by = down * shank_x * give[2]
+        radius = self._radius_m
+        if radius:
+            # Rolling about the y axis moves the centre along x, about the x axis along -y.
+            forward = radius * (shank - self._neutral[1])
+            folded = self._upper_m * self._lower_m * math.sin(knee)
+            if abs(folded) > 1e-6:
+                # Knee and hip that move the foot along x alone, in the plane of the leg.
+                hip_by += forward * shank_x / folded
+                knee_by -= forward * foot_x / folded
+            roll_by += radius * (roll - self._neutral[0]) / z
+        return roll + roll_by, hip + hip_by, knee + knee_by

@@ -1,0 +1,194 @@
+"""How far and how fast legs can step: reach around the neutral stance, the shortest
+cycle that the servos can follow, and commands scaled to fit; m, s, rad.
+
+Worked out with arrays once a gait is chosen; in the tick only looked up.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hobnail.motion.foot_path import FootPath
+from hobnail.motion.leg import LegKinematics
+from hobnail.motion.planar import Twist, point_speed
+from hobnail.robot import Envelope, Gait, Robot, Span, Vec2, Vec3
+
+DIRECTIONS = 16  # in which reach is tried
+GRID = 5  # foot velocities an axis, over the envelope
+CYCLES = 24  # cycle times tried
+SAMPLES = 24  # points along a swing
+# The part of the allowed joint speed that the automatic cycle plans with: the rest is
+# for arcs, changes of command and the corrections for load.
+SPEED_SHARE = 0.9
+
+Array = NDArray[np.float64]
+
+
+def reach_radius(
+    kinematics: LegKinematics, limits_rad: Sequence[Span], neutral_m: Vec3, lift_m: float
+) -> float:
+    """Radius (m) of the largest disc about the neutral foot (relative to the hip) that
+    the leg reaches within its joint limits, on the ground and at clearance."""
+    bearings = np.linspace(0.0, 2.0 * math.pi, DIRECTIONS, endpoint=False)
+    longest = kinematics.upper_m + kinematics.lower_m
+    radii = np.linspace(0.0, longest, 128)[:, None]
+    ok = np.ones(len(radii), dtype=bool)
+    for lift in (0.0, lift_m):
+        x = neutral_m[0] + radii * np.cos(bearings)
+        y = neutral_m[1] + radii * np.sin(bearings)
+        ok &= within_limits(kinematics, limits_rad, x, y, np.full_like(x, neutral_m[2] + lift)).all(axis=1)
+    beyond = np.flatnonzero(~ok)
+    return float(radii[max(int(beyond[0]) - 1, 0), 0] if len(beyond) else longest)
+
+
+def within_limits(
+    kinematics: LegKinematics, limits_rad: Sequence[Span], x: Array, y: Array, z: Array
+) -> NDArray[np.bool_]:
+    """Which of the points (relative to the hip, m) a leg reaches within its joint limits."""
+    with np.errstate(invalid="ignore"):
+        angles = kinematics.angles(x, y, z, xp=np)
+        ok = np.ones(np.shape(angles[2]), dtype=bool)
+        for angle, (low, high) in zip(angles, limits_rad, strict=True):
+            ok &= (angle >= low) & (angle <= high)  # nan compares false
+    return ok
+
+
+def room_between_feet(feet: Sequence[Vec2], radii_m: Sequence[float]) -> list[float]:
+    """Excursion (m) that each foot may make without meeting a neighbour that does likewise."""
+    room = []
+    for i, (x, y) in enumerate(feet):
+        nearest = min(
+            math.hypot(x - other[0], y - other[1]) - radii_m[i] - radii_m[j]
+            for j, other in enumerate(feet)
+            if j != i
+        )
+        room.append(max(0.5 * nearest, 0.0))
+    return room
+
+
+class CycleTable:
+    """The shortest cycle at which every joint can follow, by foot velocity.
+
+    Quick, small steps tip a robot least (common practice); what bounds them is
+    the lift of the foot, and at speed the swing forward.  For each leg a grid
+    over the foot's velocity holds the shortest cycle within the gait's range
+    whose straight step keeps all three joints within their speed; between grid
+    points it is interpolated.
+    """
+
+    __slots__ = ("_peaks", "_tables", "range_s")
+
+    def __init__(
+        self,
+        gait: Gait,
+        legs: Sequence[LegKinematics],
+        neutrals_m: Sequence[Vec3],
+        speeds_rad_s: Sequence[Vec3],
+        peaks_m_s: Sequence[Vec2],
+    ) -> None:
+        """`neutrals_m` are relative to the hips; `speeds_rad_s` is what each joint may do;
+        `peaks_m_s` the greatest foot velocity along x and y that commands can ask for."""
+        self.range_s = gait.cycle_range_s
+        self._peaks = [(max(x, 1e-6), max(y, 1e-6)) for x, y in peaks_m_s]
+        path = FootPath(gait.swing)
+        u = np.linspace(0.0, 1.0, SAMPLES)
+        shape = np.array([path.at(float(t)) for t in u])
+        cycles = np.geomspace(*gait.cycle_range_s, CYCLES)
+        axis = np.linspace(-1.0, 1.0, GRID)
+        self._tables: list[list[list[float]]] = []
+        for leg, neutral, speeds, (peak_x, peak_y) in zip(
+            legs, neutrals_m, speeds_rad_s, self._peaks, strict=True
+        ):
+            vx = (peak_x * axis)[:, None, None, None]
+            vy = (peak_y * axis)[None, :, None, None]
+            cycle = cycles[None, None, :, None]
+            # Over the ground the foot goes one stride; the body goes on under it.
+            ahead = cycle * (shape[:, 0] - 0.5 * gait.duty - u * (1.0 - gait.duty))
+            x = neutral[0] + vx * ahead
+            y = neutral[1] + vy * ahead
+            x, y = np.broadcast_arrays(x, y)
+            z = np.broadcast_to(neutral[2] + gait.lift_m * shape[:, 1], x.shape)
+            with np.errstate(invalid="ignore"):
+                angles = leg.angles(x, y, z, xp=np)
+            step_s = (1.0 - gait.duty) * cycles / (SAMPLES - 1)
+            load = np.zeros((GRID, GRID, CYCLES))
+            for angle, speed in zip(angles, speeds, strict=True):
+                steps = np.abs(np.diff(angle, axis=-1)).max(axis=-1)
+                load = np.maximum(load, steps / (step_s * speed * SPEED_SHARE))
+            self._tables.append(_shortest(np.where(np.isnan(load), np.inf, load), cycles).tolist())
+
+    def cycle_s(self, velocities_m_s: Sequence[Vec2], slow: float = 1.0) -> float:
+        """Cycle time (s) for each leg's foot velocity over the ground (m/s); `slow` >= 1
+        is by how much the servos are slower than the table assumed."""
+        need = 0.0
+        for table, (peak_x, peak_y), (vx, vy) in zip(self._tables, self._peaks, velocities_m_s, strict=True):
+            i, s = _place(vx / peak_x)
+            j, t = _place(vy / peak_y)
+            near = table[i][j] + t * (table[i][j + 1] - table[i][j])
+            far = table[i + 1][j] + t * (table[i + 1][j + 1] - table[i + 1][j])
+            need = max(need, near + s * (far - near))
+        return min(max(need * slow, self.range_s[0]), self.range_s[1])
+
+
+def _place(share: float) -> tuple[int, float]:
+    """Grid cell and place in it (0..1) of a value in -1..1, held to the grid's ends."""
+    at = (min(max(share, -1.0), 1.0) + 1.0) * 0.5 * (GRID - 1)
+    cell = min(int(at), GRID - 2)
+    return cell, at - cell
+
+
+def _shortest(load: Array, cycles: Array) -> Array:
+    """Shortest cycle with load <= 1, between the tried ones by interpolation; where none
+    will do, the one that comes nearest to it."""
+    fits = load <= 1.0
+    first = np.argmax(fits, axis=-1)
+    found = np.take(cycles, first)
+    before = np.maximum(first - 1, 0)
+    high = np.take_along_axis(load, before[..., None], axis=-1)[..., 0]
+    low = np.take_along_axis(load, first[..., None], axis=-1)[..., 0]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        back = np.where(high > 1.0, (1.0 - low) / (high - low), 0.0)
+    back = np.where(np.isfinite(back), back, 0.0)
+    found = found - back * (found - np.take(cycles, before))
+    return np.where(fits.any(axis=-1), found, np.take(cycles, np.argmin(load, axis=-1)))
+
+
+def fit_envelope(twist: Twist, envelope: Envelope) -> Twist:
+    """A twist at the body origin, scaled as a whole into the certified ellipsoid."""
+    vx, vy, yaw_rate = twist
+    size = math.sqrt(
+        (vx / envelope.forward_m_s) ** 2
+        + (vy / envelope.sideways_m_s) ** 2
+        + (yaw_rate / envelope.turn_rad_s) ** 2
+    )
+    return twist if size <= 1.0 else (vx / size, vy / size, yaw_rate / size)
+
+
+def fit_stride(twist: Twist, stance_s: float, feet: Sequence[Vec2], radii_m: Sequence[float]) -> Twist:
+    """A twist scaled as a whole so that no foot's stance sweeps more than its reach allows.
+
+    In a stance of `stance_s` a foot sweeps its speed times that, half of it on
+    either side of neutral.
+    """
+    share = 1.0
+    for (x, y), radius in zip(feet, radii_m, strict=True):
+        sweep = 0.5 * stance_s * point_speed(twist, x, y)
+        if sweep > radius:
+            share = min(share, radius / sweep)
+    return twist if share == 1.0 else (twist[0] * share, twist[1] * share, twist[2] * share)
+
+
+def peak_foot_velocities(robot: Robot, feet: Sequence[Vec2]) -> list[Vec2]:
+    """Greatest foot velocity (m/s) along x and along y over the envelope, leg by leg."""
+    envelope = robot.envelope
+    return [
+        (
+            math.hypot(envelope.forward_m_s, envelope.turn_rad_s * y),
+            math.hypot(envelope.sideways_m_s, envelope.turn_rad_s * x),
+        )
+        for x, y in feet
+    ]
