@@ -1,0 +1,131 @@
+"""The rehearsal's servo driver: pulses in (us), as a PWM chip sends them, into the physics; lock-step.
+
+Keeps the contract of `hobnail_drivers.contract`, so that whatever drives the real
+robot drives this one.  Pulses are rounded to the chip's counts at its true
+frame rate and act from the next frame on; the servo at the end of the wire is
+the real one, so a horn set wrong turns it to a wrong angle.
+`advance` is the only clock.  Not modelled: when within its frame a pulse comes.
+"""
+
+from __future__ import annotations
+
+import errno
+import math
+from collections.abc import Sequence
+
+import numpy as np
+
+from hobnail.robot import Robot
+from hobnail.servo import JointMap
+from hobnail.workshop.rehearse.model import STEP_S
+from hobnail.workshop.rehearse.plant import Plant
+from hobnail_drivers.contract import BoardSettings, Driver, Health, Output, Pulses
+from hobnail_drivers.errors import BusError
+
+COUNTS = 4096  # of a frame
+PRESCALE_RANGE = (3, 255)
+
+
+def true_frame_hz(frame_hz: float, oscillator_hz: float) -> float:
+    """The frame rate that the chip really gives (PCA9685 data sheet, sec. 7.3.5)."""
+    low, high = PRESCALE_RANGE
+    prescale = min(max(round(oscillator_hz / (COUNTS * frame_hz)) - 1, low), high)
+    return oscillator_hz / (COUNTS * (prescale + 1))
+
+
+class RehearsalDriver(Driver):
+    """Drives the servos of a `Plant`.  `robot` is the robot as configured."""
+
+    def __init__(self, robot: Robot, plant: Plant) -> None:
+        boards = [
+            BoardSettings(
+                name=board.name,
+                bus=board.bus,
+                address=board.address,
+                frame_hz=board.frame_hz,
+                oscillator_hz=board.oscillator_hz,
+            )
+            for board in robot.boards
+        ]
+        outputs = [
+            Output(
+                board=joint.board,
+                channel=joint.channel,
+                min_us=joint.pulse_limits_us[0],
+                max_us=joint.pulse_limits_us[1],
+            )
+            for joint in robot.joints
+        ]
+        super().__init__(boards, outputs)
+        self.plant = plant
+        self.lost_frames = 0
+        self._frame_hz = {b.name: true_frame_hz(b.frame_hz, b.oscillator_hz) for b in boards}
+        self._count_us = [1e6 / (self._frame_hz[o.board] * COUNTS) for o in outputs]
+        self._maps = [JointMap(joint) for joint in plant.robot.joints]
+        self._of_board = {
+            b.name: [i for i, output in enumerate(outputs) if output.board == b.name] for b in boards
+        }
+        self._luck = np.random.default_rng((plant.disturbances.seed, 4))
+        self._targets: list[float | None] = [None] * len(outputs)
+        self._waiting: dict[str, list[float | None]] = {}  # by board: counts for its next frame
+
+    def targets_rad(self, pulses_us: Pulses) -> list[float | None]:
+        """The joint angles that the real servos understand these pulses as."""
+        targets: list[float | None] = []
+        for pulse, count_us, joint in zip(pulses_us, self._count_us, self._maps, strict=True):
+            targets.append(
+                None if pulse is None else joint.angle_rad(round(pulse / count_us) * count_us)
+            )
+        return targets
+
+    def advance(self, dt_s: float) -> None:
+        """Let physics run on by `dt_s`, to the nearest physics step.
+
+        Raises HobnailError when the motion becomes unstable.
+        """
+        plant = self.plant
+        end = round((plant.time_s + dt_s) / STEP_S)
+        while self._waiting:
+            starts = {
+                name: math.ceil(math.floor(plant.time_s * hz + 1.0) / hz / STEP_S - 1e-9)
+                for name, hz in self._frame_hz.items()
+                if name in self._waiting
+            }
+            name = min(starts, key=lambda board: starts[board])
+            if starts[name] > end:
+                break
+            plant.advance(starts[name] - plant.steps)
+            values = self._waiting.pop(name)
+            for index, value in zip(self._of_board[name], values, strict=True):
+                self._targets[index] = value
+            plant.command(self._targets)
+        plant.advance(end - plant.steps)
+
+    def _open(self) -> None:
+        self._release()
+
+    def _write(self, pulses_us: Pulses) -> None:
+        share = self.plant.disturbances.lost_frames
+        if share and self._luck.random() < share:
+            self.lost_frames += 1
+            board = self.boards[0].name
+            raise BusError(errno.EREMOTEIO, "no acknowledge: a frame was lost on purpose", board)
+        targets = self.targets_rad(pulses_us)
+        for name, indices in self._of_board.items():
+            self._waiting[name] = [targets[index] for index in indices]
+
+    def _release(self) -> None:
+        self._waiting.clear()
+        self._targets = [None] * len(self.outputs)
+        self.plant.command(self._targets)
+
+    def _health(self) -> Health:
+        return Health(settings_kept=True, frame_hz=dict(self._frame_hz))
+
+    def _close(self) -> None:
+        self._release()
+
+
+def pulses_at(robot: Robot, joints_rad: Sequence[float]) -> list[float]:
+    """The pulses for these joint angles, as the robot is configured."""
+    return [JointMap(joint).pulse_us(angle) for joint, angle in zip(robot.joints, joints_rad, strict=True)]
