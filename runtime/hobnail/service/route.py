@@ -15,10 +15,12 @@ from typing import TYPE_CHECKING
 from hobnail.errors import CommandError
 from hobnail.motion.planar import compose, exp_twist
 from hobnail.robot import Robot, Vec3
-from hobnail.service.route_steps import Move, Pose, Speed, Step, Wait, misfits
+from hobnail.service.route_steps import ChangeGait, Move, Pose, Speed, Step, Wait, misfits
 
 if TYPE_CHECKING:
     from hobnail.controller import Tick
+
+STILL: Vec3 = (0.0, 0.0, 0.0)
 
 POSITION_TOLERANCE_M = 0.001  # half of what is promised (2 mm), so that the rest may drift
 HEADING_TOLERANCE_RAD = math.radians(0.1)  # half of 0.2 degrees
@@ -46,11 +48,13 @@ class Action:
 class RouteRunner:
     """Walks a list of steps; call `update` once a tick with the tick just done.
 
-    Each step's goal hangs on the goal of the step before it, not on where the
-    robot came to stand, so errors do not add up.  Along a step a reference
-    runs ahead with the envelope's acceleration; the robot gets the
-    reference's velocity and a share of its distance from it.  A step that does not end
-    in time ends the route: `failure` then says which step and why.
+    Each step ends standing, and its goal hangs on the goal of the step before,
+    not on where the robot came to stand, so errors do not add up.  Along a
+    step a reference runs ahead with the envelope's acceleration; the robot gets
+    the reference's velocity and takes back a share of its distance from it.
+    Reckoned is the walk, from `Tick.velocity`: sway and posture move the body over its
+    feet, but lead it nowhere.  A step that does not end in time ends the route;
+    `failure` then says which step and why.
     """
 
     def __init__(self, steps: Sequence[Step], robot: Robot) -> None:
@@ -67,45 +71,40 @@ class RouteRunner:
         self.steps = tuple(steps)
         self.failure = ""
         self.index = 0
+        self.twist: Vec3 = STILL  # last asked for
         self._robot = robot
         self._expected_s = expected_seconds(self.steps, robot)
         self._elapsed_s = 0.0
-        self._pose: Vec3 | None = None  # odometry, yaw unwrapped
-        self._goal: Vec3 = (0.0, 0.0, 0.0)  # of the last step begun: where the next one starts
         self._speed = DEFAULT_SPEED
+        self._place: Vec3 = STILL  # reckoned from the start of the route; yaw is not wrapped
+        self._pace: Vec3 = STILL
+        self._goal: Vec3 = STILL
+        self._standing = False  # standing came before the first step
         self._begin()
 
     @property
     def done(self) -> bool:
         """Nothing more will be asked for: the route is walked, or failed."""
-        return bool(self.failure) or self.index > len(self.steps)
+        return bool(self.failure) or self.index == len(self.steps)
 
     def update(self, tick: Tick, dt_s: float) -> Action:
         """The action for the next tick; standing still once done."""
         if self.done:
             return Action()
-        if self._pose is None:
-            self._pose = self._goal = self._start = tick.pose
-        x, y, yaw = tick.pose
-        turned = math.remainder(yaw - self._pose[2], math.tau)
-        self._pose = (x, y, self._pose[2] + turned)
+        self._reckon(tick, dt_s)
         self._elapsed_s += dt_s
         self._step_s += dt_s
-        if self.index == len(self.steps):
-            return self._settle(tick)
-        step = self.steps[self.index]
-        if isinstance(step, Move):
-            return self._move(step, tick, dt_s)
-        if isinstance(step, Wait):
-            return self._wait(step, tick, dt_s)
-        if isinstance(step, Pose):
-            return self._take_posture(step, tick)
-        if isinstance(step, Speed):
-            self._speed = step.share
-            self._next()
-            return Action()
-        self._next()
-        return Action(gait=step.name)
+        timeout_s = TIMEOUT_S + TIMEOUT_FACTOR * self._expected_s[self.index]
+        if self._step_s > timeout_s:
+            self._fail(timeout_s, tick)
+            action = Action()
+        elif not self._standing:
+            self._standing = tick.settled
+            action = Action()
+        else:
+            action = self._do(self.steps[self.index], tick, dt_s)
+        self.twist = action.twist
+        return action
 
     def progress(self) -> dict[str, object]:
         """Where the route is: `step` of `steps` (from 1), `description`, `done_share` 0..1,
@@ -114,131 +113,121 @@ class RouteRunner:
         walked_s = sum(self._expected_s[: self.index])
         k = min(self.index, len(self.steps) - 1)
         if self.index < len(self.steps):
-            walked_s += self._expected_s[k] * self._share
-            text = self.steps[k].describe()
-        else:
-            text = "route walked" if self.done else "coming to a stand"
+            walked_s += self._expected_s[k] * min(self._share, 1.0)
         return {
             "step": k + 1,
             "steps": len(self.steps),
-            "description": text,
-            "done_share": min(1.0, walked_s / total_s) if total_s else 1.0,
+            "description": self.steps[k].describe(),
+            "done_share": walked_s / total_s if total_s else float(self.done),
             "elapsed_s": self._elapsed_s,
-            "remaining_s": max(0.0, total_s - walked_s),
+            "remaining_s": total_s - walked_s,
             "done": self.done,
             "failure": self.failure,
         }
 
     def _begin(self) -> None:
-        """Forget the step before; the goal reached becomes the start of the next."""
+        """Forget the step before; its goal is the start of the next."""
         self._start = self._goal
         self._step_s = 0.0
         self._share = 0.0
         self._rate = 0.0
+        self._arrived = False
         self._asked = False
 
     def _next(self) -> None:
         self.index += 1
         self._begin()
 
+    def _reckon(self, tick: Tick, dt_s: float) -> None:
+        """Add the walk of one tick: its mean velocity over the time by which the walk went on."""
+        if tick.slowdown > 0.0:
+            vx, vy, yaw_rate = scaled(tick.velocity, 1.0 / tick.slowdown)
+            ox, oy, o_rate = self._pace
+            mean = (0.5 * (vx + ox), 0.5 * (vy + oy), 0.5 * (yaw_rate + o_rate))
+            self._place = moved(self._place, scaled(mean, tick.slowdown * dt_s))
+            self._pace = (vx, vy, yaw_rate)
+
+    def _do(self, step: Step, tick: Tick, dt_s: float) -> Action:
+        match step:
+            case Move():
+                return self._move(step, tick, dt_s)
+            case Wait():
+                self._share = self._step_s / max(step.duration_s, dt_s)
+                if self._share >= 1.0:
+                    self._next()
+                return Action()
+            case Pose():
+                self._share = min(self._step_s / max(self._expected_s[self.index], dt_s), 0.99)
+                if not self._asked:
+                    self._asked = True
+                    return Action(posture=step.changes())
+                if tick.settled:
+                    self._next()
+                return Action()
+            case Speed():
+                self._speed = step.share
+                self._next()
+                return Action()
+            case ChangeGait():
+                self._next()
+                return Action(gait=step.name)
+
     def _move(self, step: Move, tick: Tick, dt_s: float) -> Action:
-        rate_limit, acceleration = pace(step.twist, self._speed, self._robot)
         self._goal = moved(self._start, step.twist)
-        reference = moved(self._start, scaled(step.twist, self._share))
-        ahead = self._offset(reference)
-        lag = max(math.hypot(ahead[0], ahead[1]) / LAG_M, abs(ahead[2]) / LAG_RAD)
-        if self._share >= 1.0 and self._arrived(ahead, tick.velocity):
-            self._next()
+        if self._arrived:
+            if not tick.settled:
+                return Action()
+            if self._is_near(self._offset(self._goal), 1.5):
+                self._next()
+                return Action()
+            self._arrived = False  # led away while the feet were set down: once more
+        ahead = self._offset(moved(self._start, scaled(step.twist, self._share)))
+        if self._share == 1.0 and self._is_near(ahead, 1.0) and _is_slow(tick.velocity):
+            self._arrived = True
             return Action()
-        timeout_s = TIMEOUT_S + TIMEOUT_FACTOR * self._expected_s[self.index]
-        if self._step_s > timeout_s:
-            return self._fail(
-                timeout_s,
-                f"still {1000 * math.hypot(*self._offset(self._goal)[:2]):.0f} mm and "
-                f"{math.degrees(abs(self._offset(self._goal)[2])):.1f} deg from its end",
-            )
-        # The reference keeps to the robot's own time: it slows as the robot is slowed, and
-        # waits when the robot does not follow.
-        left = 1.0 - self._share
-        braking = math.sqrt(2.0 * acceleration * left)
+        rate_limit, acceleration = pace(step.twist, self._speed, self._robot)
+        braking = math.sqrt(2.0 * acceleration * (1.0 - self._share))
         self._rate = min(self._rate + acceleration * dt_s, rate_limit, braking)
+        # The reference keeps to the robot's own time: it slows as the robot is slowed, and
+        # waits where the robot does not follow.
+        lag = max(math.hypot(ahead[0], ahead[1]) / LAG_M, abs(ahead[2]) / LAG_RAD)
         flow = self._rate * max(0.0, 1.0 - lag)
-        self._share = min(1.0, self._share + flow * tick.slowdown * dt_s)
+        self._share += flow * tick.slowdown * dt_s
         if 1.0 - self._share < acceleration * dt_s * dt_s:
             self._share = 1.0
-        forward = rotated(scaled(step.twist, flow), ahead[2])
+        lead = rotated(scaled(step.twist, flow), ahead[2])
         wanted = (
-            forward[0] + FEEDBACK_PER_S * ahead[0],
-            forward[1] + FEEDBACK_PER_S * ahead[1],
-            forward[2] + FEEDBACK_PER_S * ahead[2],
+            lead[0] + FEEDBACK_PER_S * ahead[0],
+            lead[1] + FEEDBACK_PER_S * ahead[1],
+            lead[2] + FEEDBACK_PER_S * ahead[2],
         )
         return Action(twist=scaled(wanted, min(1.0, self._speed / max(load(wanted, self._robot), 1e-9))))
 
-    def _wait(self, step: Wait, tick: Tick, dt_s: float) -> Action:
-        if not self._asked:
-            # Standing comes first; only then the waiting is counted.
-            if tick.settled and self._step_s > dt_s:
-                self._asked = True
-                self._step_s = 0.0
-            elif self._step_s > TIMEOUT_S:
-                return self._fail(TIMEOUT_S, "the feet do not come to a stand")
-            return Action()
-        self._share = min(1.0, self._step_s / step.duration_s) if step.duration_s else 1.0
-        if self._step_s >= step.duration_s - 0.5 * dt_s:
-            self._next()
-        return Action()
-
-    def _take_posture(self, step: Pose, tick: Tick) -> Action:
-        if not self._asked:
-            self._asked = True
-            self._ticks_since = 0
-            return Action(posture=step.changes())
-        # The tick that comes with this call may still be the one from before the request.
-        self._ticks_since += 1
-        timeout_s = TIMEOUT_S + TIMEOUT_FACTOR * self._expected_s[self.index]
-        self._share = min(0.99, self._step_s / max(self._expected_s[self.index], 1e-3))
-        if tick.settled and self._ticks_since > 1:
-            self._next()
-        elif self._step_s > timeout_s:
-            return self._fail(timeout_s, "the posture is not reached")
-        return Action()
-
-    def _settle(self, tick: Tick) -> Action:
-        """After the last step: all feet down, and still where the route ends."""
-        if tick.settled:
-            x, y, yaw = self._offset(self._goal)
-            if math.hypot(x, y) > 2 * POSITION_TOLERANCE_M or abs(yaw) > 2 * HEADING_TOLERANCE_RAD:
-                self.failure = (
-                    f"the robot stands {1000 * math.hypot(x, y):.1f} mm and {math.degrees(abs(yaw)):.2f} deg "
-                    "from the end of the route: it moved after its last step; check the log"
-                )
-            else:
-                self._next()
-        elif self._step_s > TIMEOUT_S:
-            return self._fail(TIMEOUT_S, "the feet do not come to a stand")
-        return Action()
-
-    def _fail(self, timeout_s: float, why: str) -> Action:
-        k = min(self.index, len(self.steps) - 1)
-        self.failure = (
-            f"step {k + 1} of {len(self.steps)} ({self.steps[k].describe()}) did not end within "
-            f"{timeout_s:.0f} s: {why}; look at `hobnail state` for what slows the robot"
-        )
-        return Action()
-
     def _offset(self, target: Vec3) -> Vec3:
         """How far `target` lies from the robot: x, y in the robot's frame, yaw."""
-        assert self._pose is not None
-        x, y, yaw = self._pose
+        x, y, yaw = self._place
         return rotated((target[0] - x, target[1] - y, target[2] - yaw), -yaw)
 
-    def _arrived(self, ahead: Vec3, velocity: Vec3) -> bool:
-        return (
-            math.hypot(ahead[0], ahead[1]) <= POSITION_TOLERANCE_M
-            and abs(ahead[2]) <= HEADING_TOLERANCE_RAD
-            and math.hypot(velocity[0], velocity[1]) <= STILL_M_S
-            and abs(velocity[2]) <= STILL_RAD_S
+    def _is_near(self, offset: Vec3, tolerances: float) -> bool:
+        near = math.hypot(offset[0], offset[1]) <= tolerances * POSITION_TOLERANCE_M
+        return near and abs(offset[2]) <= tolerances * HEADING_TOLERANCE_RAD
+
+    def _fail(self, timeout_s: float, tick: Tick) -> None:
+        step = self.steps[self.index]
+        why = "" if tick.settled else "; the robot does not come to a stand"
+        if isinstance(step, Move) and not self._arrived:
+            x, y, yaw = self._offset(self._goal)
+            why = f": {1000 * math.hypot(x, y):.0f} mm and {math.degrees(abs(yaw)):.1f} deg are left"
+            if tick.slowdown < 1.0:
+                why += f", and joints at their speed limit slow the robot to {tick.slowdown:.0%}"
+        self.failure = (
+            f"step {self.index + 1} of {len(self.steps)} ({step.describe()}) did not end within "
+            f"{timeout_s:.0f} s{why}; look at `hobnail watch` while it walks"
         )
+
+
+def _is_slow(velocity: Vec3) -> bool:
+    return math.hypot(velocity[0], velocity[1]) <= STILL_M_S and abs(velocity[2]) <= STILL_RAD_S
 
 
 def load(twist: Vec3, robot: Robot) -> float:
