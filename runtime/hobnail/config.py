@@ -7,15 +7,18 @@ their bounds are in `hobnail.config_tables`; nothing here computes a motion.
 from __future__ import annotations
 
 import hashlib
+import os
 from dataclasses import replace
 from pathlib import Path
 
+from hobnail.calibration import apply_calibration, calibration_path, interpret
 from hobnail.config_build import build_robot
 from hobnail.config_checks import check_robot
-from hobnail.config_fields import Group
+from hobnail.config_fields import Group, Section
+from hobnail.config_reach import check_balanced_reach, check_reach
 from hobnail.config_tables import ROBOT
 from hobnail.config_yaml import Listing, Mapping, Report, parse, read_file
-from hobnail.errors import ConfigError
+from hobnail.errors import CalibrationError, ConfigError
 from hobnail.robot import Robot
 
 
@@ -28,20 +31,39 @@ def load_robot(path: str | Path) -> Robot:
     path = Path(path)
     report = Report(str(path))
     data = read_file(path, report)
-    root = parse(data, report) if data is not None else None
-    robot = _read(root, report) if root is not None else None
-    if robot is None or data is None:
-        raise ConfigError(report.problems())
-    return replace(robot, source=str(path), digest=hashlib.sha256(data).hexdigest())
+    section = _read(data, report) if data is not None else None
+    robot = build_robot(section) if section is not None and not report.problems() else None
+
+    beside = calibration_path(path)
+    beside_report = Report(str(beside))
+    measured = read_file(beside, beside_report) if os.path.lexists(beside) else None
+    calibration = interpret(measured, robot, beside_report) if measured is not None else None
+    if robot is not None and calibration is not None:
+        robot = apply_calibration(robot, calibration)
+
+    if section is not None and robot is not None and not beside_report.problems():
+        check_balanced_reach(section, robot, report)
+    if problems := report.problems():
+        raise ConfigError(problems + beside_report.problems())
+    if problems := beside_report.problems():
+        raise CalibrationError(problems)
+    assert robot is not None
+    assert data is not None
+    digest = hashlib.sha256(data + (measured or b"")).hexdigest()
+    return replace(robot, source=str(path), digest=digest)
 
 
-def _read(root: Mapping, report: Report) -> Robot | None:
-    """The robot in SI units; None, with the problems told, when there are any."""
+def _read(data: bytes, report: Report) -> Section | None:
+    """The sections of the file, checked; there may be problems."""
+    root = parse(data, report)
+    if root is None:
+        return None
     _lay_over_defaults(root)
     section = Group(ROBOT).read(root, report)
     if section is not None:
         check_robot(section, report)
-    return None if section is None or report.problems() else build_robot(section)
+        check_reach(section, report)
+    return section
 
 
 def _lay_over_defaults(root: Mapping) -> None:

@@ -86,7 +86,7 @@ def _check_addresses(boards: Sequence[Section], supply: Section | None, report: 
 
 
 def check_pulse_map(section: Section, report: Report) -> None:
-    """A pulse map must rise from point to point, and its joint's limits must be within reach of it."""
+    """A pulse map must rise from point to point; one that does not counts as missing from here on."""
     points = section.values.get("pulse_map_deg_us")
     listing = section.at("pulse_map_deg_us")
     if points is None or not isinstance(listing, Listing):
@@ -97,6 +97,7 @@ def check_pulse_map(section: Section, report: Report) -> None:
             found = f"{angles} from {pulse0:g} to {pulse1:g} us"
             hint = "For a servo that turns the other way set direction: -1 at its joint."
             report.add(node, found, "points that rise in angle and in pulse", hint)
+            section.values.pop("pulse_map_deg_us", None)
 
 
 def _check_hips(legs: Sequence[Section], report: Report) -> None:

@@ -385,6 +385,27 @@ class Group:
         return schema
 
 
+@dataclass(frozen=True, slots=True)
+class Named:
+    """A mapping from names to sections of one kind; `what` says whose names they are."""
+
+    item: Group
+    what: str
+
+    def read(self, node: Node, report: Report) -> dict[str, Section] | None:
+        if not isinstance(node, Mapping):
+            report.add(node, shown(node), self.allowed())
+            return None
+        sections = {name: self.item.read(entry, report) for name, entry in node.entries.items()}
+        return {name: section for name, section in sections.items() if section is not None}
+
+    def allowed(self) -> str:
+        return f"a mapping from names of {self.what} to what was measured there"
+
+    def schema(self) -> dict[str, Any]:
+        return {"type": "object", "additionalProperties": self.item.schema()}
+
+
 def nearest(word: str, known: MappingType[str, Any] | list[str]) -> str:
     """`Did you mean upper_mm?`, or nothing."""
     from difflib import get_close_matches  # only needed for bad files

@@ -1,0 +1,320 @@
+"""The calibration file: what was measured on the bench, kept beside the configuration with its history.
+
+`juniper.calibration.yaml` goes before `juniper.yaml`.  Four things are kept
+apart: trim (how the horn sits), direction, pulse map (what pulse gives what
+angle) and hard pulse limits; and for a board its true clock.  SI units inside,
+degrees and MHz in the file, to 0.0001 degree and 0.01 us.  Nothing here
+measures: that is for `hobnail.workshop`.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import json
+import math
+import os
+import tempfile
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, fields, replace
+from pathlib import Path
+from typing import Any
+
+from hobnail.config_checks import FRAME_SHARE, check_pulse_map
+from hobnail.config_fields import Field, Group, Integer, Named, Section, Several, Text, nearest
+from hobnail.config_tables import DIRECTION, OSCILLATOR, PULSE_LIMITS, PULSE_MAP, TRIM
+from hobnail.config_yaml import Report, parse, read_file
+from hobnail.errors import CalibrationError, Problem
+from hobnail.robot import Board, Joint, Robot, Span, Vec2
+
+VERSION = 1
+MAX_CHANGES = 5000
+
+_JOINT = (
+    Field("trim_deg", "trim_rad", TRIM, "Measured error of the horn's seat.", required=False),
+    Field("direction", "direction", DIRECTION, "-1: the shaft turns against the joint.", required=False),
+    Field("pulse_map_deg_us", "pulse_map", PULSE_MAP, "Shaft angle and pulse.", required=False),
+    Field("pulse_limits_us", "pulse_limits_us", PULSE_LIMITS, "Pulses never to be left.", required=False),
+)
+_BOARD = (Field("oscillator_mhz", "oscillator_hz", OSCILLATOR, "The chip's true clock.", required=False),)
+_WHEN = Text(
+    r"\d{4}-\d\d-\d\d[T ]\d\d:\d\d(:\d\d)?(Z|[+-]\d\d:\d\d)?",
+    'a date and time such as "2026-03-01T14:30:00Z"',
+)
+_VALUE = Text(r"[ -~]{0,4000}", "a value in quotes")
+_CHANGE = (
+    Field("when", "when", _WHEN, "Date and time."),
+    Field(
+        "who", "who", Text(r"[\w .,'@+-]{1,60}", "a name of 1 to 60 letters and digits"), "Who changed it."
+    ),
+    Field("what", "what", Text(r"[ -~]{1,120}", "what was changed"), "The joint or board, and the key."),
+    Field("old", "old", _VALUE, "The value before."),
+    Field("new", "new", _VALUE, "The value after."),
+)
+_FILE = (
+    Field("version", "", Integer(VERSION, VERSION), "Version of this file's format."),
+    Field("robot", "robot", Text(), "Name of the robot that it was measured on."),
+    Field("boards", "", Named(Group(_BOARD), "boards"), "By name of the board.", required=False),
+    Field("joints", "", Named(Group(_JOINT), "joints"), "By name of the joint.", required=False),
+    Field("history", "", Several(Group(_CHANGE), 0, MAX_CHANGES, "changes"), "Oldest first.", required=False),
+)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class JointCalibration:
+    """What was measured at one joint; None where the configuration stands.  As in `robot.Joint`."""
+
+    trim_rad: float | None = None
+    direction: int | None = None
+    pulse_map: tuple[Vec2, ...] | None = None
+    pulse_limits_us: Span | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BoardCalibration:
+    """What was measured at one board; None where the configuration stands."""
+
+    oscillator_hz: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Change:
+    """One entry of the history; `old` and `new` as the file shows them."""
+
+    when: str
+    who: str
+    what: str
+    old: str
+    new: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Calibration:
+    """A calibration file: joints and boards by name, and every change to them, oldest first."""
+
+    robot: str
+    joints: Mapping[str, JointCalibration] = field(default_factory=dict)
+    boards: Mapping[str, BoardCalibration] = field(default_factory=dict)
+    history: tuple[Change, ...] = ()
+
+
+def calibration_path(config: str | Path) -> Path:
+    """Where the calibration of a configuration file is kept: beside it, `<stem>.calibration.yaml`."""
+    config = Path(config)
+    return config.with_name(f"{config.stem}.calibration.yaml")
+
+
+def read_calibration(path: Path, robot: Robot) -> Calibration:
+    """The calibration of a robot; an empty one when there is no file.
+
+    Raises CalibrationError with every problem found.
+    """
+    if not os.path.lexists(path):
+        return Calibration(robot=robot.name)
+    report = Report(str(path))
+    data = read_file(path, report)
+    calibration = None if data is None else interpret(data, robot, report)
+    if calibration is None:
+        raise CalibrationError(report.problems())
+    return calibration
+
+
+def interpret(data: bytes, robot: Robot | None, report: Report) -> Calibration | None:
+    """The calibration that a file's bytes hold; None, with the problems told, when there are any.
+
+    Without a robot, only what the file says for itself is checked.
+    """
+    root = parse(data, report)
+    section = None if root is None else Group(_FILE).read(root, report)
+    if section is None:
+        return None
+    joints, boards = section.values.get("joints", {}), section.values.get("boards", {})
+    for joint in joints.values():
+        check_pulse_map(joint, report)
+    if robot is not None:
+        _check_names(section, robot, report)
+    if report.problems():
+        return None
+    return Calibration(
+        **section.arguments(),
+        joints={name: JointCalibration(**joint.arguments()) for name, joint in joints.items()},
+        boards={name: BoardCalibration(**board.arguments()) for name, board in boards.items()},
+        history=tuple(Change(**change.arguments()) for change in section.values.get("history", ())),
+    )
+
+
+def _check_names(section: Section, robot: Robot, report: Report) -> None:
+    name = section.values.get("robot")
+    if name is not None and name != robot.name:
+        hint = "It was measured on another robot: give this one a file of its own."
+        report.add(section.at("robot"), name, robot.name, hint)
+    frames_us = {board.name: 1e6 / board.frame_hz for board in robot.boards}
+    joints = {joint.name: joint for joint in robot.joints}
+    for kind, known in (("boards", frames_us), ("joints", joints)):
+        for name, entry in section.values.get(kind, {}).items():
+            if name not in known:
+                report.add(
+                    section.node.entries[kind].keys[name],
+                    f"unknown name {name}",
+                    ", ".join(known),
+                    nearest(name, known),
+                )
+            elif "pulse_limits_us" in entry.values:
+                longest = FRAME_SHARE * frames_us[joints[name].board]
+                if entry.values["pulse_limits_us"][1] > longest:
+                    found = f"{entry.values['pulse_limits_us'][1]:g} us"
+                    report.add(
+                        entry.at("pulse_limits_us"), found, f"at most {longest:g} us, in this board's frame"
+                    )
+
+
+def apply_calibration(robot: Robot, calibration: Calibration) -> Robot:
+    """The robot with what was measured in place of what was configured."""
+    return replace(
+        robot,
+        legs=tuple(
+            replace(
+                leg,
+                joints=tuple(
+                    replace(joint, **_given(calibration.joints.get(joint.name))) for joint in leg.joints
+                ),
+            )
+            for leg in robot.legs
+        ),
+        boards=tuple(replace(board, **_given(calibration.boards.get(board.name))) for board in robot.boards),
+    )
+
+
+def _given(measured: JointCalibration | BoardCalibration | None) -> dict[str, Any]:
+    if measured is None:
+        return {}
+    values = {each.name: getattr(measured, each.name) for each in fields(measured)}
+    return {name: value for name, value in values.items() if value is not None}
+
+
+def changed(
+    calibration: Calibration, robot: Robot, name: str, *, when: str, who: str, **values: Any
+) -> Calibration:
+    """The calibration with new values for the joint or board `name`, and the history of it.
+
+    `values` are attributes of JointCalibration or BoardCalibration; `robot` is
+    as loaded, so that the history can tell the old values.  `when` is an ISO
+    8601 date and time.  Raises CalibrationError when the result would not make
+    a good file, KeyError when no joint or board has that name.
+    """
+    now = apply_calibration(robot, calibration)
+    parts: dict[str, Joint | Board] = {joint.name: joint for joint in now.joints}
+    parts |= {board.name: board for board in now.boards}
+    part = parts[name]
+    joints, boards = dict(calibration.joints), dict(calibration.boards)
+    if isinstance(part, Joint):
+        joints[name] = replace(joints.get(name, JointCalibration()), **values)
+    else:
+        boards[name] = replace(boards.get(name, BoardCalibration()), **values)
+    changes = tuple(
+        Change(
+            when=when,
+            who=who,
+            what=f"{name} {_WRITTEN[attribute][0]}",
+            old=_WRITTEN[attribute][1](getattr(part, attribute)),
+            new=_WRITTEN[attribute][1](value),
+        )
+        for attribute, value in values.items()
+    )
+    new = replace(calibration, joints=joints, boards=boards, history=calibration.history + changes)
+    report = Report(f"{robot.name}.calibration.yaml, as it would be")
+    read_back = interpret(render(new).encode(), robot, report)
+    if read_back is None:
+        raise CalibrationError(report.problems())
+    return read_back
+
+
+def _number(value: float, decimals: int = 4) -> str:
+    """Decimal notation without exponent or trailing zeros."""
+    text = f"{value:.{decimals}f}"
+    text = text.rstrip("0").rstrip(".") if "." in text else text
+    return "0" if text == "-0" else text
+
+
+def _pairs(points: tuple[Vec2, ...]) -> str:
+    pairs = (f"[{_number(math.degrees(shaft))}, {_number(pulse, 2)}]" for shaft, pulse in points)
+    return f"[{', '.join(pairs)}]"
+
+
+# Attribute -> its key in the file, and how a value of it is written there.
+_WRITTEN: dict[str, tuple[str, Callable[[Any], str]]] = {
+    "trim_rad": ("trim_deg", lambda value: _number(math.degrees(value))),
+    "direction": ("direction", str),
+    "pulse_map": ("pulse_map_deg_us", _pairs),
+    "pulse_limits_us": ("pulse_limits_us", lambda value: f"[{_number(value[0], 2)}, {_number(value[1], 2)}]"),
+    "oscillator_hz": ("oscillator_mhz", lambda value: _number(value / 1e6, 6)),
+}
+
+
+def render(calibration: Calibration) -> str:
+    """The text of the calibration file; reading it gives the same calibration."""
+    lines = [
+        f"# {calibration.robot}: what was measured on the bench; goes before the configuration.",
+        "# Written by `hobnail calibrate`, which keeps no comments but these.  May be edited by hand:",
+        "# edit, `hobnail check`, restart.",
+        f"version: {VERSION}",
+        f'robot: "{calibration.robot}"',
+    ]
+    parts: tuple[tuple[str, Mapping[str, JointCalibration | BoardCalibration]], ...] = (
+        ("boards", calibration.boards),
+        ("joints", calibration.joints),
+    )
+    for title, measured in parts:
+        if measured:
+            lines.append(f"{title}:")
+        for name, values in measured.items():
+            written = (
+                f"{_WRITTEN[key][0]}: {_WRITTEN[key][1](value)}" for key, value in _given(values).items()
+            )
+            lines.append(f"  {name}: {{{', '.join(written)}}}")
+    if calibration.history:
+        lines.append("history:")
+    for change in calibration.history:
+        entries = (
+            f"{each.name}: {json.dumps(getattr(change, each.name), ensure_ascii=False)}"
+            for each in fields(change)
+        )
+        lines.append(f"  - {{{', '.join(entries)}}}")
+    return "\n".join(lines) + "\n"
+
+
+def write_calibration(path: Path, calibration: Calibration) -> None:
+    """Replace the calibration file as a whole: after a crash at any instant it is the old or the new one.
+
+    Raises CalibrationError when that cannot be done, and says which of the two it is.
+    """
+    path = Path(os.path.realpath(path))
+    temporary, outcome = "", "The file is as it was."
+    try:
+        mode = path.stat().st_mode & 0o777 if path.exists() else 0o644
+        descriptor, temporary = tempfile.mkstemp(prefix=f".{path.name}.", suffix=".tmp", dir=path.parent)
+        with open(descriptor, "w", encoding="utf-8", newline="\n") as file:
+            file.write(render(calibration))
+            file.flush()
+            os.fchmod(file.fileno(), mode)
+            os.fsync(file.fileno())
+        os.replace(temporary, path)
+        temporary, outcome = "", "The new file is there, but might not outlive a power cut."
+        _sync_folder(path.parent)
+    except OSError as error:
+        found = error.strerror or str(error)
+        raise CalibrationError(
+            [Problem(str(path), 0, 0, "", found, "a place to write to", outcome)]
+        ) from error
+    finally:
+        if temporary:
+            with contextlib.suppress(OSError):
+                os.unlink(temporary)
+
+
+def _sync_folder(folder: Path) -> None:
+    """Make a rename in a folder survive a power cut."""
+    descriptor = os.open(folder, os.O_RDONLY | os.O_DIRECTORY)
+    try:
+        os.fsync(descriptor)
+    finally:
+        os.close(descriptor)
