@@ -22,7 +22,8 @@ from typing import Any
 from hobnail.config_checks import FRAME_SHARE, check_pulse_map
 from hobnail.config_fields import Field, Group, Integer, Named, Section, Several, Text, nearest
 from hobnail.config_tables import DIRECTION, OSCILLATOR, PULSE_LIMITS, PULSE_MAP, TRIM
-from hobnail.config_yaml import Report, parse, read_file
+from hobnail.config_yaml import Mapping as YamlMapping
+from hobnail.config_yaml import Node, Report, parse, read_file
 from hobnail.errors import CalibrationError, Problem
 from hobnail.robot import Board, Joint, Robot, Span, Vec2
 
@@ -147,41 +148,37 @@ def _check_names(section: Section, robot: Robot, report: Report) -> None:
     if name is not None and name != robot.name:
         hint = "It was measured on another robot: give this one a file of its own."
         report.add(section.at("robot"), name, robot.name, hint)
-    frames_us = {board.name: 1e6 / board.frame_hz for board in robot.boards}
+    boards = {board.name: board for board in robot.boards}
     joints = {joint.name: joint for joint in robot.joints}
-    for kind, known in (("boards", frames_us), ("joints", joints)):
-        for name, entry in section.values.get(kind, {}).items():
-            if name not in known:
-                report.add(
-                    section.node.entries[kind].keys[name],
-                    f"unknown name {name}",
-                    ", ".join(known),
-                    nearest(name, known),
-                )
-            elif "pulse_limits_us" in entry.values:
-                longest = FRAME_SHARE * frames_us[joints[name].board]
-                if entry.values["pulse_limits_us"][1] > longest:
-                    found = f"{entry.values['pulse_limits_us'][1]:g} us"
-                    report.add(
-                        entry.at("pulse_limits_us"), found, f"at most {longest:g} us, in this board's frame"
-                    )
+    _check_known(section.at("boards"), boards, report)
+    _check_known(section.at("joints"), joints, report)
+    for name, entry in section.values.get("joints", {}).items():
+        limits = entry.values.get("pulse_limits_us")
+        if name in joints and limits is not None:
+            longest_us = FRAME_SHARE * 1e6 / boards[joints[name].board].frame_hz
+            if limits[1] > longest_us:
+                allowed = f"at most {longest_us:g} us, in the frame of board {joints[name].board}"
+                report.add(entry.at("pulse_limits_us"), f"{limits[1]:g} us", allowed)
+
+
+def _check_known(node: Node, known: Mapping[str, Joint | Board], report: Report) -> None:
+    for name, key in node.keys.items() if isinstance(node, YamlMapping) else ():
+        if name not in known and node.path:  # no path: the section is not there at all
+            report.add(key, f"unknown name {name}", ", ".join(known), nearest(name, known))
 
 
 def apply_calibration(robot: Robot, calibration: Calibration) -> Robot:
     """The robot with what was measured in place of what was configured."""
-    return replace(
-        robot,
-        legs=tuple(
-            replace(
-                leg,
-                joints=tuple(
-                    replace(joint, **_given(calibration.joints.get(joint.name))) for joint in leg.joints
-                ),
-            )
-            for leg in robot.legs
-        ),
-        boards=tuple(replace(board, **_given(calibration.boards.get(board.name))) for board in robot.boards),
-    )
+
+    def measured(joint: Joint) -> Joint:
+        return replace(joint, **_given(calibration.joints.get(joint.name)))
+
+    legs = []
+    for leg in robot.legs:
+        roll, hip, knee = leg.joints
+        legs.append(replace(leg, joints=(measured(roll), measured(hip), measured(knee))))
+    boards = (replace(board, **_given(calibration.boards.get(board.name))) for board in robot.boards)
+    return replace(robot, legs=tuple(legs), boards=tuple(boards))
 
 
 def _given(measured: JointCalibration | BoardCalibration | None) -> dict[str, Any]:

@@ -15,6 +15,7 @@ from dataclasses import dataclass, field
 from itertools import pairwise
 from typing import Any, Protocol
 
+from hobnail.config_scalars import decimal, integer, is_text, surprise
 from hobnail.config_yaml import Listing, Mapping, Node, Report, Scalar, shown
 
 KGF_CM_NM = 0.0980665  # exact, by the definition of the standard gravity
@@ -32,37 +33,7 @@ SI: dict[str, Callable[[float], float]] = {
     "MHz": lambda value: value * 1e6,
 }
 
-_DECIMAL = re.compile(r"[-+]?(?:(?:0|[1-9][0-9]{0,30})(?:\.[0-9]{0,30})?|\.[0-9]{1,30})\Z")
-_INTEGER = re.compile(r"[-+]?(?:0|[1-9][0-9]{0,18})\Z")
-_HEX = re.compile(r"0x[0-9a-fA-F]{1,8}\Z")
 _NAME = r"[A-Za-z][A-Za-z0-9_-]{0,39}"
-# Plain words that YAML 1.1 or 1.2 readers take for something else than text.
-_NOT_TEXT = frozenset(("y", "n", "yes", "no", "on", "off", "true", "false", "null"))
-
-_SURPRISES = (
-    (r"[-+]?[0-9.]+[eE][-+]?[0-9]+", "Readers of YAML differ on exponents: write the number out."),
-    (r"[-+]?0[0-9]+", "A leading zero makes it octal to some readers: write it without."),
-    (r"[-+]?0[xob][0-9a-fA-F]+", "Write it as a decimal number."),
-    (
-        r"[-+]?[0-9]+(:[0-9]+)+(\.[0-9]*)?",
-        "A colon makes it base 60 to some readers: write a decimal number.",
-    ),
-    (r"[-+]?[0-9]*,[0-9]+", "Write a decimal point, not a comma."),
-    (r"[-+]?[0-9][0-9_]*_[0-9_.]*", "Write the number without underscores."),
-    (r"[-+]?\.?(nan|inf|infinity)", "Only finite numbers are allowed."),
-    (r"(y|n|yes|no|on|off|true|false)", "YAML takes this word for true or false: write a number."),
-    (r"[-+]?[0-9]*\.?[0-9]+ *[^0-9.\s].*", "Write the number alone: its unit is in the key."),
-)
-
-
-def surprise(node: Scalar) -> str:
-    """Why what looks like a number is not taken for one; empty when there is nothing to say."""
-    if not node.plain and _DECIMAL.match(node.text):
-        return "Remove the quotes: they make it text."
-    for pattern, reason in _SURPRISES:
-        if re.fullmatch(pattern, node.text, re.IGNORECASE):
-            return reason
-    return ""
 
 
 class Kind(Protocol):
@@ -87,17 +58,13 @@ class Number:
     unit: str = ""
 
     def read(self, node: Node, report: Report) -> float | None:
-        if isinstance(node, Scalar):
-            if node.plain and _DECIMAL.match(node.text):
-                value = float(node.text)
-                if self.low <= value <= self.high:
-                    return SI.get(self.unit, float)(value)
-                found = f"{shown(node)} {self.unit}".rstrip()
-                report.add(node, found, self.allowed())
-                return None
+        value = decimal(node)
+        if value is None:
             report.add(node, shown(node), self.allowed(), surprise(node))
+        elif not self.low <= value <= self.high:
+            report.add(node, f"{shown(node)} {self.unit}".rstrip(), self.allowed())
         else:
-            report.add(node, shown(node), self.allowed())
+            return SI.get(self.unit, float)(value)
         return None
 
     def allowed(self) -> str:
@@ -116,17 +83,10 @@ class Integer:
     hexadecimal: bool = False
 
     def read(self, node: Node, report: Report) -> int | None:
-        if isinstance(node, Scalar) and node.plain:
-            value: int | None = None
-            if _INTEGER.match(node.text):
-                value = int(node.text)
-            elif self.hexadecimal and _HEX.match(node.text):
-                value = int(node.text, 16)
-            if value is not None and self.low <= value <= self.high:
-                return value
-            report.add(node, shown(node), self.allowed(), "" if value is not None else surprise(node))
-            return None
-        report.add(node, shown(node), self.allowed(), surprise(node) if isinstance(node, Scalar) else "")
+        value = integer(node, hexadecimal=self.hexadecimal)
+        if value is not None and self.low <= value <= self.high:
+            return value
+        report.add(node, shown(node), self.allowed(), surprise(node) if value is None else "")
         return None
 
     def allowed(self) -> str:
@@ -146,14 +106,14 @@ class Text:
     words: str = "a name of up to 40 letters, digits, - and _, a letter first"
 
     def read(self, node: Node, report: Report) -> str | None:
-        if isinstance(node, Scalar) and re.fullmatch(self.pattern, node.text):
-            if not node.plain or not _other_than_text(node.text):
-                return node.text
+        if not isinstance(node, Scalar) or not re.fullmatch(self.pattern, node.text):
+            report.add(node, shown(node), self.allowed())
+        elif node.plain and not is_text(node.text):
             report.add(
                 node, shown(node), self.allowed(), "YAML does not take this for text: put it in quotes."
             )
-            return None
-        report.add(node, shown(node), self.allowed())
+        else:
+            return node.text
         return None
 
     def allowed(self) -> str:
@@ -161,10 +121,6 @@ class Text:
 
     def schema(self) -> dict[str, Any]:
         return {"type": "string", "pattern": f"^(?:{self.pattern})$"}
-
-
-def _other_than_text(text: str) -> bool:
-    return text.lower() in _NOT_TEXT or text == "~" or bool(re.match(r"[-+.]*[0-9]", text))
 
 
 @dataclass(frozen=True, slots=True)
@@ -184,7 +140,7 @@ class Choice:
         return " or ".join(self.values)
 
     def schema(self) -> dict[str, Any]:
-        return {"enum": [int(word) if _INTEGER.match(word) else word for word in self.values]}
+        return {"enum": [int(word) if re.fullmatch("-?[0-9]+", word) else word for word in self.values]}
 
 
 @dataclass(frozen=True, slots=True)
