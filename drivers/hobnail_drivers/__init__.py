@@ -1,5 +1,5 @@
-"""Servo drivers of hobnail behind one contract; imports nothing of hobnail."""
+"""Servo drivers of hobnail behind one contract; imports nothing of hobnail.
 
-from hobnail_drivers.contract import BoardSettings, Driver, Health, Output, Pulses
-
-__all__ = ["BoardSettings", "Driver", "Health", "Output", "Pulses"]
+Nothing is re-exported here: the release helper lives in this package and has to
+start fast, so that importing one module must not import the others.
+"""

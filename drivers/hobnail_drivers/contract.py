@@ -177,6 +177,10 @@ class Driver(ABC):
             self._is_open = False
             self._close()
 
+    def notes(self) -> tuple[str, ...]:
+        """Where the boards are, a line each, for the release helper (see `board_notes`); none by default."""
+        return ()
+
     def _refuse(self, pulses_us: Pulses) -> None:
         for pulse, output in zip(pulses_us, self.outputs, strict=True):
             if pulse is not None and not output.min_us <= pulse <= output.max_us:

@@ -1,0 +1,159 @@
+"""The PCA9685 driver: servos on one or more boards over Linux I2C, pulses in us.
+
+One bus transaction a board a frame.  Never puts a board to sleep while it
+pulses, and never changes its frame rate but in `open`.  Category 0 first: where
+a board's /OE is wired to a GPIO line, `release` drives that before it uses the bus.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Sequence
+
+from hobnail_drivers.contract import BoardSettings, Driver, Health, Output, Pulses
+from hobnail_drivers.errors import BusError, DriverError, SetupError
+from hobnail_drivers.gpio import GpiodOutputLine, OpenLine, OutputLine
+from hobnail_drivers.i2c import OpenBus, SmBus, open_bus
+from hobnail_drivers.pca9685_board import Board
+
+
+class Pca9685Driver(Driver):
+    """Servos on PCA9685 boards.
+
+    A failed `open` or `release` leaves it unsure whether pulses have ended;
+    `write` then raises SetupError until `open` has verified every board again.
+    """
+
+    def __init__(
+        self,
+        boards: Sequence[BoardSettings],
+        outputs: Sequence[Output],
+        *,
+        argument: str = "",
+        open_bus: OpenBus = open_bus,
+        open_line: OpenLine = GpiodOutputLine,
+        sleep: Callable[[float], None] = time.sleep,
+    ) -> None:
+        """`open_bus` takes a bus number, `open_line` a GPIO chip and line; raises as `Board` does."""
+        super().__init__(boards, outputs, argument=argument)
+        self._open_bus = open_bus
+        self._open_line = open_line
+        self._sleep = sleep
+        self._wired = [Board(board, self.outputs) for board in self.boards]
+        self._buses: dict[int, SmBus] = {}
+        self._lines: dict[tuple[str, int], OutputLine] = {}  # /OE; boards may share one
+        self._is_cut = True  # every output was ended; /OE lines are high
+        self._is_unsure = True  # some board may still pulse
+
+    @property
+    def frame_hz(self) -> dict[str, float]:
+        """The true frame rate of each board, Hz."""
+        return {board.settings.name: board.frame_hz for board in self._wired}
+
+    def notes(self) -> tuple[str, ...]:
+        return tuple(f"i2c {board.bus} 0x{board.address:02x}" for board in self.boards)
+
+    def _open(self) -> None:
+        self._is_cut = self._is_unsure = True
+        try:
+            self._connect()
+            for board in self._wired:
+                try:
+                    board.set_up(self._sleep)
+                except OSError as error:
+                    raise board.error(error, "setting up") from error
+                except ValueError as error:  # the library's word for "no answer"
+                    raise SetupError(f"board {board.settings.name}: {error}") from error
+            self._is_unsure = False
+            self._uncut()
+        except DriverError:
+            if not self._is_open:
+                self._let_go()
+            raise
+
+    def _write(self, pulses_us: Pulses) -> None:
+        if self._is_cut:
+            self._uncut()
+        for board in self._wired:
+            try:
+                board.write(pulses_us)
+            except OSError as error:
+                raise board.error(error, "writing pulses") from error
+
+    def _release(self) -> None:
+        self._is_cut = True
+        errors: list[BusError] = []
+        for end in (self._cut_line, Board.end_pulses):  # the lines first: they need no bus
+            for board in self._wired:
+                try:
+                    end(board)
+                except OSError as error:
+                    errors.append(board.error(error, "ending pulses"))
+                    errors[-1].__cause__ = error
+        self._is_unsure = bool(errors)
+        if errors:
+            raise errors[0]
+
+    def _health(self) -> Health:
+        lost = []
+        for board in self._wired:
+            try:
+                differences = board.differences()
+            except OSError as error:
+                raise board.error(error, "reading settings back") from error
+            if differences:
+                lost.append(f"board {board.settings.name}: {differences}")
+        detail = f"{'; '.join(lost)}: check the boards' supply for brown-outs" if lost else ""
+        return Health(settings_kept=not lost, detail=detail, frame_hz=self.frame_hz)
+
+    def _close(self) -> None:
+        try:
+            self._release()
+        finally:
+            self._let_go()
+
+    def _connect(self) -> None:
+        """Cut every line, then open every bus afresh; what was open stays until its successor is there."""
+        fresh: dict[int, SmBus] = {}
+        for board in self._wired:
+            settings = board.settings
+            try:
+                where = settings.output_enable
+                if where is not None and where not in self._lines:
+                    self._lines[where] = self._open_line(*where)
+                self._cut_line(board)
+                if settings.bus not in fresh:
+                    fresh[settings.bus] = self._open_bus(settings.bus)
+                    if settings.bus in self._buses:
+                        self._buses[settings.bus].close()
+                    self._buses[settings.bus] = fresh[settings.bus]
+                board.connect(fresh[settings.bus])
+            except OSError as error:
+                raise board.error(error, "opening") from error
+
+    def _cut_line(self, board: Board) -> None:
+        self._set_line(board, high=True)
+
+    def _set_line(self, board: Board, *, high: bool) -> None:
+        where = board.settings.output_enable
+        if where is not None:
+            self._lines[where].set(high)
+
+    def _uncut(self) -> None:
+        """Let the /OE lines through again; every output behind them is full off."""
+        if self._is_unsure:
+            raise SetupError("a board may still pulse since the last failure: call open() first")
+        for board in self._wired:
+            try:
+                self._set_line(board, high=False)
+            except OSError as error:
+                raise board.error(error, "driving the output-enable line") from error
+        self._is_cut = False
+
+    def _let_go(self) -> None:
+        for line in self._lines.values():
+            line.close()
+        for bus in self._buses.values():
+            bus.close()
+        self._lines.clear()
+        self._buses.clear()
