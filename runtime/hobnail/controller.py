@@ -12,6 +12,7 @@ from bisect import bisect_right
 from dataclasses import dataclass
 
 from hobnail.errors import CommandError
+from hobnail.motion.plan import joint_speeds_rad_s
 from hobnail.motion.planar import to_origin
 from hobnail.motion.walker import STEP_SHARE, Walker
 from hobnail.robot import Robot, Vec3
@@ -58,7 +59,7 @@ class Controller:
         limits = [tuple(JointMap(joint).reachable_rad for joint in leg.joints) for leg in robot.legs]
         self._walker = Walker(robot, limits, at_rest=at_rest)
         self._supply_v = robot.supply.nominal_v
-        self._speeds = self._joint_speeds(self._supply_v)
+        self._speeds = joint_speeds_rad_s(robot, self._supply_v)
         self._dt_s = 0.0
         self._steps: list[Vec3] = []
 
@@ -72,7 +73,7 @@ class Controller:
         if not (math.isfinite(volts) and volts > 0.0):
             raise CommandError(f"supply_v is {volts} V; allowed: more than 0 V")
         self._supply_v = volts
-        self._speeds = self._joint_speeds(volts)
+        self._speeds = joint_speeds_rad_s(self.robot, volts)
         self._dt_s = 0.0
         self._walker.slow_supply = max(1.0, self.robot.supply.nominal_v / volts)
 
@@ -150,36 +151,26 @@ class Controller:
         walker.tick(dt_s, self._steps)
         clamped = walker.clamped
         pulses = []
-        angles = (angle for leg in walker.commanded_rad for angle in leg)
+        body = walker.body
+        angles = (angle for leg in body.commanded_rad for angle in leg)
         for angle, (knots, pieces, low, high) in zip(angles, self._pieces, strict=True):
             offset, slope = pieces[bisect_right(knots, angle)] if knots else pieces[0]
             pulse = offset + slope * angle
             # The joint's limits are those of its pulses: beyond is rounding only.
             pulses.append(low if pulse < low else high if pulse > high else pulse)
         return Tick(
-            walker.joints_rad,
-            walker.commanded_rad,
-            walker.feet_m,
+            body.joints_rad,
+            body.commanded_rad,
+            body.feet_m,
             walker.stance,
             tuple(pulses),
             walker.slowdown,
-            walker.pose,
+            body.pose,
             walker.velocity,
             walker.gait.name,
             walker.walking,
             walker.settled,
             walker.height_m,
             clamped,
-            walker.out_of_reach,
+            body.out_of_reach,
         )
-
-    def _joint_speeds(self, volts: float) -> list[Vec3]:
-        """Speed (rad/s) that each joint may turn at, at a supply voltage."""
-        speeds = []
-        for leg in self.robot.legs:
-            a, b, c = (
-                joint.servo.speed_rad_s * joint.servo.usable_speed * volts / joint.servo.rated_v
-                for joint in leg.joints
-            )
-            speeds.append((a, b, c))
-        return speeds

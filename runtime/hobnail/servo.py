@@ -9,6 +9,7 @@ leave, and the controller keeps to them.
 from __future__ import annotations
 
 from bisect import bisect_right
+from itertools import pairwise
 
 from hobnail.robot import Joint, Span
 
@@ -29,7 +30,7 @@ class JointMap:
         )
         self.knots_rad = [angle for angle, _ in points[1:-1]]
         self.pieces: list[tuple[float, float]] = []
-        for (angle0, pulse0), (angle1, pulse1) in zip(points[:-1], points[1:], strict=True):
+        for (angle0, pulse0), (angle1, pulse1) in pairwise(points):
             slope = (pulse1 - pulse0) / (angle1 - angle0)
             self.pieces.append((pulse0 - slope * angle0, slope))
         self.pulse_limits_us = joint.pulse_limits_us

@@ -10,7 +10,7 @@ from hobnail.motion.foot_path import FootPath
 from hobnail.motion.glide import AT_REST, Motion, settle
 from hobnail.motion.leg import LegKinematics
 from hobnail.motion.load import LegCorrection
-from hobnail.robot import Leg, Span, Vec2, Vec3
+from hobnail.robot import Leg, Span, Vec2
 
 # Share of the swing at its end in which the aim is left alone: a new aim would
 # have to be reached in too short a time.
@@ -77,6 +77,7 @@ class Foot:
 
     __slots__ = (
         "correction",
+        "from_hip",
         "hip",
         "kinematics",
         "lift_m",
@@ -86,7 +87,6 @@ class Foot:
         "offset",
         "phase",
         "radius_m",
-        "reach_m",
         "stepped",
         "swing",
         "x",
@@ -94,15 +94,18 @@ class Foot:
     )
 
     def __init__(
-        self, leg: Leg, neutral: Vec2, neutral_rad: Vec3, limits: tuple[Span, ...], load: float
+        self, leg: Leg, neutral: Vec2, height_m: float, limits: tuple[Span, ...], load: float
     ) -> None:
+        """A foot standing at `neutral` (body frame, m) under a body origin at `height_m`."""
         self.kinematics = LegKinematics(leg)
+        self.hip = x, y, z = leg.hip_m
+        at = (neutral[0] - x, neutral[1] - y, leg.foot_radius_m - height_m - z)
+        self.from_hip = at  # the neutral foot relative to its hip
+        neutral_rad = self.kinematics.angles(*self.kinematics.nearest_reachable(*at))
         self.correction = LegCorrection(leg, self.kinematics, neutral_rad)
-        self.hip = leg.hip_m
         self.radius_m = leg.foot_radius_m
         self.limits = limits
         self.neutral = neutral
-        self.reach_m = 0.0  # excursion from neutral that a stance may make
         self.offset = 0.0  # the gait's relative phase
         self.phase = 0.0
         self.x, self.y = neutral

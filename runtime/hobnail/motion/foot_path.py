@@ -15,6 +15,7 @@ from __future__ import annotations
 
 from bisect import bisect_right
 from collections.abc import Sequence
+from itertools import pairwise
 
 from hobnail.robot import Keyframe
 
@@ -55,10 +56,11 @@ class FootPath:
 
 def _segments(times: Sequence[float], values: Sequence[float]) -> list[tuple[float, ...]]:
     """Coefficients (s^0, s^1, s^3, s^4, s^5) of each segment over its own time 0..1."""
-    spans = [end - start for start, end in zip(times[:-1], times[1:], strict=True)]
-    steps = [end - start for start, end in zip(values[:-1], values[1:], strict=True)]
-    slopes = [0.0, *(_inner_slope(*pair) for pair in _neighbours(steps, spans)), 0.0]
-    pieces = []
+    spans = [end - start for start, end in pairwise(times)]
+    steps = [end - start for start, end in pairwise(values)]
+    inner = [_inner_slope(*before, *after) for before, after in pairwise(zip(steps, spans, strict=True))]
+    slopes = [0.0, *inner, 0.0]
+    pieces: list[tuple[float, ...]] = []
     for index, (step, span) in enumerate(zip(steps, spans, strict=True)):
         m0, m1 = slopes[index] * span, slopes[index + 1] * span
         pieces.append(
@@ -71,10 +73,6 @@ def _segments(times: Sequence[float], values: Sequence[float]) -> list[tuple[flo
             )
         )
     return pieces
-
-
-def _neighbours(steps: Sequence[float], spans: Sequence[float]) -> list[tuple[float, float, float, float]]:
-    return list(zip(steps[:-1], spans[:-1], steps[1:], spans[1:], strict=True))
 
 
 def _inner_slope(step0: float, span0: float, step1: float, span1: float) -> float:

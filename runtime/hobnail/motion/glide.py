@@ -13,7 +13,6 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-
 # Time in which a slope at its full rate is taken off when hardly any way is left.
 EASE_S = 0.1
 

@@ -36,14 +36,11 @@ class LegCorrection:
         """Angles to command for the geometric angles (rad), the foot's y and z relative to
         the hip (m) and the upward force of the ground on it (N)."""
         shank = hip + knee
-        sin_shank, cos_shank = math.sin(shank), math.cos(shank)
-        sin_hip = math.sin(hip)
-        cos_roll = math.cos(roll)
-        shank_x, shank_z = -self._lower_m * sin_shank, -self._lower_m * cos_shank
-        foot_x = shank_x - self._upper_m * sin_hip
+        shank_x = -self._lower_m * math.sin(shank)
+        foot_x = shank_x - self._upper_m * math.sin(hip)
         give = self._give
         # Sag: minus f/k dz/dq.
-        down = force_n * cos_roll
+        down = force_n * math.cos(roll)
         roll_by = -force_n * y * give[0]
         hip_by = down * foot_x * give[1]
         knee_by = down * shank_x * give[2]

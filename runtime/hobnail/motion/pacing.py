@@ -154,7 +154,8 @@ def _shortest(load: Array, cycles: Array) -> Array:
         back = np.where(high > 1.0, (1.0 - low) / (high - low), 0.0)
     back = np.where(np.isfinite(back), back, 0.0)
     found = found - back * (found - np.take(cycles, before))
-    return np.where(fits.any(axis=-1), found, np.take(cycles, np.argmin(load, axis=-1)))
+    shortest: Array = np.where(fits.any(axis=-1), found, np.take(cycles, np.argmin(load, axis=-1)))
+    return shortest
 
 
 def fit_envelope(twist: Twist, envelope: Envelope) -> Twist:

@@ -1,0 +1,79 @@
+"""What a gait means on one robot, worked out once when it is chosen; m, s, rad."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from hobnail.motion.foot import Foot
+from hobnail.motion.foot_path import FootPath
+from hobnail.motion.pacing import (
+    CycleTable,
+    fit_envelope,
+    fit_stride,
+    peak_foot_velocities,
+    reach_radius,
+    room_between_feet,
+)
+from hobnail.motion.planar import Twist
+from hobnail.motion.sway import PeriodicSway
+from hobnail.robot import Gait, Robot, Vec2, Vec3
+
+# Share of a cycle over which a foot takes up and gives off its load: the time in
+# which both of two alternating sets of feet are down, within these bounds.
+LOAD_RAMP = (0.05, 0.1)
+
+
+class GaitPlan:
+    """A gait on a robot: its foot path, sway and load transfer, how far each foot may be
+    led from neutral, and how commands are fitted to all that."""
+
+    __slots__ = ("_neutral", "_robot", "_table", "gait", "load_ramp", "path", "reach_m", "sway")
+
+    def __init__(self, robot: Robot, gait: Gait, feet: Sequence[Foot]) -> None:
+        self._robot = robot
+        self.gait = gait
+        self.path = FootPath(gait.swing)
+        self._neutral: list[Vec2] = [foot.neutral for foot in feet]
+        self.sway = PeriodicSway(self._neutral, gait, robot.stance.height_m)
+        self.load_ramp = max(min(gait.duty - 0.5, LOAD_RAMP[1]), LOAD_RAMP[0])
+        neutrals = [foot.from_hip for foot in feet]
+        room = room_between_feet(self._neutral, [foot.radius_m for foot in feet])
+        self.reach_m = [
+            min(reach_radius(foot.kinematics, foot.limits, neutral, gait.lift_m), space)
+            for foot, neutral, space in zip(feet, neutrals, room, strict=True)
+        ]
+        self._table: CycleTable | None = None
+        if gait.cycle_s is None:
+            self._table = CycleTable(
+                gait,
+                [foot.kinematics for foot in feet],
+                neutrals,
+                joint_speeds_rad_s(robot, robot.supply.nominal_v),
+                peak_foot_velocities(robot, self._neutral),
+            )
+
+    def fit(self, twist: Twist, slow_supply: float) -> tuple[Twist, float]:
+        """The command that is walked for the one asked, and its cycle rate (1/s): scaled as
+        a whole into the envelope and into what the stride allows."""
+        twist = fit_envelope(twist, self._robot.envelope)
+        cycle_s = self.gait.cycle_s
+        if self._table:
+            vx, vy, yaw_rate = twist
+            velocities = [(vx - yaw_rate * y, vy + yaw_rate * x) for x, y in self._neutral]
+            cycle_s = self._table.cycle_s(velocities, slow_supply)
+        assert cycle_s is not None
+        twist = fit_stride(twist, cycle_s * self.gait.duty, self._neutral, self.reach_m)
+        return twist, 1.0 / cycle_s
+
+
+def joint_speeds_rad_s(robot: Robot, supply_v: float) -> list[Vec3]:
+    """Speed that each joint may be asked for, leg by leg: the no-load speed, of which
+    `usable_speed` is taken, in proportion to the supply voltage."""
+    speeds = []
+    for leg in robot.legs:
+        a, b, c = (
+            joint.servo.speed_rad_s * joint.servo.usable_speed * supply_v / joint.servo.rated_v
+            for joint in leg.joints
+        )
+        speeds.append((a, b, c))
+    return speeds
