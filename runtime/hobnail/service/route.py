@@ -100,6 +100,7 @@ class RouteRunner:
             action = Action()
         elif not self._standing:
             self._standing = tick.settled
+            self._place = STILL  # the route starts where the robot stands
             action = Action()
         else:
             action = self._do(self.steps[self.index], tick, dt_s)
