@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from decimal import Decimal
 from pathlib import Path
 
 from hobnail.config_fields import Field, Group, Number, Section, Several, Text
@@ -228,7 +227,9 @@ def _node(value: object, path: str, depth: int) -> Node:
             mapping.entries[key] = _node(entry, below, depth + 1)
         return mapping
     if isinstance(value, float) and math.isfinite(value):
-        text = format(Decimal(repr(value)), "f")  # repr, but without an exponent
+        text = repr(value)
+        if "e" in text:
+            text = f"{value:.30f}"  # the rules of the file know no exponents
     elif isinstance(value, int) and abs(value) > 10**_SHOWN:
         text = "a huge number"  # printing it could take long, or be refused
     elif isinstance(value, list | dict):
