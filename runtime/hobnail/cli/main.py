@@ -106,7 +106,7 @@ def _overview() -> str:
     lines = ["usage: hobnail COMMAND [OPTIONS]", "", "Walks servo-driven legged robots.", "", "commands:"]
     lines += [f"  {name:<10} {text}" for name, text in COMMANDS.items()]
     lines += ["", "`hobnail COMMAND --help` tells more, with examples."]
-    lines += ["Try it without a robot: hobnail run config/juniper.yaml --route config/routes/bench-round.yaml"]
+    lines += ["Without a robot: hobnail run config/juniper.yaml --route config/routes/bench-round.yaml"]
     return "\n".join(lines)
 
 

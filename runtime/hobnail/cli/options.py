@@ -88,6 +88,34 @@ def add_json(parser: argparse.ArgumentParser, what: str = "print JSON instead of
     parser.add_argument("--json", action="store_true", help=what)
 
 
+def add_wait(parser: argparse.ArgumentParser, state: str) -> None:
+    """`--no-wait` and `--within SECONDS`, for commands that wait until the robot is in a state."""
+    parser.add_argument("--no-wait", action="store_true", help=f"do not wait until the robot is {state}")
+    parser.add_argument(
+        "--within",
+        metavar="SECONDS",
+        type=number("--within", "seconds", above=0),
+        default=60.0,
+        help="give up waiting after this time (default: 60); the robot goes on",
+    )
+
+
+def request_and_wait(
+    arguments: argparse.Namespace, request: Callable[[Client], object], wanted: tuple[str, ...]
+) -> int:
+    """Send one request and, unless told not to, wait for a state; print what came of it."""
+    from hobnail.cli.waiting import wait_for_state
+
+    with connect(arguments) as client:
+        request(client)
+        snapshot = client.state() if arguments.no_wait else wait_for_state(client, wanted, arguments.within)
+    if arguments.json:
+        print_json(snapshot)
+    else:
+        print(snapshot["state"])
+    return 0
+
+
 def connect(arguments: argparse.Namespace) -> Client:
     """A client of the running robot; raises ServiceUnavailableError when none answers."""
     from hobnail.service.client import Client
