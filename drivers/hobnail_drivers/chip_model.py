@@ -43,6 +43,7 @@ class ModelledPca9685Driver(Pca9685Driver):
     """
 
     takes_argument = True
+    is_model = True
 
     def __init__(
         self,

@@ -37,6 +37,8 @@ class SimulatedDriver(Driver):
     at the hard limit farther from the pulse, and turns at full speed from there.
     """
 
+    is_model = True
+
     def __init__(
         self,
         boards: Sequence[BoardSettings],
