@@ -1,0 +1,252 @@
+"""The control loop: one tick at each absolute deadline t0 + k T of a monotonic clock; times in s.
+
+The socket is served between ticks and never later than the next one.  Ticks
+that were missed are skipped, not caught up with.  Nothing here waits for a
+bus, a file or a client; the clock is injected.
+"""
+
+from __future__ import annotations
+
+import gc
+import time
+import traceback
+from collections.abc import Callable
+from typing import Protocol
+
+from hobnail.service.bus import Bus
+from hobnail.service.machine import Machine
+from hobnail.service.notify import Notifier
+from hobnail.service.power import StopInputWatch, SupplyWatch
+from hobnail.service.recorder import Recorder
+from hobnail.service.states import Frame, State
+from hobnail.service.timing import Lateness
+from hobnail.service.writer import EventLog
+
+SPARE_S = 0.0005  # before the deadline, the socket is left and the exact sleep begins
+LONGEST_STEP = 2  # periods that one tick may stand for
+CHECK_EVERY_S = 0.4  # read-back of settings and supply: a brown-out shows within a second
+SET_UP_LIMIT_S = 5.0  # a set-up may take longer than a transfer before it counts as stalled
+YOUNG_EVERY_S, OLD_EVERY_S = 1.0, 60.0  # garbage collections, in idle time
+ERRORS_IN_A_ROW = 10  # so many failed ticks, one after the other, end the service
+
+
+class Server(Protocol):
+    """What the loop needs of the socket server."""
+
+    def serve(self, until_s: float) -> None:
+        """Handle what comes in; back at `until_s` at the latest."""
+
+    def state_due(self) -> bool:
+        """A watcher waits for a state."""
+
+    def publish(self, params: dict[str, object]) -> None:
+        """Send a state to the watchers."""
+
+
+class Loop:
+    """Calls the machine on time and carries its frames to the bus.
+
+    `lateness`, `ticks` and `skipped` are what `state` publishes as timing.
+    """
+
+    def __init__(
+        self,
+        machine: Machine,
+        bus: Bus,
+        server: Server,
+        *,
+        clock: Callable[[], float] = time.monotonic,
+        sleep: Callable[[float], object] = time.sleep,
+        recorder: Recorder | None = None,
+        log: EventLog | None = None,
+        notifier: Notifier | None = None,
+        supply: SupplyWatch | None = None,
+        stop_input: StopInputWatch | None = None,
+        before_tick: Callable[[float], object] | None = None,
+        after_tick: Callable[[float], object] | None = None,
+    ) -> None:
+        """`before_tick` and `after_tick` are called with the time once a tick; they must be short."""
+        self.machine = machine
+        self.bus = bus
+        self.lateness = Lateness()
+        self.ticks = 0
+        self.skipped = 0
+        self._server = server
+        self._clock = clock
+        self._sleep = sleep
+        self._recorder = recorder
+        self._log = log
+        self._notifier = notifier
+        self._supply = supply
+        self._stop_input = stop_input
+        self._before_tick = before_tick
+        self._after_tick = after_tick
+        self._period_s = machine.robot.period_s
+        self._setups = machine.setups
+        self._state = machine.state
+        self._errors = 0
+        self._checked_s = self._young_s = self._old_s = clock()
+        self._fed_s = -1e9
+        machine.on_cut = bus.release
+        machine.instruments["timing"] = self.timing
+
+    def timing(self) -> dict[str, object]:
+        """Period, ticks done and skipped, and the lateness of those done."""
+        return {
+            "period_s": self._period_s,
+            "ticks": self.ticks,
+            "skipped": self.skipped,
+            "lateness_us": self.lateness.describe(),
+        }
+
+    def run(self, finished: Callable[[], bool]) -> None:
+        """Tick until `finished` says so, asked once after each tick."""
+        period_s, clock = self._period_s, self._clock
+        start_s = clock()
+        k = 1
+        while True:
+            deadline_s = start_s + k * period_s
+            self._server.serve(deadline_s - SPARE_S)
+            left_s = deadline_s - clock()
+            if left_s > 0.0:
+                self._sleep(left_s)
+            now_s = clock()
+            late_s = now_s - deadline_s
+            skipped = int(late_s / period_s) if late_s > 0.0 else 0
+            self.lateness.add(late_s)
+            self.tick(now_s, late_s, skipped)
+            if finished():
+                return
+            k += 1 + skipped
+
+    def tick(self, now_s: float, late_s: float = 0.0, skipped: int = 0) -> None:
+        """One tick, guarded: an error in it cuts the pulses and is told."""
+        machine = self.machine
+        try:
+            if skipped:
+                self.skipped += skipped
+                machine.report("tick-overrun", now_s, f"{late_s * 1e3:.1f} ms late, {skipped} ticks skipped")
+            dt_s = min(1 + skipped, LONGEST_STEP) * self._period_s
+            frame = self._carry(now_s, dt_s)
+            self._keep(frame, now_s, dt_s, late_s)
+            self._housekeep(frame, now_s)
+            self._errors = 0
+        except Exception as error:
+            self._errors += 1
+            self.bus.release()
+            if self._errors >= ERRORS_IN_A_ROW:
+                raise
+            machine.report("internal", now_s, repr(error))
+            if self._log is not None and self._errors == 1:
+                self._log.event("error", traceback.format_exc(), now_s)
+        self.ticks += 1
+
+    def _carry(self, now_s: float, dt_s: float) -> Frame:
+        """Faults in, frame out."""
+        machine, bus = self.machine, self.bus
+        for event in bus.events():
+            machine.report(event.fault, now_s, event.detail)
+        self._judge_bus(now_s)
+        self._watch_inputs(now_s)
+        if self._before_tick is not None:
+            self._before_tick(now_s)
+        machine.wake_blocked = "" if bus.is_set_up else "the boards are being set up"
+        pending = bus.pending
+        frame = machine.tick(now_s, dt_s, advance=not pending)
+        if frame.setup != self._setups:
+            self._setups = frame.setup
+            bus.set_up()
+        if frame.release:
+            if not bus.released and not pending:
+                bus.release()
+        elif not pending:
+            bus.submit(frame.pulses_us)
+        return frame
+
+    def _judge_bus(self, now_s: float) -> None:
+        machine, bus = self.machine, self.bus
+        limit_s = machine.robot.safety.bus_stall_s if bus.is_set_up else SET_UP_LIMIT_S
+        busy_s = bus.busy_s(now_s)
+        if busy_s > limit_s:
+            if not machine.faults.is_latched("bus-stalled"):
+                machine.report("bus-stalled", now_s, f"for {busy_s:.2f} s so far", lasting=True)
+        else:
+            machine.faults.over("bus-stalled", now_s)
+
+    def _watch_inputs(self, now_s: float) -> None:
+        machine = self.machine
+        if self._stop_input is not None:
+            was_open = self._stop_input.is_open
+            self._stop_input.update(now_s)
+            if self._stop_input.is_open:
+                if not was_open or not machine.faults.is_latched("stop-input"):
+                    machine.report("stop-input", now_s, self._stop_input.detail, lasting=True)
+            else:
+                machine.faults.over("stop-input", now_s)
+        if self._supply is not None and self._supply.update(self.bus.volts, now_s):
+            machine.body.supply_v = self._supply.volts
+            if self._supply.is_low:
+                if not machine.faults.is_latched("supply-low"):
+                    machine.report("supply-low", now_s, self._supply.detail, lasting=True)
+            else:
+                machine.faults.over("supply-low", now_s)
+
+    def _keep(self, frame: Frame, now_s: float, dt_s: float, late_s: float) -> None:
+        machine = self.machine
+        if self._recorder is not None and not frame.release:
+            self._recorder.row(
+                frame, now_s, dt_s, late_s, machine.command, machine.body.supply_v, machine.faults.names()
+            )
+        if self._log is None:
+            return
+        if frame.state is not self._state:
+            why = f": {machine.stop_record.reason}" if machine.stop_record else ""
+            self._log.event("state", f"{self._state} -> {frame.state}{why}", now_s)
+        for line in machine.faults.drain():
+            self._log.event("fault", line, now_s)
+
+    def _housekeep(self, frame: Frame, now_s: float) -> None:
+        if frame.state is not self._state:
+            self._state = frame.state
+            if self._notifier is not None:
+                self._notifier.status(f"{frame.state}: {summary(self.machine)}")
+        if self._server.state_due():
+            self._server.publish(self.machine.snapshot(now_s))
+        if now_s - self._checked_s >= CHECK_EVERY_S:
+            self._checked_s = now_s
+            self.bus.check()
+        self._feed(frame, now_s)
+        if self._after_tick is not None:
+            self._after_tick(now_s)
+        if now_s - self._old_s >= OLD_EVERY_S and frame.state is not State.WALKING:
+            self._old_s = self._young_s = now_s
+            gc.collect()
+        elif now_s - self._young_s >= YOUNG_EVERY_S:
+            self._young_s = now_s
+            gc.collect(0)
+
+    def _feed(self, frame: Frame, now_s: float) -> None:
+        """Feed the watchdog for a finished tick, if what it wanted has reached the boards."""
+        notifier = self._notifier
+        if notifier is None or notifier.watchdog_s is None or now_s - self._fed_s < notifier.watchdog_s / 4:
+            return
+        if self.reaches_boards(frame, now_s):
+            self._fed_s = now_s
+            notifier.watchdog()
+
+    def reaches_boards(self, frame: Frame, now_s: float) -> bool:
+        """The boards do what the frame says, so far as the bus thread knows."""
+        stall_s = self.machine.robot.safety.bus_stall_s
+        if self.bus.busy_s(now_s) > stall_s:
+            return False
+        if frame.release:
+            return self.bus.released
+        return now_s - self.bus.ok_s <= stall_s
+
+
+def summary(machine: Machine) -> str:
+    """One line about the robot, for the service manager."""
+    fault = machine.faults.worst()
+    if machine.stop_record is not None:
+        return f"stopped: {machine.stop_record.reason}"
+    return fault.kind.message if fault else "no faults"

@@ -1,0 +1,250 @@
+"""The last minute of pulses, in a file mapped into memory that outlives the process; us, rad, s.
+
+Put it on a tmpfs (the service's runtime directory): then no row waits for a
+disk.  Fixed rows with a number and a checksum, so that after a crash, or a cut
+anywhere, every whole row can be read.  Only ticks with pulses are kept: what
+came before a stop is still there hours after it.  Log lines are not written
+here (`hobnail.service.writer`).
+"""
+
+from __future__ import annotations
+
+import json
+import math
+import mmap
+import os
+import struct
+import time
+import zlib
+from collections.abc import Iterable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from hobnail.errors import ServiceError
+from hobnail.robot import Robot
+from hobnail.service.faults import KINDS
+from hobnail.service.states import Command, Frame, State
+
+RING_NAME = "last-minute.ring"
+PREVIOUS_NAME = "last-minute.previous.ring"
+KEPT_S = 60.0
+MAGIC = b"hobnail\x01"
+HEADER_BYTES = 8192
+_HEADER = struct.Struct("<8sII")  # magic, length and CRC-32 of the JSON text that follows
+_NUMBERS = 12  # lateness, command 3, velocity 3, pose 3, slowdown, supply
+_CRC = struct.Struct("<I")
+_STATES = tuple(State)
+_FAULTS = tuple(KINDS)
+
+
+@dataclass(frozen=True, slots=True)
+class Row:
+    """One tick: what was asked, what was sent.  `time_s` is monotonic; NaN: no signal."""
+
+    number: int
+    time_s: float
+    dt_s: float
+    state: State
+    faults: tuple[str, ...]
+    lateness_us: float
+    command: tuple[float, float, float]  # vx, vy m/s, yaw rate rad/s; as asked
+    velocity: tuple[float, float, float]  # as done
+    pose: tuple[float, float, float]  # odometry x, y m, yaw rad
+    slowdown: float
+    supply_v: float
+    pulses_us: tuple[float, ...]
+    joints_rad: tuple[float, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Ring:
+    """A ring file as read: its header and every whole row, oldest first.
+
+    `header` has robot, digest, source, period_s, joints (names) and
+    `wall_offset_s`, which added to a row's time gives seconds since 1970.
+    """
+
+    header: dict[str, object]
+    rows: tuple[Row, ...]
+
+    def last_posture(self) -> tuple[float, ...] | None:
+        """The newest commanded angle of each joint, rad; None when one is not known."""
+        if not self.rows:
+            return None
+        posture = [math.nan] * len(self.rows[-1].joints_rad)
+        for row in reversed(self.rows):
+            posture = [
+                new if math.isnan(old) else old for old, new in zip(posture, row.joints_rad, strict=True)
+            ]
+            if not any(map(math.isnan, posture)):
+                return tuple(posture)
+        return None
+
+
+class Recorder:
+    """Writes the ring; `row` costs some microseconds and touches no file."""
+
+    def __init__(self, directory: Path, robot: Robot) -> None:
+        """Start a new ring; one with rows in it is kept as the previous one.
+
+        Raises OSError when there is no room, or no right to write there.
+        """
+        path = directory / RING_NAME
+        if has_rows(path):
+            path.replace(directory / PREVIOUS_NAME)
+        joints = len(robot.joints)
+        self._row = _row_struct(joints)
+        self._row_bytes = self._row.size + _CRC.size
+        self._rows = max(1, round(KEPT_S / robot.period_s))
+        self._fault_bits = {name: 1 << bit for bit, name in enumerate(_FAULTS)}
+        self._state_index = {state: index for index, state in enumerate(_STATES)}
+        self.number = 0
+        size = HEADER_BYTES + self._rows * self._row_bytes
+        descriptor = os.open(path, os.O_RDWR | os.O_CREAT | os.O_TRUNC | os.O_CLOEXEC, 0o640)
+        try:
+            os.posix_fallocate(descriptor, 0, size)  # a full tmpfs shows here, not as a crash later
+            self._map = mmap.mmap(descriptor, size)
+        finally:
+            os.close(descriptor)
+        for page in range(0, size, mmap.PAGESIZE):
+            self._map[page] = 0
+        text = json.dumps(
+            {
+                "robot": robot.name,
+                "digest": robot.digest,
+                "source": robot.source,
+                "period_s": robot.period_s,
+                "joints": [joint.name for joint in robot.joints],
+                "wall_offset_s": time.time() - time.monotonic(),
+                "states": [str(state) for state in _STATES],
+                "faults": list(_FAULTS),
+            }
+        ).encode()
+        if _HEADER.size + len(text) > HEADER_BYTES:
+            raise ServiceError("the names of robot, joints and file are too long for the recorder's header")
+        self._map[: _HEADER.size] = _HEADER.pack(MAGIC, len(text), zlib.crc32(text))
+        self._map[_HEADER.size : _HEADER.size + len(text)] = text
+
+    def row(
+        self,
+        frame: Frame,
+        now_s: float,
+        dt_s: float,
+        lateness_s: float,
+        command: Command | None,
+        supply_v: float,
+        faults: Iterable[str],
+    ) -> None:
+        """Keep one tick."""
+        tick = frame.tick
+        velocity = tick.velocity if tick else (0.0, 0.0, 0.0)
+        pose = tick.pose if tick else (0.0, 0.0, 0.0)
+        bits = 0
+        for name in faults:
+            bits |= self._fault_bits[name]
+        nan = math.nan
+        self.number += 1
+        row = self._row.pack(
+            self.number,
+            now_s,
+            dt_s,
+            bits,
+            self._state_index[frame.state],
+            lateness_s * 1e6,
+            *((command.vx, command.vy, command.yaw_rate) if command else (0.0, 0.0, 0.0)),
+            *velocity,
+            *pose,
+            tick.slowdown if tick else 1.0,
+            supply_v,
+            *[nan if pulse is None else pulse for pulse in frame.pulses_us],
+            *[nan if angle is None else angle for angle in frame.joints_rad],
+        )
+        start = HEADER_BYTES + (self.number - 1) % self._rows * self._row_bytes
+        self._map[start : start + self._row_bytes] = row + _CRC.pack(zlib.crc32(row))
+
+    def close(self) -> None:
+        """Let go of the file; it stays.  May be called twice."""
+        self._map.close()
+
+
+def read_ring(path: Path) -> Ring:
+    """Every whole row of a ring file, however it was cut or damaged.
+
+    Raises OSError when it cannot be read, ServiceError when not even its header is whole.
+    """
+    data = path.read_bytes()
+    header = _read_header(data, path)
+    names = header["joints"]
+    assert isinstance(names, list)
+    joints = len(names)
+    form = _row_struct(joints)
+    rows = []
+    for start in range(HEADER_BYTES, len(data) - form.size - _CRC.size + 1, form.size + _CRC.size):
+        body = data[start : start + form.size]
+        if body.count(0) == len(body):
+            continue  # never written
+        if _CRC.unpack_from(data, start + form.size) == (zlib.crc32(body),):
+            rows.append(_unpacked(form.unpack(body), joints))
+    rows.sort(key=lambda row: row.number)
+    return Ring(header, tuple(rows))
+
+
+def last_posture(directory: Path, robot: Robot) -> tuple[float, ...] | None:
+    """Where the joints of this very configuration were last commanded to; None when not known."""
+    for name in (RING_NAME, PREVIOUS_NAME):
+        try:
+            ring = read_ring(directory / name)
+        except (OSError, ServiceError):
+            continue
+        posture = ring.last_posture() if ring.header.get("digest") == robot.digest else None
+        if posture is not None:
+            return posture
+    return None
+
+
+def has_rows(path: Path) -> bool:
+    """There is a ring with at least one row in it."""
+    try:
+        return bool(read_ring(path).rows)
+    except (OSError, ServiceError):
+        return False
+
+
+def _row_struct(joints: int) -> struct.Struct:
+    return struct.Struct(f"<QddIB3x{_NUMBERS + 2 * joints}f")
+
+
+def _read_header(data: bytes, path: Path) -> dict[str, object]:
+    problem = ServiceError(
+        f"{path}: not a recording of hobnail, or its first {HEADER_BYTES} bytes are damaged"
+    )
+    if len(data) < HEADER_BYTES:
+        raise problem
+    magic, length, checksum = _HEADER.unpack_from(data)
+    text = data[_HEADER.size : _HEADER.size + length]
+    if magic != MAGIC or zlib.crc32(text) != checksum:
+        raise problem
+    header = json.loads(text)
+    if not isinstance(header, dict):
+        raise problem
+    return header
+
+
+def _unpacked(values: tuple[Any, ...], joints: int) -> Row:
+    number, time_s, dt_s, bits, state, *numbers = values
+    return Row(
+        number=number,
+        time_s=time_s,
+        dt_s=dt_s,
+        state=_STATES[state],
+        faults=tuple(name for bit, name in enumerate(_FAULTS) if bits >> bit & 1),
+        lateness_us=numbers[0],
+        command=tuple(numbers[1:4]),
+        velocity=tuple(numbers[4:7]),
+        pose=tuple(numbers[7:10]),
+        slowdown=numbers[10],
+        supply_v=numbers[11],
+        pulses_us=tuple(numbers[12 : 12 + joints]),
+        joints_rad=tuple(numbers[12 + joints :]),
+    )
