@@ -246,13 +246,8 @@ def _stretches(r: Recording) -> list[Stretch]:
         command = r.command[start]
         if not np.any(command) or not r.powered[start]:
             continue
-        final = r.velocity[end - 1]
-        scale = np.array([0.02, 0.02, 0.1]) + np.max(np.abs(final))
-        unsteady = np.any(np.abs(r.velocity[start:end] - final) > STEADY_SHARE * scale, axis=1)
-        steady = start + (int(np.flatnonzero(unsteady)[-1]) + 1 if np.any(unsteady) else 0)
-        inside = beats[(beats >= steady) & (beats < end)]
-        if len(inside) > LEAST_CYCLES + 1:
-            inside = inside[1:]  # the first cycle at speed still settles
+        inside = beats[(beats >= start) & (beats < end)]
+        inside = inside[_first_steady(r, inside) :]
         if len(inside) <= LEAST_CYCLES:
             continue
         true, odometry = [], []
@@ -282,6 +277,18 @@ def _stretches(r: Recording) -> list[Stretch]:
             )
         )
     return found
+
+
+def _first_steady(r: Recording, beats: npt.NDArray[np.intp]) -> int:
+    """Index of the touch-down from which on the odometry's velocity, averaged over each cycle,
+    is that of the last cycle; and one cycle more, for the body to settle."""
+    means = [np.mean(r.velocity[a:b], axis=0) for a, b in zip(beats[:-1], beats[1:], strict=True)]
+    if not means:
+        return 0
+    scale = np.array([0.02, 0.02, 0.1]) + np.max(np.abs(means[-1]))
+    unsteady = [bool(np.any(np.abs(mean - means[-1]) > STEADY_SHARE * scale)) for mean in means]
+    first = len(unsteady) - unsteady[::-1].index(True) if True in unsteady else 0
+    return first + 1 if len(means) - first > LEAST_CYCLES else first
 
 
 def _fall(r: Recording) -> tuple[bool, str]:
