@@ -30,7 +30,7 @@ class Tick:
     """
 
     joints_rad: tuple[Vec3, ...]  # per leg: roll, hip pitch, knee pitch, geometric
-    commanded_rad: tuple[Vec3, ...]  # the same with feed-forward for sag and round feet
+    commanded_rad: tuple[Vec3, ...]  # with feed-forward for sag, trailing and round feet
     feet_m: tuple[Vec3, ...]  # body frame: end of the lower link, centre of a round foot
     stance: tuple[bool, ...]  # per leg: on the ground
     pulses_us: tuple[float, ...]  # per joint, in the order of `Robot.joints`
@@ -152,7 +152,7 @@ class Controller:
         clamped = walker.clamped
         pulses = []
         body = walker.body
-        angles = (angle for leg in body.commanded_rad for angle in leg)
+        angles = (angle for leg in walker.commanded_rad for angle in leg)
         for angle, (knots, pieces, low, high) in zip(angles, self._pieces, strict=True):
             offset, slope = pieces[bisect_right(knots, angle)] if knots else pieces[0]
             pulse = offset + slope * angle
@@ -160,7 +160,7 @@ class Controller:
             pulses.append(low if pulse < low else high if pulse > high else pulse)
         return Tick(
             body.joints_rad,
-            body.commanded_rad,
+            walker.commanded_rad,
             body.feet_m,
             walker.stance,
             tuple(pulses),

@@ -1,9 +1,12 @@
-"""Feed-forward for what bends and rolls: joint angles (rad) that put a loaded, round foot
-where a rigid, pointed one would be.
+"""Feed-forward for what bends, rolls and trails: joint angles (rad) that put a loaded,
+round foot on a slow servo where a rigid, pointed one would be.
 
 Sag: a hobby servo holds with a stiffness k; a torque turns its shaft by
 torque/k.  Commanding the opposite in advance removes it (virtual work: the
 ground's force f on the foot makes the torque f dz/dq on each joint).
+Trailing: a motor that turns at w gives less torque by w times stall torque over
+no-load speed, the slope of its torque-speed line; its position loop trails by
+that over k, a fixed time, by which the command goes ahead.
 Rolling: a foot of radius r rolls as its shank turns, and its centre moves by r
 times the angle; the leg is sent there.
 
@@ -21,7 +24,7 @@ from hobnail.robot import Leg, Vec3
 class LegCorrection:
     """Corrections of one leg about its neutral angles."""
 
-    __slots__ = ("_give", "_lower_m", "_neutral", "_radius_m", "_upper_m", "active")
+    __slots__ = ("_give", "_lower_m", "_neutral", "_radius_m", "_upper_m", "active", "trail_s")
 
     def __init__(self, leg: Leg, kinematics: LegKinematics, neutral_rad: Vec3) -> None:
         self._upper_m = kinematics.upper_m
@@ -30,6 +33,11 @@ class LegCorrection:
         self._neutral = (neutral_rad[0], neutral_rad[1] + neutral_rad[2])
         stiffness = [joint.servo.stiffness_nm_rad for joint in leg.joints]
         self._give = tuple(1.0 / k if k else 0.0 for k in stiffness)
+        a, b, c = (
+            joint.servo.torque_nm / joint.servo.speed_rad_s * give
+            for joint, give in zip(leg.joints, self._give, strict=True)
+        )
+        self.trail_s = (a, b, c)  # by which each servo trails a steady motion
         self.active = self._radius_m > 0.0 or any(self._give)
 
     def apply(self, roll: float, hip: float, knee: float, y: float, z: float, force_n: float) -> Vec3:

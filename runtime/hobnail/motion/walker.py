@@ -22,7 +22,7 @@ from hobnail.motion.glide import AT_REST, Glide, GlideState, Slew, SlewState, mi
 from hobnail.motion.plan import GaitPlan
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist
 from hobnail.motion.sway import NONE, BodyShift, SwayState
-from hobnail.motion.whole_body import WholeBody
+from hobnail.motion.whole_body import WholeBody, hold
 from hobnail.robot import Gait, Robot, Span, Vec2, Vec3
 
 STILL: Twist = (0.0, 0.0, 0.0)
@@ -49,7 +49,8 @@ _Saved = tuple[tuple[Pose, float, float], SwayState, SlewState, GlideState, list
 class Walker:
     """The robot's motion.  A new one stands at its neutral stance, or lies at rest height.
 
-    `body` holds the angles and feet of the latest tick.
+    `body` holds the angles and feet of the latest tick, `commanded_rad` what the servos
+    are to be sent.
     """
 
     def __init__(
@@ -86,6 +87,8 @@ class Walker:
         self.clamped = 0
         self.body = WholeBody()
         self._solve()
+        self.commanded_rad = self.body.loaded_rad
+        self._speeds = [(0.0, 0.0, 0.0)] * len(self._feet)  # of the joints along the path, rad/s
 
     # -- what is asked of it -------------------------------------------------
 
@@ -164,14 +167,14 @@ class Walker:
         """Move on by `dt_s`, no joint by more than its step (rad, leg by leg)."""
         self._decide()
         body = self.body
-        joints, commanded = body.joints_rad, body.commanded_rad
+        joints, loaded = body.joints_rad, body.loaded_rad
         saved = self._save()
         time_s = dt_s
         for attempt in range(RETRIES):
             self._advance(time_s)
             self._solve()
             excess = max(
-                _excess(commanded, body.commanded_rad, steps_rad),
+                _excess(loaded, body.loaded_rad, steps_rad),
                 _excess(joints, body.joints_rad, steps_rad),
             )
             if excess <= 1.0:
@@ -182,7 +185,8 @@ class Walker:
             time_s *= RETRY_SHARE / excess if attempt < RETRIES - 2 else 0.0
         self.clamped = 0
         if excess > 1.0:
-            self._clamp(commanded, steps_rad)
+            self._clamp(loaded, steps_rad)
+        self._lead(joints, time_s, steps_rad)
         share = self.slowdown = time_s / dt_s
         pace = self._pace.value
         self.velocity = (pace[0] * share, pace[1] * share, pace[2] * share)
@@ -404,12 +408,30 @@ class Walker:
 
     def _clamp(self, before: tuple[Vec3, ...], steps_rad: Sequence[Vec3]) -> None:
         """The last resort: hold each joint to its step, off the path, and count it."""
+        held = []
+        for old, new, steps in zip(before, self.body.loaded_rad, steps_rad, strict=True):
+            angles = _near(old, new, steps)
+            self.clamped += sum(a != b for a, b in zip(angles, new, strict=True))
+            held.append(angles)
+        self.body.loaded_rad = tuple(held)
+
+    def _lead(self, before: tuple[Vec3, ...], time_s: float, steps_rad: Sequence[Vec3]) -> None:
+        """Command each joint ahead by what its servo trails behind at the present speed, as
+        far as the joint's step allows."""
+        body = self.body
+        if time_s > 0.0:
+            self._speeds = [
+                ((a1 - a0) / time_s, (b1 - b0) / time_s, (c1 - c0) / time_s)
+                for (a0, b0, c0), (a1, b1, c1) in zip(before, body.joints_rad, strict=True)
+            ]
         commanded = []
-        for old, new, steps in zip(before, self.body.commanded_rad, steps_rad, strict=True):
-            held = tuple(min(max(b, a - d), a + d) for a, b, d in zip(old, new, steps, strict=True))
-            self.clamped += sum(h != b for h, b in zip(held, new, strict=True))
-            commanded.append((held[0], held[1], held[2]))
-        self.body.commanded_rad = tuple(commanded)
+        for foot, last, (a, b, c), (va, vb, vc), steps in zip(
+            self._feet, self.commanded_rad, body.loaded_rad, self._speeds, steps_rad, strict=True
+        ):
+            ta, tb, tc = foot.correction.trail_s
+            ahead = (a + ta * va, b + tb * vb, c + tc * vc)
+            commanded.append(hold(_near(last, ahead, steps), foot.limits))
+        self.commanded_rad = tuple(commanded)
 
     # -- trying a tick again -------------------------------------------------
 
@@ -438,6 +460,12 @@ def _excess(before: Sequence[Vec3], after: Sequence[Vec3], steps: Sequence[Vec3]
     for (a0, b0, c0), (a1, b1, c1), (a, b, c) in zip(before, after, steps, strict=True):
         worst = max(worst, abs(a1 - a0) / a, abs(b1 - b0) / b, abs(c1 - c0) / c)
     return worst
+
+
+def _near(old: Vec3, new: Vec3, steps: Vec3) -> Vec3:
+    """`new`, or the nearest to it within one step of `old`."""
+    a, b, c = (min(max(y, x - d), x + d) for x, y, d in zip(old, new, steps, strict=True))
+    return a, b, c
 
 
 def _share_within(ex: float, ey: float, dx: float, dy: float, limit: float) -> float:

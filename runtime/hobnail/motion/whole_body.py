@@ -16,16 +16,16 @@ from hobnail.robot import Span, Vec2, Vec3
 
 class WholeBody:
     """The latest solution: `pose` of the body on the ground (x, y, yaw), `feet_m` in the
-    body frame, `joints_rad` geometric, `commanded_rad` with the corrections for load
-    and round feet, and the count of feet that were `out_of_reach`."""
+    body frame, `joints_rad` geometric, `loaded_rad` with the corrections for load and
+    round feet, and the count of feet that were `out_of_reach`."""
 
-    __slots__ = ("commanded_rad", "feet_m", "joints_rad", "out_of_reach", "pose")
+    __slots__ = ("loaded_rad", "feet_m", "joints_rad", "out_of_reach", "pose")
 
     def __init__(self) -> None:
         self.pose: Pose = (0.0, 0.0, 0.0)
         self.feet_m: tuple[Vec3, ...] = ()
         self.joints_rad: tuple[Vec3, ...] = ()
-        self.commanded_rad: tuple[Vec3, ...] = ()
+        self.loaded_rad: tuple[Vec3, ...] = ()
         self.out_of_reach = 0
 
     def solve(
@@ -52,7 +52,7 @@ class WholeBody:
         tilted = roll != 0.0 or pitch != 0.0
         if tilted:
             cr, sr, cp, sp = math.cos(roll), math.sin(roll), math.cos(pitch), math.sin(pitch)
-        feet_m, joints, commanded = [], [], []
+        feet_m, joints, loaded = [], [], []
         self.out_of_reach = 0
         for foot in feet:
             dx, dy = foot.x - x0, foot.y - y0
@@ -77,10 +77,10 @@ class WholeBody:
             if foot.correction.active:
                 angles = foot.correction.apply(*angles, at_y, at_z, foot.load * weight_n)
                 angles = hold(angles, foot.limits)
-            commanded.append(angles)
+            loaded.append(angles)
         self.feet_m = tuple(feet_m)
         self.joints_rad = tuple(joints)
-        self.commanded_rad = tuple(commanded)
+        self.loaded_rad = tuple(loaded)
 
 
 def hold(angles: Vec3, limits: tuple[Span, ...]) -> Vec3:
