@@ -455,17 +455,25 @@ class Walker:
 
 
 def _excess(before: Sequence[Vec3], after: Sequence[Vec3], steps: Sequence[Vec3]) -> float:
-    """Greatest joint step as a multiple of what is allowed."""
+    """Greatest joint step as a multiple of what is allowed; 0 when all are within."""
     worst = 0.0
-    for (a0, b0, c0), (a1, b1, c1), (a, b, c) in zip(before, after, steps, strict=True):
-        worst = max(worst, abs(a1 - a0) / a, abs(b1 - b0) / b, abs(c1 - c0) / c)
+    for old, new, most in zip(before, after, steps, strict=True):
+        if not _within(old, new, most):
+            worst = max(worst, *(abs(y - x) / d for x, y, d in zip(old, new, most, strict=True)))
     return worst
 
 
 def _near(old: Vec3, new: Vec3, steps: Vec3) -> Vec3:
     """`new`, or the nearest to it within one step of `old`."""
+    if _within(old, new, steps):
+        return new
     a, b, c = (min(max(y, x - d), x + d) for x, y, d in zip(old, new, steps, strict=True))
     return a, b, c
+
+
+def _within(old: Vec3, new: Vec3, steps: Vec3) -> bool:
+    a, b, c = steps
+    return -a <= new[0] - old[0] <= a and -b <= new[1] - old[1] <= b and -c <= new[2] - old[2] <= c
 
 
 def _share_within(ex: float, ey: float, dx: float, dy: float, limit: float) -> float:

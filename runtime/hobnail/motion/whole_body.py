@@ -19,7 +19,7 @@ class WholeBody:
     body frame, `joints_rad` geometric, `loaded_rad` with the corrections for load and
     round feet, and the count of feet that were `out_of_reach`."""
 
-    __slots__ = ("loaded_rad", "feet_m", "joints_rad", "out_of_reach", "pose")
+    __slots__ = ("feet_m", "joints_rad", "loaded_rad", "out_of_reach", "pose")
 
     def __init__(self) -> None:
         self.pose: Pose = (0.0, 0.0, 0.0)
