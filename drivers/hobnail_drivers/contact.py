@@ -6,13 +6,11 @@ broken wire and a pulled plug all read the same, as open.
 
 from __future__ import annotations
 
-import errno
 from abc import ABC, abstractmethod
 from datetime import timedelta
 
-from hobnail_drivers.errors import BusError, NotOpenError
-from hobnail_drivers.gpio import device
-from hobnail_drivers.i2c import ADVICE
+from hobnail_drivers.errors import NotOpenError
+from hobnail_drivers.gpio import device, line_error
 from hobnail_drivers.libraries import load
 
 
@@ -52,8 +50,7 @@ class GpioContact(Contact):
     def __init__(self, chip: str, line: int, debounce_s: float = 0.01) -> None:
         """`chip` by name or path (gpiochip0).  Raises BusError, MissingLibraryError."""
         gpiod = load("gpiod", "gpiod")
-        self._where = f"{chip} line {line}"
-        self._line = line
+        self._chip, self._line = chip, line
         self._low = gpiod.line.Value.INACTIVE
         settings = gpiod.LineSettings(
             direction=gpiod.line.Direction.INPUT,
@@ -65,22 +62,18 @@ class GpioContact(Contact):
                 device(chip), consumer="hobnail-stop", config={line: settings}
             )
         except OSError as error:
-            raise self._error(error) from error
+            raise line_error(error, self._chip, self._line) from error
         self._is_open = True
 
     def is_closed(self) -> bool:
         if not self._is_open:
-            raise NotOpenError(f"the contact on {self._where} is not open any more")
+            raise NotOpenError(f"the contact on {self._chip} line {self._line} has been closed")
         try:
             return bool(self._request.get_value(self._line) == self._low)
         except OSError as error:
-            raise self._error(error) from error
+            raise line_error(error, self._chip, self._line) from error
 
     def close(self) -> None:
         if self._is_open:
             self._is_open = False
             self._request.release()
-
-    def _error(self, error: OSError) -> BusError:
-        number = error.errno or errno.EIO
-        return BusError(number, ADVICE.get(number, error.strerror or str(error)), self._where)

@@ -37,11 +37,12 @@ class MissingLibraryError(DriverError, ImportError):
 
 
 class BusError(DriverError, OSError):
-    """A transfer failed; `errno` is the system's, `board` the one addressed."""
+    """A transfer failed; `errno` is the system's, `board` the one addressed, `kind` what that is."""
 
-    def __init__(self, errno: int, message: str, board: str) -> None:
+    def __init__(self, errno: int, message: str, board: str, kind: str = "board") -> None:
         OSError.__init__(self, errno, message)
         self.board = board
+        self.kind = kind
 
     def __str__(self) -> str:
-        return f"board {self.board}: {self.strerror} (errno {self.errno})"
+        return f"{self.kind} {self.board}: {self.strerror} (errno {self.errno})"

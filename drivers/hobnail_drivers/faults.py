@@ -55,9 +55,9 @@ class FaultInjector:
         """No more faults."""
         self._plan.clear()
 
-    def driver(self, inner: Driver) -> Driver:
+    def driver(self, inner: Driver) -> FaultyDriver:
         """`inner` behind this plan."""
-        return _FaultyDriver(inner, self)
+        return FaultyDriver(inner, self)
 
     def bus(self, inner: SmBus) -> SmBus:
         """`inner` behind this plan."""
@@ -72,38 +72,38 @@ class FaultInjector:
                 fault()
 
 
-class _FaultyDriver(Driver):
+class FaultyDriver(Driver):
     """Passes everything on to `inner`, when the plan lets it."""
 
     def __init__(self, inner: Driver, plan: FaultInjector) -> None:
         super().__init__(inner.boards, inner.outputs)
-        self._inner = inner
+        self.inner = inner
         self._plan = plan
 
     def notes(self) -> tuple[str, ...]:
-        return self._inner.notes()
+        return self.inner.notes()
 
     def _open(self) -> None:
         self._pass_one()
-        self._inner.open()
+        self.inner.open()
 
     def _write(self, pulses_us: Pulses) -> None:
         self._pass_one()
-        self._inner.write(pulses_us)
+        self.inner.write(pulses_us)
 
     def _release(self) -> None:
         self._pass_one()
-        self._inner.release()
+        self.inner.release()
 
     def _health(self) -> Health:
         self._pass_one()
-        return self._inner.health()
+        return self.inner.health()
 
     def _close(self) -> None:
         try:
             self._pass_one()
         finally:
-            self._inner.close()
+            self.inner.close()
 
     def _pass_one(self) -> None:
         try:
@@ -118,32 +118,32 @@ class _FaultyBus:
     """Passes everything on to `inner`, when the plan lets it; `close` always."""
 
     def __init__(self, inner: SmBus, plan: FaultInjector) -> None:
-        self._inner = inner
+        self.inner = inner
         self._plan = plan
 
     @property
     def funcs(self) -> int:
-        return self._inner.funcs
+        return self.inner.funcs
 
     def i2c_rdwr(self, *messages: Any) -> None:
         self._plan.pass_one()
-        self._inner.i2c_rdwr(*messages)
+        self.inner.i2c_rdwr(*messages)
 
     def read_byte(self, address: int, /) -> int:
         self._plan.pass_one()
-        return self._inner.read_byte(address)
+        return self.inner.read_byte(address)
 
     def write_byte_data(self, address: int, register: int, value: int, /) -> None:
         self._plan.pass_one()
-        self._inner.write_byte_data(address, register, value)
+        self.inner.write_byte_data(address, register, value)
 
     def read_i2c_block_data(self, address: int, register: int, length: int, /) -> list[int]:
         self._plan.pass_one()
-        return self._inner.read_i2c_block_data(address, register, length)
+        return self.inner.read_i2c_block_data(address, register, length)
 
     def write_i2c_block_data(self, address: int, register: int, data: Sequence[int], /) -> None:
         self._plan.pass_one()
-        self._inner.write_i2c_block_data(address, register, data)
+        self.inner.write_i2c_block_data(address, register, data)
 
     def close(self) -> None:
-        self._inner.close()
+        self.inner.close()

@@ -5,14 +5,23 @@ The only line that hobnail drives is a PWM board's /OE pin: high cuts its output
 
 from __future__ import annotations
 
+import errno
 from abc import ABC, abstractmethod
 from collections.abc import Callable
 
+from hobnail_drivers.errors import BusError
 from hobnail_drivers.libraries import load
+
+ADVICE = {
+    errno.ENOENT: "there is no such GPIO chip: `gpiodetect` lists those that there are",
+    errno.EINVAL: "the chip has no such line, or not with these settings: `gpioinfo` lists its lines",
+    errno.EACCES: "no permission: add this user to the group gpio, then log in again",
+    errno.EBUSY: "another program or driver holds the line: `gpioinfo` says which",
+}
 
 
 class OutputLine(ABC):
-    """One output line.  Methods raise OSError."""
+    """One output line.  Methods raise BusError."""
 
     @abstractmethod
     def set(self, high: bool) -> None:
@@ -27,15 +36,21 @@ class GpiodOutputLine(OutputLine):
     """A line of a GPIO chip such as /dev/gpiochip0, by its number."""
 
     def __init__(self, chip: str, line: int) -> None:
-        """Take the line and drive it high.  Raises OSError, MissingLibraryError."""
+        """Take the line and drive it high.  Raises BusError, MissingLibraryError."""
         gpiod = load("gpiod", "gpiod")
         self._values = (gpiod.line.Value.INACTIVE, gpiod.line.Value.ACTIVE)
-        self._line = line
+        self._chip, self._line = chip, line
         settings = gpiod.LineSettings(direction=gpiod.line.Direction.OUTPUT, output_value=self._values[1])
-        self._request = gpiod.request_lines(device(chip), consumer="hobnail", config={line: settings})
+        try:
+            self._request = gpiod.request_lines(device(chip), consumer="hobnail", config={line: settings})
+        except OSError as error:
+            raise line_error(error, chip, line) from error
 
     def set(self, high: bool) -> None:
-        self._request.set_value(self._line, self._values[high])
+        try:
+            self._request.set_value(self._line, self._values[high])
+        except OSError as error:
+            raise line_error(error, self._chip, self._line) from error
 
     def close(self) -> None:
         self._request.release()
@@ -47,3 +62,9 @@ OpenLine = Callable[[str, int], OutputLine]
 def device(chip: str) -> str:
     """The device file of a chip given by its name or by its path."""
     return chip if "/" in chip else f"/dev/{chip}"
+
+
+def line_error(error: OSError, chip: str, line: int) -> BusError:
+    """The error to raise `from` one of the system, with advice."""
+    number = error.errno or errno.EIO
+    return BusError(number, ADVICE.get(number, error.strerror or str(error)), f"{chip} line {line}", "GPIO")

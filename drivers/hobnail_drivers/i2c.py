@@ -38,7 +38,9 @@ ADVICE = {
 class SmBus(Protocol):
     """The part of `smbus2.SMBus` that is used."""
 
-    funcs: int
+    @property
+    def funcs(self) -> int:
+        """The adapter's functions, as I2C_FUNCS gives them."""
 
     def i2c_rdwr(self, *messages: Any) -> None:
         """Plain I2C messages as one transaction."""
@@ -67,11 +69,13 @@ def open_bus(number: int) -> SmBus:
     return cast(SmBus, load("smbus2", "smbus2").SMBus(number))
 
 
-def bus_error(error: OSError, board: str, bus: int, address: int, doing: str) -> BusError:
+def bus_error(
+    error: OSError, board: str, bus: int, address: int, doing: str, kind: str = "board"
+) -> BusError:
     """The error to raise `from` one of the system: what was being done, and what to do next."""
     number = error.errno or errno.EIO
     advice = ADVICE.get(number, error.strerror or str(error))
-    return BusError(number, f"{doing} at address 0x{address:02x} on bus {bus}: {advice}", board)
+    return BusError(number, f"{doing} at address 0x{address:02x} on bus {bus}: {advice}", board, kind)
 
 
 class RegisterBus:

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Sequence
+from contextlib import suppress
 
 from hobnail_drivers.contract import BoardSettings, Driver, Health, Output, Pulses
 from hobnail_drivers.errors import BusError, DriverError, SetupError
@@ -67,6 +68,10 @@ class Pca9685Driver(Driver):
             self._is_unsure = False
             self._uncut()
         except DriverError:
+            # One board may be missing and another still pulse since a crash.
+            with suppress(DriverError):
+                self._release()
+            self._is_unsure = True
             if not self._is_open:
                 self._let_go()
             raise
@@ -87,6 +92,8 @@ class Pca9685Driver(Driver):
             for board in self._wired:
                 try:
                     end(board)
+                except BusError as error:
+                    errors.append(error)
                 except OSError as error:
                     errors.append(board.error(error, "ending pulses"))
                     errors[-1].__cause__ = error
@@ -116,27 +123,28 @@ class Pca9685Driver(Driver):
         """Cut every line, then open every bus afresh; what was open stays until its successor is there."""
         fresh: dict[int, SmBus] = {}
         for board in self._wired:
-            settings = board.settings
-            try:
-                where = settings.output_enable
-                if where is not None and where not in self._lines:
-                    self._lines[where] = self._open_line(*where)
-                self._cut_line(board)
-                if settings.bus not in fresh:
-                    fresh[settings.bus] = self._open_bus(settings.bus)
-                    if settings.bus in self._buses:
-                        self._buses[settings.bus].close()
-                    self._buses[settings.bus] = fresh[settings.bus]
-                board.connect(fresh[settings.bus])
-            except OSError as error:
-                raise board.error(error, "opening") from error
+            where = board.settings.output_enable
+            if where is not None and where not in self._lines:
+                self._lines[where] = self._open_line(*where)
+            self._cut_line(board)
+        for board in self._wired:
+            number = board.settings.bus
+            if number not in fresh:
+                try:
+                    fresh[number] = self._open_bus(number)
+                except OSError as error:
+                    raise board.error(error, "opening the bus") from error
+                if number in self._buses:
+                    self._buses[number].close()
+                self._buses[number] = fresh[number]
+            board.connect(fresh[number])
 
     def _cut_line(self, board: Board) -> None:
         self._set_line(board, high=True)
 
     def _set_line(self, board: Board, *, high: bool) -> None:
         where = board.settings.output_enable
-        if where is not None:
+        if where is not None and where in self._lines:
             self._lines[where].set(high)
 
     def _uncut(self) -> None:
@@ -144,10 +152,7 @@ class Pca9685Driver(Driver):
         if self._is_unsure:
             raise SetupError("a board may still pulse since the last failure: call open() first")
         for board in self._wired:
-            try:
-                self._set_line(board, high=False)
-            except OSError as error:
-                raise board.error(error, "driving the output-enable line") from error
+            self._set_line(board, high=False)
         self._is_cut = False
 
     def _let_go(self) -> None:

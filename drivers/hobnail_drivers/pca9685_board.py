@@ -130,8 +130,9 @@ class Board:
             )
 
     def end_pulses(self) -> None:
-        """Full off on every channel of the board."""
-        self._connected().write(self.settings.address, r.ALL_OFF)
+        """Full off on every channel of the board; nothing before `connect`."""
+        if self._bus is not None:
+            self._bus.write(self.settings.address, r.ALL_OFF)
 
     def differences(self) -> str:
         """What of the board's settings is not as set up, in words; empty when all is."""

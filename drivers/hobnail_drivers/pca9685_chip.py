@@ -210,7 +210,7 @@ class Chip:
 
     def _step(self) -> None:
         if self.registers[r.MODE1] & r.AUTO_INCREMENT:
-            # Runs from the last channel's register back to 0 (sec. 7.3.2); the
+            # Runs from the last channel's register back to 0 (table 4); the
             # registers from 0xFA on are reached by pointing at them.
             self._pointer = 0 if self._pointer == r.LED15_OFF_H else (self._pointer + 1) % 256
 
@@ -268,7 +268,7 @@ class Chip:
 
     def _counts(self, channel: int) -> Counts:
         on_l, on_h, off_l, off_h = self.registers[r.led_on_l(channel) : r.led_on_l(channel) + 4]
-        if off_h & r.FULL:  # full-off wins over full-on (sec. 7.3.3)
+        if off_h & r.FULL:  # full-off wins over full-on (table 7)
             return OFF
         if on_h & r.FULL:
             return ON

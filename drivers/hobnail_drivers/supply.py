@@ -122,7 +122,7 @@ class Ina219(SupplyMonitor):
         return int.from_bytes(self._bus.read(self._address, register, 2), "big")
 
     def _error(self, error: OSError) -> BusError:
-        return bus_error(error, "supply monitor", self._number, self._address, "reading the supply voltage")
+        return bus_error(error, "INA219", self._number, self._address, "reading", "supply monitor")
 
 
 class Ina219Model:
