@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from argparse import Namespace
+from typing import Any
 
 from hobnail.cli.options import Parser, add_json, add_socket, connect, print_json
 
@@ -18,7 +19,7 @@ def run(arguments: Namespace) -> int:
     """Send the request and tell what is left."""
     with connect(arguments) as client:
         client.reset()
-        snapshot = client.state()
+        snapshot: dict[str, Any] = client.state()
     if arguments.json:
         print_json(snapshot)
     else:

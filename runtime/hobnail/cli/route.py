@@ -43,7 +43,7 @@ def run(arguments: Namespace) -> int:
         return EX_USAGE
     if arguments.cancel:
         with connect(arguments) as client:
-            client.cancel_route()
+            client.route(cancel=True)
         print("cancelled; the robot stands")
         return 0
     from hobnail.service.route_file import load_route, steps_to_json
@@ -58,7 +58,7 @@ def run(arguments: Namespace) -> int:
         try:
             return follow(client.watch(rate_hz=WATCH_HZ), json=arguments.json)
         except KeyboardInterrupt:
-            client.cancel_route()
+            client.route(cancel=True)
             print("\ncancelled; the robot stands", file=sys.stderr)
             return CANCELLED
 

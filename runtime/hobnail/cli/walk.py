@@ -75,7 +75,7 @@ def run(arguments: Namespace) -> int:
         )
         return 64
     with connect(arguments) as client:
-        before = client.state()
+        before: dict[str, Any] = client.state()
         if not arguments.json:
             until = "Ctrl-C to stand" if math.isinf(arguments.for_s) else f"for {arguments.for_s:g} s"
             print(
