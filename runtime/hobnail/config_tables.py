@@ -60,9 +60,7 @@ BODY = (
         "Box around it.",
         required=False,
     ),
-    Field(
-        "belly_mm", "belly_m", Number(0, 500, "mm"), "Hip roll axes down to the underside.", required=False
-    ),
+    Field("belly_mm", "belly_m", Number(0, 500, "mm"), "Hip roll axes down to the underside."),
 )
 
 SUPPLY = (
@@ -146,8 +144,9 @@ JOINT = (
     Field("servo", "", Text(), "Name of its model in servos.", inherited=True),
     Field("board", "", Text(), "Name of its board in boards.", inherited=True),
     Field("channel", "channel", Integer(0, CHANNELS - 1), "Output of the board that it is plugged into."),
-    Field("direction", "direction", DIRECTION, "-1 where the shaft turns against the joint.", required=False),
-    Field("zero_deg", "zero_rad", _SERVO_TRAVEL, "Joint angle at shaft angle 0, by design.", required=False),
+    # No default for these two: forgotten, they would throw the leg about.
+    Field("direction", "direction", DIRECTION, "-1 where the shaft turns against the joint.", inherited=True),
+    Field("zero_deg", "zero_rad", _SERVO_TRAVEL, "Joint angle at shaft angle 0, by design.", inherited=True),
     Field("trim_deg", "trim_rad", TRIM, "Measured error of the horn's seat.", required=False),
     Field(
         "angle_limits_deg",
