@@ -115,8 +115,10 @@ class Attendant:
         return self._bus.released or overdue
 
     def close(self) -> None:
-        """Let the display show its last."""
-        if self._display is not None:
+        """Let the display show the end."""
+        if self._show is not None and self._display is not None:
+            show, last = self._show, self.machine.snapshot(self._now_s)
+            self._display.put(lambda: show(last))
             self._display.close(CLOSE_S)
 
 
