@@ -26,9 +26,12 @@ class Screen:
 
     @property
     def size(self) -> tuple[int, int]:
-        """(columns, lines) as they are now."""
+        """(columns, lines) that can be drawn on now.
+
+        One column is left free: erasing the rest of a full line takes its last character.
+        """
         size = shutil.get_terminal_size()
-        return size.columns, size.lines
+        return size.columns - 1, size.lines
 
     def show(self, lines: Sequence[str]) -> None:
         """Draw the lines over what was there; they must not be wider than the screen."""

@@ -40,6 +40,7 @@ STATE_STYLE = {
 }  # everything else is on its way: busy
 
 FEW_COLUMNS = 40
+OWN_ERRAND = 0  # the client number of the service itself
 
 
 @dataclass(frozen=True, slots=True)
@@ -135,9 +136,13 @@ class View:
         driver, command = snapshot["driver"], snapshot["command"]
         middle = f"  for {duration(snapshot['now_s'] - snapshot['since_s'])}, gait {gait}"
         holder = command.get("holder")
-        claim = "nobody commands" if holder is None else f"commanded by client {holder}"
-        if holder is not None and command.get("age_s") is not None:
-            claim += f", {command['age_s']:.1f} s ago"
+        if holder is None:
+            claim = "nobody commands"
+        elif holder == OWN_ERRAND:
+            claim = "walks its own route"
+        else:
+            ago = f", {command['age_s']:.1f} s ago" if command.get("age_s") is not None else ""
+            claim = f"commanded by client {holder}{ago}"
         stop = snapshot["stop"]
         if stop["latched"]:
             claim = f"stop latched (category {stop['category']}): {stop['reason'] or 'no reason given'}"
@@ -156,7 +161,9 @@ class View:
         return [top, centre, bottom, *(Line().add(text, "alarm") for text in note[:2])]
 
     def _speeds(self, snapshot: Snapshot, width: int) -> list[Line]:
-        command, real = snapshot["command"], snapshot["velocity"]
+        route, command, real = snapshot.get("route"), snapshot["command"], snapshot["velocity"]
+        if route and not route["done"]:
+            command = route["twist"]  # a route commands by itself
         slowdown = float(snapshot["slowdown"])
         span = max(10, min(41, width - 39))
         head = Line().add(f"{'':<9}{'command':>10}{'real':>10}         ", "dim")

@@ -76,6 +76,7 @@ def run(arguments: Namespace) -> int:
         return 64
     with connect(arguments) as client:
         before: dict[str, Any] = client.state()
+        client.walk(*twist, pivot=tuple(arguments.pivot), ttl_s=TTL_S)
         if not arguments.json:
             until = "Ctrl-C to stand" if math.isinf(arguments.for_s) else f"for {arguments.for_s:g} s"
             print(

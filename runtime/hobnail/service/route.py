@@ -109,7 +109,9 @@ class RouteRunner:
 
     def progress(self) -> dict[str, object]:
         """Where the route is: `step` of `steps` (from 1), `description`, `done_share` 0..1,
-        `elapsed_s`, `remaining_s` (estimated), `done`, `failure` (empty when there is none)."""
+        `elapsed_s`, `remaining_s` (estimated), `done`, `failure` (empty when there is none),
+        `twist` (last asked for)."""
+        vx, vy, yaw_rate = self.twist
         total_s = sum(self._expected_s)
         walked_s = sum(self._expected_s[: self.index])
         k = min(self.index, len(self.steps) - 1)
@@ -124,6 +126,7 @@ class RouteRunner:
             "remaining_s": total_s - walked_s,
             "done": self.done,
             "failure": self.failure,
+            "twist": {"vx_m_s": vx, "vy_m_s": vy, "yaw_rate_rad_s": yaw_rate},
         }
 
     def _begin(self) -> None:
