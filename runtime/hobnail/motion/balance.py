@@ -48,7 +48,9 @@ def neutral_feet(robot: Robot) -> list[Vec2]:
     base = [
         (
             leg.hip_m[0] + stance.forward_m,
-            leg.hip_m[1] + leg.abduction_m + math.copysign(stance.spread_m, leg.abduction_m or leg.hip_m[1]),
+            leg.hip_m[1]
+            + leg.abduction_m
+            + math.copysign(1.0, leg.abduction_m or leg.hip_m[1]) * stance.spread_m,
         )
         for leg in robot.legs
     ]
