@@ -16,7 +16,7 @@ from hobnail.config_build import build_robot
 from hobnail.config_checks import check_robot
 from hobnail.config_fields import Group, Section
 from hobnail.config_reach import check_balanced_reach, check_reach
-from hobnail.config_tables import ROBOT
+from hobnail.config_tables import LEG_DEFAULTS, ROBOT
 from hobnail.config_yaml import Listing, Mapping, Report, parse, read_file
 from hobnail.errors import CalibrationError, ConfigError
 from hobnail.robot import Robot
@@ -67,6 +67,6 @@ def _read(data: bytes, report: Report) -> Section | None:
 
 
 def _lay_over_defaults(root: Mapping) -> None:
-    defaults, legs = root.entries.get("leg_defaults"), root.entries.get("legs")
+    defaults, legs = root.entries.get(LEG_DEFAULTS), root.entries.get("legs")
     if isinstance(defaults, Mapping) and isinstance(legs, Listing):
         legs.items = [defaults.overlaid(leg) if isinstance(leg, Mapping) else leg for leg in legs.items]

@@ -64,10 +64,7 @@ def check_reach(section: Section, report: Report) -> None:
         return
     forward, spread = (stance.values.get(key, 0.0) for key in ("forward_mm", "spread_mm"))
     feet = [
-        (
-            leg.hip_m[0] + forward,
-            leg.hip_m[1] + math.copysign(abs(leg.abduction_m) + spread, leg.hip_m[1]),
-        )
+        (leg.hip_m[0] + forward, leg.hip_m[1] + leg.abduction_m + math.copysign(1.0, leg.hip_m[1]) * spread)
         for leg in legs
     ]
     if _check_apart(legs, feet, stance, report):

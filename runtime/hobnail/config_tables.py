@@ -28,18 +28,17 @@ _GPIO_CHIP = Text(r"(/dev/)?gpiochip[0-9]{1,3}", "a GPIO chip such as gpiochip0"
 _GPIO_LINE = Integer(0, 511)
 
 
-def optional(fields: tuple[Field, ...]) -> tuple[Field, ...]:
-    """The same fields, none of them required, nested ones included."""
-    return tuple(
-        replace(
-            each,
-            required=False,
-            kind=Group(optional(each.kind.fields), partial=True)
-            if isinstance(each.kind, Group)
-            else each.kind,
-        )
-        for each in fields
-    )
+def _defaults(fields: tuple[Field, ...]) -> tuple[Field, ...]:
+    """Those of the fields that legs may have in common, none of them required."""
+    common = []
+    for each in fields:
+        if isinstance(each.kind, Group):
+            common.append(
+                replace(each, required=False, kind=Group(_defaults(each.kind.fields), partial=True))
+            )
+        elif each.inherited or not each.required:
+            common.append(replace(each, required=False))
+    return tuple(common)
 
 
 BODY = (
@@ -160,11 +159,10 @@ JOINT = (
 )
 
 JOINT_NAMES = ("roll", "hip", "knee")
-_DEFAULTS = "leg_defaults"
-_JOINT_DEFAULTS = f"{_DEFAULTS}.joints"
+LEG_DEFAULTS = "leg_defaults"
 
 JOINTS = tuple(
-    Field(name, "", Group(JOINT, inherits=f"{_JOINT_DEFAULTS}.{name}"), note)
+    Field(name, "", Group(JOINT, inherits=f"{LEG_DEFAULTS}.joints.{name}"), note)
     for name, note in zip(
         JOINT_NAMES,
         (
@@ -367,9 +365,14 @@ ROBOT = (
     Field("supply", "", Group(SUPPLY), "The servo supply."),
     Field("boards", "", Several(Group(BOARD), 1, 16, "boards"), "The PWM boards."),
     Field("servos", "", Several(Group(SERVO), 1, 48, "models"), "The servo models in use."),
-    Field(_DEFAULTS, "", Group(optional(LEG), partial=True), "What all legs have in common.", required=False),
     Field(
-        "legs", "", Several(Group(LEG, inherits=_DEFAULTS), MIN_LEGS, MAX_LEGS, "legs"), "The legs, in order."
+        LEG_DEFAULTS, "", Group(_defaults(LEG), partial=True), "What all legs have in common.", required=False
+    ),
+    Field(
+        "legs",
+        "",
+        Several(Group(LEG, inherits=LEG_DEFAULTS), MIN_LEGS, MAX_LEGS, "legs"),
+        "The legs, in order.",
     ),
     Field("stance", "", Group(STANCE), "How it stands and rests."),
     Field("posture", "", Group(POSTURE), "How the body may move over its feet."),
