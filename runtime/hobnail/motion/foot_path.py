@@ -3,10 +3,9 @@
 Between keyframes each of travel and lift is a quintic with zero curvature at
 the keyframes, so that position, velocity and acceleration are continuous; at
 lift-off and touch-down velocity and acceleration are zero, which over the
-ground means that no foot scuffs.  The slopes at inner keyframes are those of
-the monotone scheme of Fritsch & Carlson (SIAM J. Numer. Anal. 17:238, 1980) in
-its harmonic-mean form, capped so that the quintic, too, never leaves the range
-of the keyframes on either side: a path drawn above the ground stays above it.
+ground means that no foot scuffs.  The slopes at inner keyframes are capped so that
+no quintic leaves the range of the keyframes at its ends: a path drawn above the
+ground stays above it.
 
 Nothing here knows where the foot starts or ends; `hobnail.motion.walker` does.
 """
@@ -76,11 +75,11 @@ def _segments(times: Sequence[float], values: Sequence[float]) -> list[tuple[flo
 
 
 def _inner_slope(step0: float, span0: float, step1: float, span1: float) -> float:
-    """Slope at a keyframe from the mean slopes before and after it."""
+    """Slope at a keyframe from the mean slopes before and after it: the steeper one, as far
+    as the cap allows, so that a foot cruises between keyframes and eases beside them;
+    none where the path turns back."""
     before, after = step0 / span0, step1 / span1
     if before * after <= 0.0:
         return 0.0
-    w0, w1 = 2.0 * span1 + span0, span1 + 2.0 * span0
-    slope = (w0 + w1) / (w0 / before + w1 / after)
-    cap = SLOPE_CAP * min(abs(before), abs(after))
-    return max(-cap, min(cap, slope))
+    gentle, steep = sorted((before, after), key=abs)
+    return steep if abs(steep) <= SLOPE_CAP * abs(gentle) else SLOPE_CAP * gentle
