@@ -24,6 +24,7 @@ from hobnail.service.states import (
     NEXT,
     NO_PULSES,
     ON_FEET,
+    STILL,
     TRANSITIONS,
     Command,
     Frame,
@@ -183,7 +184,7 @@ class Machine:
         self.goal = State.OFF
         errors = run_each((self._halt, self.commander.drop, lambda: self._requests.streams.hold_all(now_s)))
         if category == 1 and self.state in CARRYING:
-            lowered = run_each((lambda: self.controller.lower(within_s=self.robot.safety.crouch_s),))
+            lowered = run_each((lambda: self._crouch(now_s),))
             errors += lowered
             if not lowered:
                 self._enter(State.STOPPING, now_s)
@@ -228,7 +229,7 @@ class Machine:
                     "commander-lost", now_s, f"nothing from client {command.client_id} for {age_s:.2f} s"
                 )
         self.faults.update(now_s)
-        if self.routing:
+        if self.routing or self.state not in STILL:
             self._active_s = now_s
         if self._lost_s is not None and now_s - self._lost_s >= safety.lost_rest_s:
             self._lost_s = None
@@ -248,6 +249,8 @@ class Machine:
             if body.wake(dt_s):
                 self._woken(now_s)
             return
+        if self.state is State.STOPPING and body.tick is not None and body.tick.walking:
+            self._crouch(now_s)  # what is left of the time, once the feet are down
         tick = body.carry(dt_s)
         self._count(tick, now_s)
         self._arrive(tick, now_s)
@@ -332,6 +335,12 @@ class Machine:
             self.commander.drop(self._route_client)
         if self.state in ON_FEET:
             self.controller.stand()
+
+    def _crouch(self, now_s: float) -> None:
+        """Plant the feet and be down just before the pulses are cut."""
+        assert self.stop_record is not None
+        spare_s = 3.0 * self.robot.period_s
+        self.controller.lower(within_s=max(spare_s, self.stop_record.until_s - now_s - spare_s))
 
     def _cut(self, now_s: float) -> None:
         if self.on_cut is not None:

@@ -67,7 +67,9 @@ class Requests:
             raise CommandError(f"{method}: {error}") from error
         return handler(values, client_id, now_s)
 
-    def admit(self, method: str, client_id: int, now_s: float, ttl_s: float | None = None) -> None:
+    def admit(
+        self, method: str, client_id: int, now_s: float, ttl_s: float | None = None, *, fresh: bool = True
+    ) -> None:
         """Raise unless state, faults and claim allow the request; then take the claim for `ttl_s`."""
         machine = self._machine
         state, next_step = machine.state, NEXT[machine.state] or "send `stand` first"
@@ -79,6 +81,11 @@ class Requests:
         on_the_way_down = method in ("walk", "route", "posture") and machine.goal is not State.STANDING
         if state not in ALLOWED[method] or on_the_way_down:
             raise StateError(f"{method}: the robot is {state}; {next_step}")
+        if not fresh:
+            raise StateError(
+                f"{method}: this client has been sending without a pause since before the robot woke; "
+                "let go first: send zero velocities or `stand`, then walk"
+            )
         forbidden_by = _FORBIDDEN_BY.get(method, ())
         if method == "rest" and state is State.OFF:
             forbidden_by = _FORBIDDEN_BY["stand"]
@@ -100,12 +107,7 @@ class Requests:
         asleep = machine.state in LATCHED or machine.state is State.OFF
         fresh = self.streams.note(client_id, now_s, ttl_s, moves=command.moves, asleep=asleep)
         self._refuse_during_route("walk")
-        if machine.state not in LATCHED and not fresh:
-            raise StateError(
-                "walk: this client has been sending without a pause since before the robot woke; "
-                "let go first: send zero velocities or `stand`, then walk"
-            )
-        self.admit("walk", client_id, now_s, ttl_s)
+        self.admit("walk", client_id, now_s, ttl_s, fresh=fresh)
         machine.controller.walk(vx, vy, yaw_rate, pivot)
         machine.obey(command, now_s)
         return self._answer()

@@ -49,6 +49,7 @@ TRANSITIONS: dict[State, frozenset[State]] = {
 # Where the controller carries the body, so that a category 1 stop has something to lower.
 CARRYING = frozenset({State.RISING, State.STANDING, State.WALKING, State.LOWERING})
 ON_FEET = frozenset({State.STANDING, State.WALKING})
+STILL = frozenset({State.OFF, State.RESTING, State.STANDING})
 NO_PULSES = frozenset({State.OFF, State.STOPPED})
 LATCHED = frozenset({State.STOPPING, State.STOPPED})
 
