@@ -1,8 +1,8 @@
 """One PCA9685 board on its bus: pulses in us to counts of a 12-bit frame, set-up, read-back.
 
 Registers and their meaning by the NXP data sheet, Rev. 4.  Set-up goes through
-the `adafruit_pca9685` library; frames are written directly: whole channels in
-bursts by auto-increment, so that no pulse is cut and the fewest bytes pass.
+the `adafruit_pca9685` library; frames are written directly, in bursts by
+auto-increment, so that no pulse is cut and the fewest bytes pass.
 Methods raise OSError as the bus does; `Pca9685Driver` says what it means.
 """
 
@@ -28,15 +28,23 @@ Slot = tuple[int, int, int]  # channel, index into the pulses, count at which th
 
 
 class _Run:
-    """Consecutive channels of one board, and the message that carries their counts."""
+    """Consecutive channels of one board, and the message that carries their counts.
+
+    A message is one burst by auto-increment.  It starts at OFF_L of its first
+    channel, whose ON count was loaded by the set-up and never changes; no
+    shorter one gives every channel its pulse.  With OCH = 0 the chip takes all
+    of it up at the STOP, so that no half of a count ever acts.
+    """
 
     def __init__(self, address: int, slots: Sequence[Slot]) -> None:
-        self.slots = [(index, rise) for _, index, rise in slots]
-        self.register = r.led_on_l(slots[0][0])
-        self.counts = [0] * (2 * len(slots))  # rise, fall, rise, fall, ...
-        self.counts[0::2] = [rise for _, rise in self.slots]
-        self.pack_into = struct.Struct(f"<{len(self.counts)}H").pack_into
-        size = 1 + r.BYTES_A_CHANNEL * len(slots)
+        self.first = slots[0][0]
+        self.rise = slots[0][2]
+        self.register = r.led_on_l(self.first) + 2
+        self._slots = [(index, rise) for _, index, rise in slots]
+        self._counts = [0] * (2 * len(slots) - 1)  # fall, rise, fall, ..., fall
+        self._counts[1::2] = [rise for _, _, rise in slots[1:]]
+        self._pack_into = struct.Struct(f"<{len(self._counts)}H").pack_into
+        size = 1 + 2 * len(self._counts)
         self.message = load("smbus2", "smbus2").i2c_msg.write(
             address, bytes((self.register,)) + bytes(size - 1)
         )
@@ -45,13 +53,13 @@ class _Run:
 
     def fill(self, pulses_us: Pulses, counts_a_us: float) -> None:
         """Put the pulses into the message; the only place where they are rounded."""
-        self.counts[1::2] = [
+        self._counts[0::2] = [
             r.FULL_16
             if (pulse_us := pulses_us[index]) is None
             else int(pulse_us * counts_a_us + 0.5) + rise & 0xFFF
-            for index, rise in self.slots
+            for index, rise in self._slots
         ]
-        self.pack_into(self.buffer, 1, *self.counts)
+        self._pack_into(self.buffer, 1, *self._counts)
 
 
 class Board:
@@ -82,7 +90,7 @@ class Board:
         """Use that bus from now on.  Raises SetupError when its adapter cannot carry a frame."""
         self._bus = RegisterBus(bus)
         address = self.settings.address
-        longest = r.CHANNELS if self._bus.has_plain_i2c else BLOCK_MAX // r.BYTES_A_CHANNEL
+        longest = r.CHANNELS if self._bus.has_plain_i2c else (BLOCK_MAX + 2) // r.BYTES_A_CHANNEL
         self._runs = [_Run(address, slots) for slots in _consecutive(self._slots, longest)]
         if not self._runs:
             self._send = _send_nothing
@@ -117,6 +125,8 @@ class Board:
         chip.frequency = self.settings.frame_hz
         chip.mode2_reg = MODE2_RUNNING
         chip.mode1_reg = MODE1_RUNNING
+        for run in self._runs:
+            bus.write(address, struct.pack("<BH", r.led_on_l(run.first), run.rise))
         if differences := self.differences():
             raise SetupError(
                 f"board {self.settings.name}: {differences}: is it a PCA9685?  Switch its supply off and on, "
@@ -137,15 +147,19 @@ class Board:
     def differences(self) -> str:
         """What of the board's settings is not as set up, in words; empty when all is."""
         bus, address = self._connected(), self.settings.address
-        wanted = (
-            ("MODE1", r.MODE1, MODE1_RUNNING),
-            ("MODE2", r.MODE2, MODE2_RUNNING),
-            ("PRE_SCALE", r.PRE_SCALE, self.pre_scale),
-        )
+        wanted = [
+            ("MODE1", r.MODE1, bytes((MODE1_RUNNING,))),
+            ("MODE2", r.MODE2, bytes((MODE2_RUNNING,))),
+            ("PRE_SCALE", r.PRE_SCALE, bytes((self.pre_scale,))),
+            *(
+                (f"LED{run.first}_ON", r.led_on_l(run.first), struct.pack("<H", run.rise))
+                for run in self._runs
+            ),
+        ]
         return ", ".join(
-            f"{name} is 0x{got:02x}, was set to 0x{value:02x}"
+            f"{name} is 0x{got[::-1].hex()}, was set to 0x{value[::-1].hex()}"
             for name, register, value in wanted
-            if (got := bus.read(address, register, 1)[0]) != value
+            if (got := bus.read(address, register, len(value))) != value
         )
 
     def error(self, error: OSError, doing: str) -> BusError:
@@ -168,9 +182,9 @@ class Board:
 
 def _pre_scale(settings: BoardSettings) -> int:
     pre_scale = r.pre_scale(settings.oscillator_hz, settings.frame_hz)
-    if not r.MIN_PRE_SCALE <= pre_scale <= r.MAX_PRE_SCALE:
-        slowest = r.true_frame_hz(settings.oscillator_hz, r.MAX_PRE_SCALE)
-        fastest = r.true_frame_hz(settings.oscillator_hz, r.MIN_PRE_SCALE)
+    slowest = r.true_frame_hz(settings.oscillator_hz, r.MAX_PRE_SCALE)
+    fastest = r.true_frame_hz(settings.oscillator_hz, r.MIN_PRE_SCALE)
+    if not 0.999 * slowest <= settings.frame_hz <= 1.001 * fastest:
         raise SettingsError(
             f"board {settings.name}: frame rate is {settings.frame_hz} Hz; its chip can do "
             f"{slowest:.1f} to {fastest:.0f} Hz"
@@ -179,7 +193,7 @@ def _pre_scale(settings: BoardSettings) -> int:
 
 
 def _consecutive(slots: Iterable[Slot], longest: int) -> list[list[Slot]]:
-    """Part slots at gaps between channels, for a new message costs less than a channel, and at `longest`."""
+    """Part slots at gaps between channels, where a new message costs less than the gap, and at `longest`."""
     runs: list[list[Slot]] = []
     for slot in slots:
         if runs and runs[-1][-1][0] == slot[0] - 1 and len(runs[-1]) < longest:

@@ -46,6 +46,8 @@ def main(argv: Sequence[str] | None = None) -> int:
     except OSError as error:
         print(f"hobnail-release: note of the boards: {error}: give --bus and --address", file=sys.stderr)
         return EX_NOPERM if isinstance(error, PermissionError) else EX_UNAVAILABLE
+    except SystemExit as end:  # argparse has told; its own code for wrong usage is 2
+        return EX_USAGE if end.code else EX_OK
     if not places:
         print("hobnail-release: no board is noted, nothing to release")
     return _report(places, _end_all(places, timeout_s), timeout_s)
