@@ -92,24 +92,24 @@ class LegKinematics:
         return -self.upper_m * xp.sin(hip), d * c - down * s, d * s + down * c
 
     def nearest_reachable(self, x: float, y: float, z: float) -> Vec3:
-        """The point in reach of the bare geometry that lies nearest to (x, y, z)."""
-        lateral2 = y * y + z * z
-        d2 = self._d2
-        if lateral2 < d2 * (1.0 + 1e-12):
-            # Inside the cylinder about the roll axis: out to its surface.
-            lateral = math.sqrt(lateral2)
-            scale = abs(self.abduction_m) * (1.0 + 1e-9) / lateral if lateral > 0.0 else 0.0
-            y, z = (y * scale, z * scale) if scale else (self.abduction_m, -1e-9)
-            lateral2 = y * y + z * z
-        distance2 = x * x + lateral2
-        bound2 = min(max(distance2, self.nearest2), self.farthest2)
-        if bound2 == distance2:
-            return x, y, z
-        scale = math.sqrt(bound2 / distance2) if distance2 > 0.0 else 0.0
-        if scale and lateral2 * scale * scale >= d2:
-            return x * scale, y * scale, z * scale
-        # The sphere's nearest point would lie inside the cylinder: their common circle.
-        lateral = math.sqrt(lateral2)
+        """The point in reach of the bare geometry that lies nearest to (x, y, z).
+
+        In the half plane of x and the distance from the roll axis, reach is what lies
+        between two circles about the hip and beyond a line: the nearest point is on
+        one of the three, or where two of them meet.
+        """
         rim = abs(self.abduction_m) * (1.0 + 1e-9)
-        reach = math.sqrt(max(bound2 - rim * rim, 0.0))
-        return math.copysign(reach, x), y * rim / lateral, z * rim / lateral
+        nearest, farthest = math.sqrt(self.nearest2), math.sqrt(self.farthest2)
+        lateral = math.hypot(y, z)
+        distance = math.hypot(x, lateral)
+        if lateral >= rim and nearest <= distance <= farthest:
+            return x, y, z
+        candidates = [(x, rim)] if nearest <= math.hypot(x, rim) <= farthest else []
+        for radius in (nearest, farthest):
+            candidates.append((math.copysign(math.sqrt(max(radius * radius - rim * rim, 0.0)), x), rim))
+            if distance > 0.0 and lateral * radius >= rim * distance:
+                candidates.append((x * radius / distance, lateral * radius / distance))
+        along, out = min(candidates, key=lambda at: math.hypot(at[0] - x, at[1] - lateral))
+        if lateral == 0.0:  # on the roll axis every direction is as near
+            return along, math.copysign(out, self.abduction_m), 0.0
+        return along, y * out / lateral, z * out / lateral
