@@ -145,7 +145,10 @@ class Requests:
     def _route(self, values: Values, client_id: int, now_s: float) -> object:
         machine = self._machine
         if "cancel" in values:
-            self.admit("route", client_id, now_s)
+            if not machine.routing:
+                raise StateError("route: none is being walked, so there is nothing to cancel")
+            # It only ends motion: like `stop`, it needs no claim.
+            machine.commander.drop()
             machine.head_for(State.STANDING, now_s)
         else:
             from hobnail.service.route_file import steps_from_json  # slow to import, seldom needed
