@@ -114,14 +114,3 @@ def support_centre(feet: Sequence[Vec2], duty: float, phases: Sequence[float]) -
 
 def _centroid(points: Sequence[Vec2]) -> Vec2:
     return sum(x for x, _ in points) / len(points), sum(y for _, y in points) / len(points)
-
-
-def support_centroids(
-    feet: Sequence[Vec2], duty: float, phases: Sequence[float]
-) -> list[tuple[float, float, Vec2]]:
-    """(start, length, centroid of the standing feet) for each stretch of the cycle."""
-    pieces = []
-    for start, length, down in intervals(duty, phases):
-        standing = [foot for foot, is_down in zip(feet, down, strict=True) if is_down]
-        pieces.append((start, length, _centroid(standing or feet)))
-    return pieces

@@ -12,52 +12,87 @@ from collections.abc import Sequence
 
 from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.glide import AT_REST, Motion, settle
-from hobnail.motion.support import support_centroids
+from hobnail.motion.schedule import intervals, leg_phase
 from hobnail.robot import Gait, Vec2
 
 HARMONICS = 4
 NONE: Vec2 = (0.0, 0.0)
 # Step by which the speed of the planned shift is taken.
 INSTANT_S = 1e-4
+# A shift of less than this needs no time before the first foot lifts.
+LEAD_M = 0.002
+
+
+Series = list[complex]  # coefficients of the harmonics 0..HARMONICS
 
 
 class PeriodicSway:
-    """The shift that belongs to a gait, periodic in the gait clock.
+    """The shift that belongs to a gait, periodic in the gait clock, for any velocity.
 
-    The wanted zero-moment point is the centroid of the standing feet.  Its
-    Fourier series, term by term divided by 1 + (z/g) w^2, is the one periodic
-    motion of the linear inverted pendulum (Kajita et al. 2001) with that
-    zero-moment point.
+    The wanted zero-moment point is the centroid of the standing feet, which the
+    gait moves about and the body's velocity drags along.  Its Fourier series,
+    term by term divided by 1 + (z/g) w^2, is the one periodic motion of the
+    linear inverted pendulum (Kajita et al. 2001) with that zero-moment point.
     """
 
-    __slots__ = ("_height_term", "_terms", "active")
+    __slots__ = ("_base", "_height_term", "_sweep", "_turn", "active", "leads")
 
     def __init__(self, feet: Sequence[Vec2], gait: Gait, height_m: float) -> None:
-        self._terms: list[tuple[complex, complex]] = []
-        pieces = support_centroids(feet, gait.duty, gait.phases)
-        for k in range(1, HARMONICS + 1):
-            turn = -2j * math.pi * k
-            weight_x = weight_y = 0j
-            for start, length, (x, y) in pieces:
-                wave = (cmath.exp(turn * (start + length)) - cmath.exp(turn * start)) / turn
-                weight_x += x * wave
-                weight_y += y * wave
-            self._terms.append((2.0 * gait.body_shift * weight_x, 2.0 * gait.body_shift * weight_y))
+        share, duty = gait.body_shift, gait.duty
+        base_x, base_y, sweep, turn_x, turn_y = ([0j] * (HARMONICS + 1) for _ in range(5))
+        for start, length, down in intervals(duty, gait.phases):
+            standing = [
+                (foot, 0.5 * duty - leg_phase(start + 1e-9, phase))
+                for foot, phase, is_down in zip(feet, gait.phases, down, strict=True)
+                if is_down
+            ]
+            mean = share / max(len(standing), 1)
+            for k in range(HARMONICS + 1):
+                # Integrals over the piece: of 1, and of the time since its start.
+                still, going = _integrals(k, start, length)
+                for (x, y), ahead in standing:
+                    swept = mean * (ahead * still - going)
+                    base_x[k] += mean * x * still
+                    base_y[k] += mean * y * still
+                    sweep[k] += swept
+                    turn_x[k] -= y * swept
+                    turn_y[k] += x * swept
+        # The neutral stance has the mean of the centroids under the body already.
+        base_x[0] = base_y[0] = 0j
+        self._base = list(zip(base_x, base_y, strict=True))
+        self._sweep: Series = sweep
+        self._turn = list(zip(turn_x, turn_y, strict=True))
         self._height_term = height_m / GRAVITY_M_S2 * (2.0 * math.pi) ** 2
-        self.active = any(abs(x) + abs(y) > 1e-4 for x, y in self._terms)
+        self.active = share > 0.0
+        # Whether the body must be over its support before the first foot lifts.
+        self.leads = any(abs(x) + abs(y) > LEAD_M for x, y in self._base)
 
-    def at(self, clock: float, rate_hz: float) -> Vec2:
-        """Shift (m) at a time of the cycle, at a cycle rate."""
+    def at(self, clock: float, pace: Sequence[float]) -> Vec2:
+        """Shift (m) at a time of the cycle, for a pace (vx, vy, yaw rate, cycle rate)."""
+        vx, vy, yaw_rate, rate_hz = pace
+        vx, vy, yaw_rate = vx / rate_hz, vy / rate_hz, yaw_rate / rate_hz
         turn = cmath.exp(2j * math.pi * clock)
         stiff = self._height_term * rate_hz * rate_hz
         wave = 1.0 + 0j
         x = y = 0.0
-        for k, (term_x, term_y) in enumerate(self._terms, 1):
-            wave *= turn
+        for k, ((base_x, base_y), sweep, (turn_x, turn_y)) in enumerate(
+            zip(self._base, self._sweep, self._turn, strict=True)
+        ):
             share = wave / (1.0 + stiff * k * k)
-            x += (term_x * share).real
-            y += (term_y * share).real
+            x += ((base_x + vx * sweep + yaw_rate * turn_x) * share).real
+            y += ((base_y + vy * sweep + yaw_rate * turn_y) * share).real
+            wave *= turn if k else 2.0 * turn  # both signs of each harmonic but the mean
         return x, y
+
+
+def _integrals(k: int, start: float, length: float) -> tuple[complex, complex]:
+    """Integrals of exp(-2 pi i k t) and of (t - start) exp(-2 pi i k t) over a piece."""
+    if k == 0:
+        return complex(length), complex(0.5 * length * length)
+    turn = 2j * math.pi * k
+    first, last = cmath.exp(-turn * start), cmath.exp(-turn * (start + length))
+    still = (first - last) / turn
+    return still, (still - length * last) / turn
 
 
 SwayState = tuple[Vec2, Vec2, tuple[Motion, Motion], float]
@@ -83,11 +118,11 @@ class BodyShift:
         """Whether time changes the shift."""
         return self.plan is not None or self._left_s > 0.0
 
-    def change(self, plan: PeriodicSway | None, clock: float, rate_hz: float, within_s: float) -> None:
+    def change(self, plan: PeriodicSway | None, clock: float, pace: Sequence[float], within_s: float) -> None:
         """Ease over from the shift and speed there are to those of another plan."""
         self.plan = plan if plan is not None and plan.active else None
-        now = self._planned(clock, rate_hz)
-        soon = self._planned(clock + rate_hz * INSTANT_S, rate_hz)
+        now = self._planned(clock, pace)
+        soon = self._planned(clock + pace[3] * INSTANT_S, pace)
         (x, y), (vx, vy) = self.value, self._speed
         self._ease = (
             (x - now[0], vx - (soon[0] - now[0]) / INSTANT_S, 0.0),
@@ -95,9 +130,9 @@ class BodyShift:
         )
         self._left_s = within_s if self._ease != (AT_REST, AT_REST) else 0.0
 
-    def advance(self, time_s: float, clock: float, rate_hz: float) -> None:
+    def advance(self, time_s: float, clock: float, pace: Sequence[float]) -> None:
         """Move on by `time_s`, at the end of which the gait clock is at `clock`."""
-        x, y = self._planned(clock, rate_hz)
+        x, y = self._planned(clock, pace)
         left = self._left_s
         if left > 0.0:
             ease_x, ease_y = self._ease
@@ -109,8 +144,8 @@ class BodyShift:
             self._speed = ((x - self.value[0]) / time_s, (y - self.value[1]) / time_s)
         self.value = (x, y)
 
-    def _planned(self, clock: float, rate_hz: float) -> Vec2:
-        return self.plan.at(clock, rate_hz) if self.plan else NONE
+    def _planned(self, clock: float, pace: Sequence[float]) -> Vec2:
+        return self.plan.at(clock, pace) if self.plan else NONE
 
     def state(self) -> SwayState:
         """A snapshot for `restore`; the plan is not part of it."""

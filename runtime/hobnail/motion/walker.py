@@ -213,7 +213,7 @@ class Walker:
         if not self._walking:
             self._share_load(time_s, [1.0] * len(self._feet))
             if self._shift.moving:
-                self._shift.advance(time_s, self._clock, self._pace.value[3])
+                self._shift.advance(time_s, self._clock, self._pace.value)
             return
         step = self._pace.value[3] * time_s
         parts = math.ceil(step / CLOCK_STEP) if step > CLOCK_STEP else 1
@@ -236,7 +236,7 @@ class Walker:
         self._hold -= turn
         self._move_feet(time_s, rate, steady)
         if self._shift.moving:
-            self._shift.advance(time_s, self._clock, rate)
+            self._shift.advance(time_s, self._clock, pace.value)
 
     def _move_feet(self, time_s: float, rate: float, steady: bool) -> None:
         plan = self._plan
@@ -327,7 +327,7 @@ class Walker:
         lifts = sorted((phase + duty) % 1.0 for phase in phases)
         gaps = [(lift - before) % 1.0 for before, lift in zip([lifts[-1], *lifts], lifts, strict=False)]
         first = lifts[gaps.index(max(gaps))]
-        shifts = plan.sway.active or self._shift.value != NONE
+        shifts = plan.sway.leads or self._shift.value != NONE
         self._hold = START_SHIFT if shifts else 0.0
         self._clock = (first - self._hold - 1e-9) % 1.0
         for foot, phase in zip(self._feet, phases, strict=True):
@@ -338,8 +338,7 @@ class Walker:
         self._retarget()
         rate = self._pace.target[3]
         self._pace.jump(3, rate)
-        if shifts:
-            self._shift.change(plan.sway, self._clock, rate, START_SHIFT / rate)
+        self._shift.change(plan.sway, self._clock, self._pace.value, START_SHIFT / rate)
 
     def _retarget(self) -> None:
         """Bring the command within what may be asked, and start to slew towards it."""
@@ -396,8 +395,8 @@ class Walker:
                 return
             self._walking = False
             self._checking = False
-            rate = self._pace.value[3]
-            self._shift.change(None, self._clock, rate, START_SHIFT / rate)
+            pace = self._pace.value
+            self._shift.change(None, self._clock, pace, START_SHIFT / pace[3])
 
     # -- angles --------------------------------------------------------------
 
