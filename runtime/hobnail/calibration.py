@@ -56,7 +56,8 @@ _FILE = (
     Field("robot", "robot", Text(), "Name of the robot that it was measured on."),
     Field("boards", "", Named(Group(_BOARD), "boards"), "By name of the board.", required=False),
     Field("joints", "", Named(Group(_JOINT), "joints"), "By name of the joint.", required=False),
-    Field("history", "", Several(Group(_CHANGE), 0, MAX_CHANGES, "changes"), "Oldest first.", required=False),
+    # Required and written last, so that a file cut short is not taken for a whole one.
+    Field("history", "", Several(Group(_CHANGE), 0, MAX_CHANGES, "changes"), "Oldest first."),
 )
 
 
@@ -268,8 +269,7 @@ def render(calibration: Calibration) -> str:
                 f"{_WRITTEN[key][0]}: {_WRITTEN[key][1](value)}" for key, value in _given(values).items()
             )
             lines.append(f"  {name}: {{{', '.join(written)}}}")
-    if calibration.history:
-        lines.append("history:")
+    lines.append("history:" if calibration.history else "history: []")
     for change in calibration.history:
         entries = (
             f"{each.name}: {json.dumps(getattr(change, each.name), ensure_ascii=False)}"
@@ -287,12 +287,14 @@ def write_calibration(path: Path, calibration: Calibration) -> None:
     path = Path(os.path.realpath(path))
     temporary, outcome = "", "The file is as it was."
     try:
-        mode = path.stat().st_mode & 0o777 if path.exists() else 0o644
+        before = path.stat() if path.exists() else None
         descriptor, temporary = tempfile.mkstemp(prefix=f".{path.name}.", suffix=".tmp", dir=path.parent)
         with open(descriptor, "w", encoding="utf-8", newline="\n") as file:
             file.write(render(calibration))
             file.flush()
-            os.fchmod(file.fileno(), mode)
+            os.fchmod(file.fileno(), before.st_mode & 0o777 if before else 0o644)
+            if before and os.geteuid() == 0:
+                os.fchown(file.fileno(), before.st_uid, before.st_gid)  # the service must still read it
             os.fsync(file.fileno())
         os.replace(temporary, path)
         temporary, outcome = "", "The new file is there, but might not outlive a power cut."
