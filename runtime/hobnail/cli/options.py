@@ -111,8 +111,10 @@ def request_and_wait(
         snapshot = client.state() if arguments.no_wait else wait_for_state(client, wanted, arguments.within)
     if arguments.json:
         print_json(snapshot)
-    else:
+    elif snapshot["state"] in wanted:
         print(snapshot["state"])
+    else:
+        print(f"{snapshot['state']}, on its way to {wanted[0]}")
     return 0
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 import sys
 from argparse import Namespace
 from collections.abc import Iterable, Iterator
@@ -89,14 +90,12 @@ def _told(snapshots: Iterable[dict[str, Any]], *, json: bool) -> Iterator[dict[s
             print_json(progress)
         elif progress is not None:
             text = f"{progress['step']:>3}/{progress['steps']}  {printable(progress['description'])}"
+            if progress["done"] and not progress["failure"]:
+                text = f"all {progress['steps']} steps walked in {duration(progress['elapsed_s'])}"
             if live:
                 done = f"{gauge(progress['done_share'], 20, glyphs)} {progress['done_share']:4.0%}"
-                left = f"{duration(progress['remaining_s'])} left"
-                print(
-                    f"\r\x1b[K{done}  {text[:44]}  {left}"[:100],
-                    end="\n" if progress["done"] else "",
-                    flush=True,
-                )
+                line = f"{done}  {text}"[: shutil.get_terminal_size().columns - 1]
+                print(f"\r\x1b[K{line}", end="\n" if progress["done"] else "", flush=True)
             elif progress["step"] != step or progress["done"]:
                 print(text, flush=True)
             step = progress["step"]

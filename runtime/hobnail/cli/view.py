@@ -218,7 +218,7 @@ def one_line(snapshot: Snapshot) -> str:
         f"at {pose['x_m']:+.3f} {pose['y_m']:+.3f} m {heading:+.1f} deg",
     ]
     route = snapshot.get("route")
-    if route:
+    if route and not route["done"]:
         parts.append(
             f"route {route['step']}/{route['steps']} {route['done_share']:.0%} {route['description']}"
         )
@@ -280,12 +280,12 @@ def _faults(snapshot: Snapshot, width: int) -> list[Line]:
 
 def _route(snapshot: Snapshot, width: int, glyphs: Glyphs) -> list[Line]:
     route = snapshot.get("route")
-    if not route:
+    if not route or (route["done"] and not route["failure"]):
         return []
     share = float(route["done_share"])
     line = Line().add(f"route step {route['step']} of {route['steps']}  ", "bold")
     line.add(gauge(share, max(10, min(30, width - 50)), glyphs), "bar").add(f" {share:4.0%}")
-    line.add(f"  {duration(route['remaining_s'])} left" if not route["done"] else "  done", "dim")
+    line.add(f"  {duration(route['remaining_s'])} left", "dim")
     if route["failure"]:
         return [line, *(Line().add(text, "alarm") for text in textwrap.wrap(route["failure"], width)[:3])]
     return [line, Line().add(f"  {route['description']}")]
