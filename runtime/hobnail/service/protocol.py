@@ -194,7 +194,8 @@ def service_error(detail: str, next_step: str) -> bytes:
     return error_text(None, SERVICE, detail, {"cause": "service", "next": next_step}).encode("ascii")
 
 
-def _log(where: str, error: BaseException) -> None:
+def log_error(where: str, error: BaseException) -> None:
+    """The error sink for when there is no better one: the log."""
     logging.getLogger("hobnail.service").error("%s: %s: %s", where, type(error).__name__, error)
 
 
@@ -247,7 +248,7 @@ class Protocol:
         *,
         methods: Mapping[str, Method] = METHODS,
         always: Collection[str] = ("stop",),
-        on_error: ErrorSink = _log,
+        on_error: ErrorSink = log_error,
     ) -> None:
         self._handler = handler
         self._methods = methods
