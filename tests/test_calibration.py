@@ -264,37 +264,29 @@ def test_a_change_that_would_not_load_is_refused(name: str, values: dict[str, An
 @given(
     trim=st.floats(-0.78, 0.78),
     direction=st.sampled_from([1, -1]),
-    points=st.lists(
-        st.tuples(st.integers(-1999999, 1999999), st.integers(20000, 350000)), min_size=2, max_size=20
-    ),
+    steps=st.lists(st.tuples(st.integers(10000, 100000), st.floats(2.0, 20.0)), min_size=1, max_size=8),
     oscillator=st.floats(20e6, 30e6),
     who=st.text(st.characters(categories=["L", "Nd"]), min_size=1, max_size=60),
 )
 def test_what_is_written_reads_back_the_same(
-    trim: float, direction: int, points: list[tuple[int, int]], oscillator: float, who: str
+    trim: float, direction: int, steps: list[tuple[int, float]], oscillator: float, who: str
 ) -> None:
-    shafts = sorted({shaft for shaft, _ in points})
-    pulses = sorted({pulse for _, pulse in points})
-    count = min(len(shafts), len(pulses))
+    """`steps`: of a pulse map, in 0.0001 degree and us a degree."""
+    points = [(-400000, 600.0)]
+    for width, rate in steps:
+        points.append((points[-1][0] + width, round(points[-1][1] + width / 1e4 * rate, 2)))
     values: dict[str, Any] = {"trim_rad": trim, "direction": direction}
-    if count >= 2:
-        values["pulse_map"] = tuple(
-            (math.radians(shaft / 1e4), pulse / 100)
-            for shaft, pulse in zip(shafts[:count], pulses[:count], strict=True)
-        )
+    values["pulse_map"] = tuple((math.radians(shaft / 1e4), pulse) for shaft, pulse in points)
     empty = Calibration(robot="juniper")
     once = changed(empty, ROBOT, "left-hind.roll", when=WHEN, who=who, **values)
     once = changed(once, ROBOT, "main", when=WHEN, who=who, oscillator_hz=oscillator)
     assert read_whole(render(once).encode()) == once
     joint = once.joints["left-hind.roll"]
     assert joint.trim_rad == pytest.approx(trim, abs=math.radians(0.00006))
-    if count >= 2:
-        assert joint.pulse_map is not None
-        for (shaft, pulse), (want_shaft, want_pulse) in zip(
-            joint.pulse_map, values["pulse_map"], strict=True
-        ):
-            assert shaft == pytest.approx(want_shaft, abs=1e-12)
-            assert pulse == want_pulse
+    assert joint.pulse_map is not None
+    for (shaft, pulse), (want_shaft, want_pulse) in zip(joint.pulse_map, values["pulse_map"], strict=True):
+        assert shaft == pytest.approx(want_shaft, abs=1e-12)
+        assert pulse == want_pulse
     # Another reader of YAML sees the same numbers.
     seen = yaml.safe_load(render(once))
     assert seen["joints"]["left-hind.roll"]["direction"] == direction

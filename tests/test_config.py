@@ -12,7 +12,7 @@ from pathlib import Path
 
 import pytest
 
-from hobnail.config import load_robot
+from hobnail.config import digest_on_disk, load_robot
 from hobnail.config_fields import Field
 from hobnail.config_tables import (
     BOARD,
@@ -124,7 +124,22 @@ def test_source_and_digest_tell_the_file(tmp_path: Path) -> None:
     path.write_text(JUNIPER)
     robot = load_robot(str(path))
     assert robot.source == str(path)
-    assert robot.digest == hashlib.sha256(JUNIPER.encode()).hexdigest()
+    assert robot.digest == hashlib.sha256(JUNIPER.encode()).hexdigest() == digest_on_disk(path)
+
+
+def test_a_change_on_disk_is_seen(tmp_path: Path) -> None:
+    path, beside = tmp_path / "juniper.yaml", tmp_path / "juniper.calibration.yaml"
+    path.write_text(JUNIPER)
+    seen = {digest_on_disk(path)}
+    path.write_text(JUNIPER + "# more\n")
+    seen.add(digest_on_disk(path))
+    beside.write_text("version: 1\n")  # need not be good
+    seen.add(digest_on_disk(str(path)))
+    beside.unlink()
+    path.unlink()
+    seen.add(digest_on_disk(path))
+    assert len(seen) == 4
+    assert "" in seen
 
 
 def test_what_is_left_out_has_the_default_of_the_robot(tmp_path: Path) -> None:
@@ -251,6 +266,12 @@ CROSS_CHECKS = [
         "servos[0].pulse_map_deg_us[2]",
         "rise",
     ),
+    (
+        "[[-135, 500], [135, 2500]]",
+        "[[-13.5, 500], [1.35, 2500]]",
+        "servos[0].pulse_map_deg_us[1]",
+        "us a degree",
+    ),
     ("[[-135, 500], [135, 2500]]", "[[-135, 500]]", "servos[0].pulse_map_deg_us", "list of 2 to 64"),
     (
         "pulse_limits_us: [550, 2450]",
@@ -289,6 +310,7 @@ CROSS_CHECKS = [
     ("rest_height_mm: 72", "rest_height_mm: 170", "stance.rest_height_mm", "less than height_mm, 170 mm"),
     ("belly_mm: 70", "belly_mm: 75", "stance.rest_height_mm", "at least belly_mm, 75 mm"),
     ("[-155, -10]", "[-145, -10]", "stance.rest_height_mm", "left-front.knee would be at"),
+    ("[550, 2450]", "[2400, 2450]", "stance.height_mm", "no angle that its pulse limits"),
     ("knee_bends: backward", "knee_bends: forward", "stance.height_mm", "there is none"),
     ("knee_bends: backward", "knee_bends: backwards", "leg_defaults.knee_bends", "Did you mean backward?"),
     ("lift_mm: 30", "lift_mm: 120", "gaits[0].lift_mm", "less lift"),
@@ -425,7 +447,7 @@ def test_names_that_yaml_takes_for_something_else_need_quotes(told: Told) -> Non
 def test_loading_needs_no_numpy() -> None:
     """The service is to be ready in three times the time of `import numpy`, which it then needs itself."""
     code = (
-        "import sys; from hobnail.config import load_robot; "
+        "import sys; from hobnail.config import digest_on_disk, load_robot; "
         f"load_robot({str(CONFIG / 'juniper.yaml')!r}); print('numpy' in sys.modules)"
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)

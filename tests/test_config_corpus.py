@@ -27,7 +27,7 @@ DATA = yaml.safe_load(JUNIPER)
 BLOCK = damage.dumped(DATA)  # the same without comments, every value on a line of its own
 SCHEMA = json.loads((CONFIG / "hobnail.schema.json").read_text())
 
-# Keys that juniper writes but could leave out, by the README's table of keys (common practice).
+# Keys that juniper writes but could leave out, listed by hand.
 OPTIONAL = {
     "body.com_mm",
     "body.size_mm",

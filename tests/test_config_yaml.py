@@ -82,7 +82,9 @@ def test_refused_at_its_place(data: bytes, line: int, column: int, path: str, te
     assert text in found[3]
 
 
-@pytest.mark.parametrize("data", [b"a: [1, 2\nb: 3\n", b"a: 'x\n", b"a: b: c\n", b"a: }\n", b"@: 1\n", b"%BAD\n", b"a: |\n b\nc"])
+@pytest.mark.parametrize(
+    "data", [b"a: [1, 2\nb: 3\n", b"a: 'x\n", b"a: b: c\n", b"a: }\n", b"@: 1\n", b"%BAD\n", b"a: |\n b\nc"]
+)
 def test_broken_yaml_is_told_with_its_place(data: bytes) -> None:
     line, column, _, text = only_problem(data)
     assert line >= 1

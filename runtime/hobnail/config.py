@@ -49,8 +49,20 @@ def load_robot(path: str | Path) -> Robot:
         raise CalibrationError(problems)
     assert robot is not None
     assert data is not None
-    digest = hashlib.sha256(data + (measured or b"")).hexdigest()
-    return replace(robot, source=str(path), digest=digest)
+    return replace(robot, source=str(path), digest=_digest(data, measured))
+
+
+def digest_on_disk(path: str | Path) -> str:
+    """What `Robot.digest` would be of the two files as they are now; empty when they cannot be read."""
+    path, beside = Path(path), calibration_path(path)
+    report = Report(str(path))
+    data = read_file(path, report)
+    measured = read_file(beside, report) if os.path.lexists(beside) else None
+    return "" if data is None or report.problems() else _digest(data, measured)
+
+
+def _digest(data: bytes, measured: bytes | None) -> str:
+    return hashlib.sha256(data + (measured or b"")).hexdigest()
 
 
 def _read(data: bytes, report: Report) -> Section | None:

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Sequence
+from itertools import pairwise
 from typing import Any
 
 from hobnail.config_fields import Section, nearest
@@ -20,6 +21,7 @@ ALL_CALL = 0x70
 FEWEST_FEET = 2
 # Left of a frame for a board's clock being off, so that a pulse never fills it.
 FRAME_SHARE = 0.95
+PULSE_RATE = (1.0, 100.0)  # us a degree: wide enough for a table's close points
 
 
 def check_robot(robot: Section, report: Report) -> None:
@@ -86,18 +88,23 @@ def _check_addresses(boards: Sequence[Section], supply: Section | None, report: 
 
 
 def check_pulse_map(section: Section, report: Report) -> None:
-    """A pulse map must rise from point to point; one that does not counts as missing from here on."""
+    """A pulse map must rise at a plausible rate; one that does not counts as missing from here on."""
     points = section.values.get("pulse_map_deg_us")
     listing = section.at("pulse_map_deg_us")
     if points is None or not isinstance(listing, Listing):
         return
-    for node, (angle0, pulse0), (angle1, pulse1) in zip(listing.items[1:], points, points[1:], strict=False):
+    degrees = [(math.degrees(angle), pulse) for angle, pulse in points]
+    for node, ((angle0, pulse0), (angle1, pulse1)) in zip(listing.items[1:], pairwise(degrees), strict=True):
+        found = f"{angle0:g} to {angle1:g} deg from {pulse0:g} to {pulse1:g} us"
         if angle1 <= angle0 or pulse1 <= pulse0:
-            angles = f"{math.degrees(angle0):g} to {math.degrees(angle1):g} deg"
-            found = f"{angles} from {pulse0:g} to {pulse1:g} us"
             hint = "For a servo that turns the other way set direction: -1 at its joint."
             report.add(node, found, "points that rise in angle and in pulse", hint)
-            section.values.pop("pulse_map_deg_us", None)
+        elif not PULSE_RATE[0] <= (pulse1 - pulse0) / (angle1 - angle0) <= PULSE_RATE[1]:
+            allowed = f"{PULSE_RATE[0]:g} to {PULSE_RATE[1]:g} us a degree"
+            report.add(node, found, allowed, "Most servos have 5 to 12.")
+        else:
+            continue
+        section.values.pop("pulse_map_deg_us", None)
 
 
 def _check_hips(legs: Sequence[Section], report: Report) -> None:
@@ -231,7 +238,7 @@ def _check_swing(gait: Section, report: Report) -> None:
     frames = [frame.values for frame in swing]
     if any(len(frame) < 3 for frame in frames):
         return
-    for node, before, after in zip(listing.items[1:], frames, frames[1:], strict=False):
+    for node, (before, after) in zip(listing.items[1:], pairwise(frames), strict=True):
         if after["time"] <= before["time"]:
             report.add(node, f"time {after['time']:g}", f"more than {before['time']:g}, the one before")
     for index, end in ((0, 0.0), (-1, 1.0)):

@@ -34,12 +34,16 @@ class Reach:
     def obstacle(self, height_m: float, lift_m: float = 0.0) -> str:
         """What keeps the feet from that height of the body above them; empty when nothing does."""
         for leg, kinematics, spans, (x, y) in self._legs:
-            down = height_m - lift_m - leg.foot_radius_m + leg.hip_m[2]
+            at = (x - leg.hip_m[0], y - leg.hip_m[1], lift_m + leg.foot_radius_m - height_m - leg.hip_m[2])
+            if not kinematics.nearest2 <= sum(each * each for each in at) <= kinematics.farthest2:
+                return f"leg {leg.name} cannot reach"
             try:
-                angles = kinematics.angles(x - leg.hip_m[0], y - leg.hip_m[1], -down)
+                angles = kinematics.angles(*at)
             except ValueError:
                 return f"leg {leg.name} cannot reach"
             for joint, angle, (low, high) in zip(leg.joints, angles, spans, strict=True):
+                if low > high:
+                    return f"{joint.name} has no angle that its pulse limits and its angle limits both allow"
                 if not low <= angle <= high:
                     limits = f"{math.degrees(low):.0f} to {math.degrees(high):.0f} deg"
                     return f"{joint.name} would be at {math.degrees(angle):.0f} deg, its limits {limits}"
