@@ -108,13 +108,18 @@ class SimulatedDriver(Driver):
         self._move()
         if targets == self._targets:
             return
+        if None in self._shafts:
+            self._take_worst(targets)
+        self._targets = targets
+        self.dropped += len(self.transitions) == self.transitions.maxlen
+        self.transitions.append(Transition(self._moved_s, targets))
+
+    def _take_worst(self, targets: tuple[float | None, ...]) -> None:
+        """Shafts that get their first pulse now lay at the hard limit farther from it."""
         for index, (target, shaft) in enumerate(zip(targets, self._shafts, strict=True)):
             if target is not None and shaft is None:
                 low, high = self._limits[index]
                 self._shafts[index] = low if target - low > high - target else high
-        self._targets = targets
-        self.dropped += len(self.transitions) == self.transitions.maxlen
-        self.transitions.append(Transition(self._moved_s, targets))
 
     def _move(self) -> None:
         """Turn every shaft to where it is by now."""

@@ -73,10 +73,13 @@ def test_outputs_are_full_off_before_the_oscillator_wakes(clock: ManualClock, pl
     assert not chip.hears(0x70)
 
 
-def test_a_board_that_a_dead_program_left_pulsing_ends_each_pulse_whole(clock: ManualClock) -> None:
+@pytest.mark.parametrize("frames", [2.0, 2.3, 2.6, 2.9])
+def test_a_board_that_a_dead_program_left_pulsing_ends_each_pulse_whole(
+    clock: ManualClock, frames: float
+) -> None:
     driver, _, chip = opened(clock)
-    driver.write([1500.0] * 12)
-    clock.sleep(2.6 * FRAME_S)
+    driver.write([2500.0] * 12)
+    clock.sleep(frames * FRAME_S)
     fresh = Pca9685Driver(
         [board()], outputs(), open_bus=lambda _: driver.buses[1], sleep=clock.sleep
     )  # as after a crash: nothing was released

@@ -206,6 +206,19 @@ def test_new_counts_cut_no_running_pulse(bench: Bench, at_share: float) -> None:
     assert bench.chip.doubled() == []
 
 
+@pytest.mark.parametrize("at_share", [0.1, 0.3, 0.7])
+@pytest.mark.parametrize("rises", [(1000, 100), (100, 1000)])
+def test_a_moved_rise_doubles_no_pulse(bench: Bench, at_share: float, rises: tuple[int, int]) -> None:
+    bench.start()
+    bench.channel(3, rises[0], rises[0] + 500)
+    bench.clock.sleep((3 + at_share) * FRAME_S)
+    bench.channel(3, rises[1], rises[1] + 500)
+    bench.clock.sleep(5 * FRAME_S)
+    assert len(bench.chip.seen()) >= 5
+    assert bench.chip.cut() == []
+    assert bench.chip.doubled() == []
+
+
 def test_full_off_lets_the_running_pulse_end(bench: Bench) -> None:
     bench.start()
     bench.channel(0, 0, 2048)
