@@ -87,9 +87,12 @@ def _dispatch(words: list[str]) -> int:
             print(_overview())
             return 0 if words else EX_USAGE
     if words[0] == "--version":
-        from importlib.metadata import version
+        from importlib.metadata import PackageNotFoundError, version
 
-        print(f"hobnail {version('hobnail')}")
+        try:
+            print(f"hobnail {version('hobnail')}")
+        except PackageNotFoundError:  # run from the source tree
+            print("hobnail (not installed, version unknown)")
         return 0
     name = words[0]
     if name not in COMMANDS:

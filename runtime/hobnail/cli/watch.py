@@ -55,9 +55,10 @@ def print_lines(snapshots: Iterable[dict[str, Any]], clock: Callable[[], float] 
     for snapshot in snapshots:
         route = snapshot.get("route") or {}
         now = (snapshot["state"], route.get("step"), [fault["name"] for fault in snapshot["faults"]])
-        if now != last or clock() - last_s >= 1.0:
+        now_s = clock()
+        if now != last or now_s - last_s >= 1.0:
             print(one_line(snapshot), flush=True)
-            last_s, last = clock(), now
+            last_s, last = now_s, now
 
 
 def _draw(view: View, snapshots: Iterable[dict[str, Any]]) -> None:
