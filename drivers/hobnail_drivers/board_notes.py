@@ -14,16 +14,24 @@ import os
 from collections.abc import Iterable, Mapping
 
 FILE_NAME = "boards"
+SYSTEM_DIRECTORY = "/run/hobnail"
 
 
 def default_path(environment: Mapping[str, str] = os.environ) -> str:
-    """The note in the service's runtime directory, else in that of the system's service, else the user's."""
-    if directory := environment.get("RUNTIME_DIRECTORY"):
-        return os.path.join(directory.split(":")[0], FILE_NAME)
-    if os.path.isdir("/run/hobnail"):
-        return os.path.join("/run/hobnail", FILE_NAME)
-    directory = environment.get("XDG_RUNTIME_DIR") or f"/tmp/hobnail-{os.getuid()}"
-    return os.path.join(directory, "hobnail", FILE_NAME)
+    """The note beside the service's socket, wherever that is by default.
+
+    In the directory of $HOBNAIL_SOCKET, else in $RUNTIME_DIRECTORY, else where
+    the system's service keeps it if it does, else in the user's runtime directory.
+    """
+    if socket := environment.get("HOBNAIL_SOCKET"):
+        directory = os.path.dirname(socket)
+    elif runtime := environment.get("RUNTIME_DIRECTORY"):
+        directory = runtime.split(":")[0]
+    elif os.path.exists(os.path.join(SYSTEM_DIRECTORY, FILE_NAME)):
+        directory = SYSTEM_DIRECTORY
+    else:
+        directory = environment.get("XDG_RUNTIME_DIR") or f"/tmp/hobnail-{os.getuid()}"
+    return os.path.join(directory, FILE_NAME)
 
 
 def note_boards(path: str | os.PathLike[str], notes: Iterable[str]) -> None:

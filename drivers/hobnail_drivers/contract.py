@@ -108,7 +108,7 @@ class Driver(ABC):
     """
 
     takes_argument: ClassVar[bool] = False
-    is_model: ClassVar[bool] = False  # no hardware behind it: nothing moves in the room
+    is_model: bool = False  # no hardware behind it: nothing moves in the room
 
     def __init__(
         self, boards: Sequence[BoardSettings], outputs: Sequence[Output], *, argument: str = ""

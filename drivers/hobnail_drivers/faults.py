@@ -78,6 +78,7 @@ class FaultyDriver(Driver):
     def __init__(self, inner: Driver, plan: FaultInjector) -> None:
         super().__init__(inner.boards, inner.outputs)
         self.inner = inner
+        self.is_model = inner.is_model
         self._plan = plan
 
     def notes(self) -> tuple[str, ...]:

@@ -38,8 +38,12 @@ while True:
 def run(*arguments: str, **environment: str) -> subprocess.CompletedProcess[str]:
     return subprocess.run(
         [sys.executable, "-m", "hobnail_drivers.release", *arguments],
-        capture_output=True, text=True, check=False, timeout=30, env={**os.environ, **environment},
-    )  # fmt: skip
+        capture_output=True,
+        text=True,
+        check=False,
+        timeout=30,
+        env={**os.environ, "HOBNAIL_SOCKET": "", **environment},
+    )
 
 
 def chips(path: Path) -> dict[str, Chip]:
@@ -262,8 +266,25 @@ def test_a_bus_that_hangs_is_given_up_and_the_other_is_done(killed: Path) -> Non
     assert all(chip.is_full_off() for chip in chips(killed / "chips").values())
 
 
-def test_where_the_note_lies(tmp_path: Path) -> None:
-    assert board_notes.default_path({"RUNTIME_DIRECTORY": "/run/hobnail-a:/run/b"}) == "/run/hobnail-a/boards"
-    if not os.path.isdir("/run/hobnail"):
-        path = board_notes.default_path({"XDG_RUNTIME_DIR": str(tmp_path)})
-        assert path == str(tmp_path / "hobnail" / "boards")
+@pytest.mark.parametrize(
+    ("environment", "path"),
+    [
+        ({"RUNTIME_DIRECTORY": "/run/one:/run/two"}, "/run/one/boards"),
+        ({"HOBNAIL_SOCKET": "/srv/a/hobnail.sock", "RUNTIME_DIRECTORY": "/run/one"}, "/srv/a/boards"),
+        ({"XDG_RUNTIME_DIR": "/run/user/7"}, "/run/user/7/boards"),
+        ({}, f"/tmp/hobnail-{os.getuid()}/boards"),
+    ],
+)
+def test_the_note_lies_beside_the_socket(
+    monkeypatch: pytest.MonkeyPatch, tmp_path: Path, environment: dict[str, str], path: str
+) -> None:
+    monkeypatch.setattr(board_notes, "SYSTEM_DIRECTORY", str(tmp_path))
+    assert board_notes.default_path(environment) == path
+
+
+def test_the_note_of_the_systems_service_comes_before_the_users(
+    monkeypatch: pytest.MonkeyPatch, tmp_path: Path
+) -> None:
+    monkeypatch.setattr(board_notes, "SYSTEM_DIRECTORY", str(tmp_path))
+    note_boards(tmp_path / "boards", [])
+    assert board_notes.default_path({"XDG_RUNTIME_DIR": "/run/user/7"}) == str(tmp_path / "boards")
