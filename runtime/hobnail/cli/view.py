@@ -120,8 +120,11 @@ class View:
             (2, _place(snapshot)),
             (4, _timing(snapshot)),
         ]
-        while sum(len(block) + 1 for _, block in blocks if block) - 1 > height and len(blocks) > 1:
-            blocks.remove(max(blocks, key=lambda ranked: ranked[0]))
+        while sum(len(block) + 1 for _, block in blocks if block) - 1 > height:
+            least = max(blocks, key=lambda ranked: ranked[0])
+            if least[0] == 0:
+                break
+            blocks.remove(least)
         lines: list[Line] = []
         for _, block in blocks:
             if block:
