@@ -72,7 +72,8 @@ class Foot:
 
     `x`, `y` are the foot's place in the ground frame, `lift_m` its height above
     where it stands; `phase` is the share of the cycle since its touch-down;
-    `load` the share of the robot's weight that it is taken to carry.
+    `load` the share of the robot's weight that it is taken to carry; `swung_kg` the
+    mass that moves with the foot.
     """
 
     __slots__ = (
@@ -89,6 +90,7 @@ class Foot:
         "radius_m",
         "stepped",
         "swing",
+        "swung_kg",
         "x",
         "y",
     )
@@ -106,6 +108,8 @@ class Foot:
         self.radius_m = leg.foot_radius_m
         self.limits = limits
         self.neutral = neutral
+        knee_share = leg.upper_m / (leg.upper_m + leg.lower_m)  # of the foot's way
+        self.swung_kg = 0.5 * (leg.upper_kg * knee_share + leg.lower_kg * (1.0 + knee_share))
         self.offset = 0.0  # the gait's relative phase
         self.phase = 0.0
         self.x, self.y = neutral

@@ -52,6 +52,12 @@ class FootPath:
             b0 + b1 * s + s3 * (b3 + s * (b4 + s * b5)),
         )
 
+    def bend(self, u: float) -> float:
+        """Second derivative of the travel by the share `u` of the swing."""
+        start, per_time, (_, _, a3, a4, a5), _ = self._segments[bisect_right(self._starts, u)]
+        s = (u - start) * per_time
+        return per_time * per_time * s * (6.0 * a3 + s * (12.0 * a4 + s * 20.0 * a5))
+
 
 def _segments(times: Sequence[float], values: Sequence[float]) -> list[tuple[float, ...]]:
     """Coefficients (s^0, s^1, s^3, s^4, s^5) of each segment over its own time 0..1."""

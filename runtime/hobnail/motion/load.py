@@ -3,7 +3,7 @@ round foot on a slow servo where a rigid, pointed one would be.
 
 Sag: a hobby servo holds with a stiffness k; a torque turns its shaft by
 torque/k.  Commanding the opposite in advance removes it (virtual work: the
-ground's force f on the foot makes the torque f dz/dq on each joint).
+ground's force f on the foot makes the torque f . dp/dq on each joint).
 Trailing: a motor that turns at w gives less torque by w times stall torque over
 no-load speed, the slope of its torque-speed line; its position loop trails by
 that over k, a fixed time, by which the command goes ahead.
@@ -40,18 +40,21 @@ class LegCorrection:
         self.trail_s = (a, b, c)  # by which each servo trails a steady motion
         self.active = self._radius_m > 0.0 or any(self._give)
 
-    def apply(self, roll: float, hip: float, knee: float, y: float, z: float, force_n: float) -> Vec3:
+    def apply(self, roll: float, hip: float, knee: float, y: float, z: float, force_n: Vec3) -> Vec3:
         """Angles to command for the geometric angles (rad), the foot's y and z relative to
-        the hip (m) and the upward force of the ground on it (N)."""
+        the hip (m) and the force of the ground on it (body frame, N)."""
         shank = hip + knee
         shank_x = -self._lower_m * math.sin(shank)
         foot_x = shank_x - self._upper_m * math.sin(hip)
         give = self._give
-        # Sag: minus f/k dz/dq.
-        down = force_n * math.cos(roll)
-        roll_by = -force_n * y * give[0]
-        hip_by = down * foot_x * give[1]
-        knee_by = down * shank_x * give[2]
+        # Sag: minus f/k dp/dq.
+        ahead, left, up = force_n
+        push = up * math.cos(roll) - left * math.sin(roll)
+        shank_z = -self._lower_m * math.cos(shank)
+        foot_z = shank_z - self._upper_m * math.cos(hip)
+        roll_by = (left * z - up * y) * give[0]
+        hip_by = (push * foot_x - ahead * foot_z) * give[1]
+        knee_by = (push * shank_x - ahead * shank_z) * give[2]
         radius = self._radius_m
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.

@@ -27,7 +27,7 @@ class GaitPlan:
     """A gait on a robot: its foot path, sway and load transfer, how far each foot may be
     led from neutral, and how commands are fitted to all that."""
 
-    __slots__ = ("_neutral", "_robot", "_table", "gait", "load_ramp", "path", "reach_m", "sway")
+    __slots__ = ("_neutral", "_robot", "_table", "arm2_m2", "gait", "load_ramp", "path", "reach_m", "sway")
 
     def __init__(self, robot: Robot, gait: Gait, feet: Sequence[Foot]) -> None:
         self._robot = robot
@@ -42,6 +42,9 @@ class GaitPlan:
             min(reach_radius(foot.kinematics, foot.limits, neutral, gait.lift_m), space)
             for foot, neutral, space in zip(feet, neutrals, room, strict=True)
         ]
+        # Mean square distance of the feet from the body: a turning moment over it is the
+        # force over arm of each.
+        self.arm2_m2 = sum(x * x + y * y for x, y in self._neutral) / len(feet)
         self._table: CycleTable | None = None
         if gait.cycle_s is None:
             self._table = CycleTable(

@@ -22,7 +22,7 @@ def exp_twist(vx: float, vy: float, yaw_rate: float, time_s: float) -> Pose:
     if half == 0.0:
         return vx * time_s, vy * time_s, 0.0
     s = sin(half)
-    chord = time_s * s / half
+    chord = time_s * (s / half)
     c = cos(half)
     return chord * (c * vx - s * vy), chord * (s * vx + c * vy), 2.0 * half
 

@@ -21,9 +21,11 @@ NONE: Vec2 = (0.0, 0.0)
 INSTANT_S = 1e-4
 # A shift of less than this needs no time before the first foot lifts.
 LEAD_M = 0.002
+# Coefficients below this are rounding (m, or m per m/s).
+NOTHING = 1e-9
 
 
-Series = list[complex]  # coefficients of the harmonics 0..HARMONICS
+Shift = tuple[float, float, float, float]
 
 
 class PeriodicSway:
@@ -35,7 +37,7 @@ class PeriodicSway:
     linear inverted pendulum (Kajita et al. 2001) with that zero-moment point.
     """
 
-    __slots__ = ("_base", "_height_term", "_sweep", "_turn", "active", "leads")
+    __slots__ = ("_height_term", "_terms", "active", "leads")
 
     def __init__(self, feet: Sequence[Vec2], gait: Gait, height_m: float) -> None:
         share, duty = gait.body_shift, gait.duty
@@ -59,30 +61,36 @@ class PeriodicSway:
                     turn_y[k] += x * swept
         # The neutral stance has the mean of the centroids under the body already.
         base_x[0] = base_y[0] = 0j
-        self._base = list(zip(base_x, base_y, strict=True))
-        self._sweep: Series = sweep
-        self._turn = list(zip(turn_x, turn_y, strict=True))
+        # A gait of two alternating sets of feet has every second harmonic only.
+        self._terms = [
+            term
+            for term in zip(range(HARMONICS + 1), base_x, base_y, sweep, turn_x, turn_y, strict=True)
+            if any(abs(part) > NOTHING for part in term[1:])
+        ]
         self._height_term = height_m / GRAVITY_M_S2 * (2.0 * math.pi) ** 2
-        self.active = share > 0.0
+        self.active = bool(self._terms)
         # Whether the body must be over its support before the first foot lifts.
-        self.leads = any(abs(x) + abs(y) > LEAD_M for x, y in self._base)
+        self.leads = any(abs(x) + abs(y) > LEAD_M for x, y in zip(base_x, base_y, strict=True))
 
-    def at(self, clock: float, pace: Sequence[float]) -> Vec2:
-        """Shift (m) at a time of the cycle, for a pace (vx, vy, yaw rate, cycle rate)."""
+    def at(self, clock: float, pace: Sequence[float]) -> Shift:
+        """Shift (m) and its acceleration (m/s^2), (x, y, ax, ay), at a time of the cycle for
+        a pace (vx, vy, yaw rate, cycle rate)."""
         vx, vy, yaw_rate, rate_hz = pace
-        vx, vy, yaw_rate = vx / rate_hz, vy / rate_hz, yaw_rate / rate_hz
-        turn = cmath.exp(2j * math.pi * clock)
+        cycle_s = 1.0 / rate_hz
+        angle = 2.0 * math.pi * clock
+        bend = (2.0 * math.pi * rate_hz) ** 2
         stiff = self._height_term * rate_hz * rate_hz
-        wave = 1.0 + 0j
-        x = y = 0.0
-        for k, ((base_x, base_y), sweep, (turn_x, turn_y)) in enumerate(
-            zip(self._base, self._sweep, self._turn, strict=True)
-        ):
-            share = wave / (1.0 + stiff * k * k)
-            x += ((base_x + vx * sweep + yaw_rate * turn_x) * share).real
-            y += ((base_y + vy * sweep + yaw_rate * turn_y) * share).real
-            wave *= turn if k else 2.0 * turn  # both signs of each harmonic but the mean
-        return x, y
+        x = y = ax = ay = 0.0
+        for k, base_x, base_y, sweep, turn_x, turn_y in self._terms:
+            # Both signs of each harmonic but the mean.
+            wave = cmath.rect((2.0 if k else 1.0) / (1.0 + stiff * k * k), k * angle)
+            along = ((base_x + cycle_s * (vx * sweep + yaw_rate * turn_x)) * wave).real
+            across = ((base_y + cycle_s * (vy * sweep + yaw_rate * turn_y)) * wave).real
+            x += along
+            y += across
+            ax -= bend * k * k * along
+            ay -= bend * k * k * across
+        return x, y, ax, ay
 
 
 def _integrals(k: int, start: float, length: float) -> tuple[complex, complex]:
@@ -95,20 +103,22 @@ def _integrals(k: int, start: float, length: float) -> tuple[complex, complex]:
     return still, (still - length * last) / turn
 
 
-SwayState = tuple[Vec2, Vec2, tuple[Motion, Motion], float]
+SwayState = tuple[Vec2, Vec2, Vec2, tuple[Motion, Motion], float]
 
 
 class BodyShift:
     """The shift that the body has: that of its plan, eased over when the plan changes.
 
-    `plan` None is standing: no shift.
+    `plan` None is standing: no shift.  `value` is the shift (m), `acceleration` its
+    second derivative (m/s^2), along the body's x and y.
     """
 
-    __slots__ = ("_ease", "_left_s", "_speed", "plan", "value")
+    __slots__ = ("_ease", "_left_s", "_speed", "acceleration", "plan", "value")
 
     def __init__(self) -> None:
         self.plan: PeriodicSway | None = None
         self.value = NONE
+        self.acceleration = NONE
         self._speed = NONE
         self._ease: tuple[Motion, Motion] = (AT_REST, AT_REST)
         self._left_s = 0.0
@@ -132,25 +142,26 @@ class BodyShift:
 
     def advance(self, time_s: float, clock: float, pace: Sequence[float]) -> None:
         """Move on by `time_s`, at the end of which the gait clock is at `clock`."""
-        x, y = self._planned(clock, pace)
+        x, y, ax, ay = self._planned(clock, pace)
         left = self._left_s
         if left > 0.0:
             ease_x, ease_y = self._ease
             self._ease = (settle(ease_x, time_s, left), settle(ease_y, time_s, left))
             self._left_s = max(left - time_s, 0.0)
-            x += self._ease[0][0]
-            y += self._ease[1][0]
+            (ease_x, _, bend_x), (ease_y, _, bend_y) = self._ease
+            x, y, ax, ay = x + ease_x, y + ease_y, ax + bend_x, ay + bend_y
         if time_s > 0.0:
             self._speed = ((x - self.value[0]) / time_s, (y - self.value[1]) / time_s)
         self.value = (x, y)
+        self.acceleration = (ax, ay)
 
-    def _planned(self, clock: float, pace: Sequence[float]) -> Vec2:
-        return self.plan.at(clock, pace) if self.plan else NONE
+    def _planned(self, clock: float, pace: Sequence[float]) -> Shift:
+        return self.plan.at(clock, pace) if self.plan else (0.0, 0.0, 0.0, 0.0)
 
     def state(self) -> SwayState:
         """A snapshot for `restore`; the plan is not part of it."""
-        return self.value, self._speed, self._ease, self._left_s
+        return self.value, self.acceleration, self._speed, self._ease, self._left_s
 
     def restore(self, state: SwayState) -> None:
         """Go back to a snapshot."""
-        self.value, self._speed, self._ease, self._left_s = state
+        self.value, self.acceleration, self._speed, self._ease, self._left_s = state

@@ -57,7 +57,7 @@ class Walker:
         self, robot: Robot, limits_rad: Sequence[tuple[Span, ...]], *, at_rest: bool = False
     ) -> None:
         self._robot = robot
-        self._weight_n = robot.mass_kg * GRAVITY_M_S2
+        self._mass_kg = robot.mass_kg
         rates = robot.posture_limits
         self._posture = Glide(
             [robot.stance.rest_height_m if at_rest else robot.stance.height_m, *[0.0] * 5],
@@ -77,6 +77,8 @@ class Walker:
         self._fitted: Twist = STILL  # the same, within what may be asked
         self._pace = Slew([0.0, 0.0, 0.0, 1.0])  # vx, vy, yaw rate, cycles a second
         self._shift = BodyShift()
+        # What drives the legs in the air: force (ground frame, N) and moment (N m).
+        self._swing_drive: Vec3 = (0.0, 0.0, 0.0)
         self._walking = False  # the gait clock runs
         self._checking = False  # feet may be led out of reach: look ahead every tick
         self._planting = False  # once the body is still no foot may lift any more
@@ -246,6 +248,8 @@ class Walker:
         path = plan.path
         ramp = plan.load_ramp
         weights = []
+        push_x = push_y = spin = 0.0
+        x0, y0, _ = self._pose
         for foot in self._feet:
             old = foot.phase
             phase = foot.phase = (clock - foot.offset) % 1.0
@@ -269,6 +273,13 @@ class Walker:
                 foot.x, foot.y, lift = swing.at(path, (phase - duty) / airtime)
                 foot.lift_m = lift_m * lift
                 weight = 0.0
+                thrust = foot.swung_kg * path.bend((phase - duty) / airtime) * (rate / airtime) ** 2
+                push_x += thrust * (swing.target[0] - swing.start[0])
+                push_y += thrust * (swing.target[1] - swing.start[1])
+                spin += thrust * (
+                    (foot.x - x0) * (swing.target[1] - swing.start[1])
+                    - (foot.y - y0) * (swing.target[0] - swing.start[0])
+                )
             elif phase >= duty:
                 weight = 1.0
             elif phase < ramp:
@@ -278,6 +289,7 @@ class Walker:
             else:
                 weight = 1.0
             weights.append(weight)
+        self._swing_drive = (push_x, push_y, spin)
         self._share_load(time_s, weights)
 
     def _share_load(self, time_s: float, weights: Sequence[float]) -> None:
@@ -402,8 +414,18 @@ class Walker:
 
     def _solve(self) -> None:
         raised = (self._posture.value[0] - self._robot.stance.rest_height_m) / LOADING_M
-        weight = self._weight_n * min(max(raised, 0.0), 1.0)
-        self.body.solve(self._feet, self._pose, self._shift.value, self._posture.value, weight)
+        mass = self._mass_kg * min(max(raised, 0.0), 1.0)
+        shift = self._shift
+        (ahead, left), slope = shift.acceleration, self._pace.slope
+        c, s = math.cos(self._pose[2]), math.sin(self._pose[2])
+        x, y, spin = self._swing_drive
+        drive = (
+            mass * (ahead + slope[0]) + c * x + s * y,
+            mass * (left + slope[1]) + c * y - s * x,
+            mass * GRAVITY_M_S2,
+            spin / self._plan.arm2_m2,
+        )
+        self.body.solve(self._feet, self._pose, shift.value, self._posture.value, drive)
 
     def _clamp(self, before: tuple[Vec3, ...], steps_rad: Sequence[Vec3]) -> None:
         """The last resort: hold each joint to its step, off the path, and count it."""

@@ -13,6 +13,10 @@ from hobnail.motion.foot import Foot
 from hobnail.motion.planar import Pose
 from hobnail.robot import Span, Vec2, Vec3
 
+# What the ground does through all feet together: force ahead, left and up (N), and the
+# turning about the body, as force over arm for a foot that carries everything (N/m).
+Drive = tuple[float, float, float, float]
+
 
 class WholeBody:
     """The latest solution: `pose` of the body on the ground (x, y, yaw), `feet_m` in the
@@ -34,11 +38,12 @@ class WholeBody:
         pose: Pose,
         shift_m: Vec2,
         posture: Sequence[float],
-        weight_n: float,
+        drive: Drive,
     ) -> None:
         """Solve for the walk's `pose`, the body's `shift_m` over its supports, the
-        `posture` (height, roll, pitch, yaw, lean x, lean y) and the weight that the feet
-        carry."""
+        `posture` (height, roll, pitch, yaw, lean x, lean y) and what the ground does to the
+        robot through its feet.
+        """
         height, roll, pitch, yaw, lean_x, lean_y = posture
         x0, y0, heading = pose
         c, s = math.cos(heading), math.sin(heading)
@@ -54,6 +59,7 @@ class WholeBody:
             cr, sr, cp, sp = math.cos(roll), math.sin(roll), math.cos(pitch), math.sin(pitch)
         feet_m, joints, loaded = [], [], []
         self.out_of_reach = 0
+        ahead, left, up, spin = drive
         for foot in feet:
             dx, dy = foot.x - x0, foot.y - y0
             x, y, z = c * dx + s * dy, c * dy - s * dx, foot.radius_m + foot.lift_m - height
@@ -75,7 +81,9 @@ class WholeBody:
             feet_m.append((x, y, z))
             joints.append(angles)
             if foot.correction.active:
-                angles = foot.correction.apply(*angles, at_y, at_z, foot.load * weight_n)
+                load = foot.load
+                push = (load * (ahead - spin * y), load * (left + spin * x), load * up)
+                angles = foot.correction.apply(*angles, at_y, at_z, push)
                 angles = hold(angles, foot.limits)
             loaded.append(angles)
         self.feet_m = tuple(feet_m)
