@@ -117,6 +117,15 @@ def test_the_chip_library_agrees(clock: ManualClock) -> None:
     assert chip.registers[r.PRE_SCALE] == r.pre_scale(25e6, 100.0) == 60
 
 
+def test_a_scan_finds_the_boards_and_all_call_only_before_the_set_up(clock: ManualClock) -> None:
+    driver = two_boards(clock)
+    driver.buses[1].open()
+    bus = RegisterBus(driver.buses[1])
+    assert bus.scan() == [0x40, 0x41, 0x70]
+    driver.open()
+    assert bus.scan() == [0x40, 0x41]
+
+
 @settings(max_examples=200, deadline=None)
 @given(
     oscillator_hz=st.floats(23e6, 27e6),
