@@ -132,19 +132,34 @@ def test_a_log_that_goes_to_a_file_is_not_held_back(
     assert "line" not in terminal.getvalue()
 
 
-def test_a_pipe_gets_a_line_for_each_change(capsys: pytest.CaptureFixture[str]) -> None:
+def step(number: int) -> dict[str, Any]:
+    """A snapshot in that step of a route."""
+    route = {"step": number, "steps": 9, "description": f"part {number}", "done_share": 0.5, "done": False}
+    return snapshot(route=route)
+
+
+def test_a_pipe_gets_a_line_for_each_step_and_nothing_that_the_log_tells_already(
+    capsys: pytest.CaptureFixture[str],
+) -> None:
     with Display(juniper()) as display:
-        for told in (snapshot(), snapshot(), snapshot(state="standing"), snapshot(faults=[fault()])):
+        for told in (
+            snapshot(),
+            snapshot(state="standing"),
+            step(1),
+            step(1),
+            step(3),
+            snapshot(faults=[fault()]),
+        ):
             display.show(told)
-    out = capsys.readouterr().out
-    assert len(out.splitlines()) == 3
-    assert "\x1b" not in out
+    lines = capsys.readouterr().out.splitlines()
+    assert [line.split("  ")[-1] for line in lines] == ["route 1/9 50% part 1", "route 3/9 50% part 3"]
+    assert not any("\x1b" in line for line in lines)
 
 
 def test_plain_asks_for_lines_on_a_terminal_too(monkeypatch: pytest.MonkeyPatch) -> None:
     terminal = on_a_terminal(monkeypatch)
     with Display(juniper(), plain=True) as display:
-        display.show(snapshot())
+        display.show(step(2))
     assert "walking" in terminal.getvalue()
     assert "\x1b" not in terminal.getvalue()
 
@@ -156,7 +171,7 @@ def test_a_view_that_breaks_is_given_up_and_the_sum_goes_on(monkeypatch: pytest.
 
     monkeypatch.setattr(sys, "stdout", Closed())
     with Display(juniper()) as display:
-        display.show(snapshot(now_s=0.0))
+        display.show({**step(1), "now_s": 0.0})
         display.show(snapshot(now_s=1.0, state="standing"))
     assert "BrokenPipeError" in display.trouble
     assert display.summary.last is not None

@@ -10,29 +10,12 @@ from pathlib import Path
 
 import pytest
 
+from command_line import hobnail, subprocess_environment
 from hobnail.cli import main as main_module
 from hobnail.cli.main import COMMANDS, command, main
 from hobnail.errors import CommanderError, ConfigError, HobnailError, Problem, StateError
 
 NAMES = list(COMMANDS)
-
-
-def subprocess_environment(**changes: str) -> dict[str, str]:
-    """The environment for a process that must find what this one finds."""
-    path = os.pathsep.join(entry for entry in sys.path if entry)
-    return {**os.environ, "PYTHONPATH": path, **changes}
-
-
-def hobnail(*words: str, **changes: str) -> subprocess.CompletedProcess[str]:
-    """`hobnail` as a process of its own."""
-    return subprocess.run(
-        [sys.executable, "-m", "hobnail.cli.main", *words],
-        env=subprocess_environment(**changes),
-        capture_output=True,
-        text=True,
-        check=False,
-        timeout=60,
-    )
 
 
 @pytest.mark.parametrize("words", [["--help"], ["-h"], ["help"]])

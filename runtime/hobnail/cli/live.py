@@ -27,6 +27,7 @@ class Summary:
         self.distance_m = 0.0
         self.turned_rad = 0.0
         self.faults: dict[str, int] = {}
+        self.route: dict[str, Any] | None = None  # the last one seen: a stop takes it away
         self._speeds = (0.0, 0.0)
 
     def add(self, snapshot: dict[str, Any]) -> None:
@@ -40,6 +41,7 @@ class Summary:
         self._speeds = (speed, rate)
         for fault in snapshot["faults"]:
             self.faults[fault["name"]] = max(fault["count"], self.faults.get(fault["name"], 0))
+        self.route = snapshot.get("route") or self.route
         self.last = snapshot
 
     def as_json(self) -> dict[str, object]:
@@ -55,7 +57,7 @@ class Summary:
             "counters": last.get("counters"),
             "faults": self.faults,
             "stop": last.get("stop"),
-            "route": last.get("route"),
+            "route": self.route,
         }
 
     def lines(self) -> list[str]:
@@ -75,7 +77,7 @@ class Summary:
         ]
         faults = ", ".join(name if count == 1 else f"{name} x{count}" for name, count in self.faults.items())
         lines.append(f"  faults    {faults or 'none'}")
-        route = last.get("route")
+        route = self.route
         if route:
             done = (
                 f"all {route['steps']} steps" if not route["failure"] and route["done"] else route["failure"]
@@ -87,7 +89,7 @@ class Summary:
 
 
 class Display:
-    """The live view on a terminal, else a line for each change; `summary` adds up either way."""
+    """The live view on a terminal, else a line for each step of a route; `summary` adds up either way."""
 
     def __init__(self, robot: Robot, *, plain: bool = False, color: bool = True) -> None:
         envelope = robot.envelope
@@ -100,7 +102,7 @@ class Display:
             glyphs=UNICODE if speaks_unicode() else ASCII,
             color=wants_color(refused=not color),
         )
-        self._told: object = None
+        self._told = 0  # the step of a route
         self._stderr = sys.stderr
         self._tail: _Tail | None = None
 
@@ -140,10 +142,10 @@ class Display:
                 print(self._tail.text(), end="", file=sys.stderr)
 
     def _print(self, snapshot: dict[str, Any]) -> None:
-        route = snapshot.get("route") or {}
-        now = (snapshot["state"], route.get("step"), [fault["name"] for fault in snapshot["faults"]])
-        if now != self._told:
-            self._told = now
+        # States and faults are in the log already; a second line for each would only fill a journal.
+        route = snapshot.get("route")
+        if route and not route["done"] and route["step"] != self._told:
+            self._told = route["step"]
             print(one_line(snapshot), flush=True)
 
 

@@ -1,0 +1,111 @@
+"""`hobnail check`: what it finds on the demo robots, and that it finds what is made wrong."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import replace
+
+import pytest
+
+from hobnail.cli.main import main
+from hobnail.workshop.check import Check, check
+from robots import CONFIG, bramble, juniper
+
+Output = pytest.CaptureFixture[str]
+
+
+@pytest.fixture(scope="module")
+def found() -> Check:
+    return check(juniper())
+
+
+def test_the_envelope_is_reached_by_the_gait_that_walking_starts_with(found: Check) -> None:
+    envelope = juniper().envelope
+    trot = found.gaits[0]
+    assert trot.name == "trot"
+    assert trot.forward_m_s == pytest.approx(envelope.forward_m_s, rel=0.02)
+    assert trot.sideways_m_s == pytest.approx(envelope.sideways_m_s, rel=0.02)
+    assert trot.turn_rad_s == pytest.approx(envelope.turn_rad_s, rel=0.02)
+
+
+def test_no_joint_is_faster_than_its_servo_anywhere_on_the_border(found: Check) -> None:
+    assert len(found.gaits) == len(juniper().gaits)
+    for gait in found.gaits:
+        assert len(gait.walks) == 26
+        assert gait.faults == 0
+        assert 0.3 < gait.joint_speed <= 1.0 + 1e-9
+
+
+def test_standing_the_mass_is_well_inside_the_feet(found: Check) -> None:
+    # Less than half of the shorter side of the stance, which is the best that there is.
+    assert 0.03 < found.standing_margin_m <= 0.5 * 0.2
+
+
+def test_a_trot_balances_in_motion_only(found: Check) -> None:
+    # Two feet down at a time: the support is a line (Hildebrand 1965), no margin is positive.
+    assert found.gaits[0].margin_m < 0.005
+
+
+def test_slow_servos_are_told() -> None:
+    robot = juniper()
+    slow = replace(
+        robot,
+        gaits=robot.gaits[:1],
+        legs=tuple(
+            replace(
+                leg,
+                joints=tuple(  # type: ignore[arg-type]
+                    replace(joint, servo=replace(joint.servo, speed_rad_s=0.3 * joint.servo.speed_rad_s))
+                    for joint in leg.joints
+                ),
+            )
+            for leg in robot.legs
+        ),
+    )
+    slowed = check(slow)
+    assert slowed.gaits[0].share < 0.9
+    assert any("reaches only" in warning for warning in slowed.warnings)
+
+
+def test_a_narrow_stance_has_less_margin() -> None:
+    robot = replace(juniper(), gaits=juniper().gaits[:1])
+    narrow = replace(robot, stance=replace(robot.stance, spread_m=-0.03))
+    lost_m = check(robot).standing_margin_m - check(narrow).standing_margin_m
+    assert lost_m == pytest.approx(0.03, abs=0.002)  # the line between the feet of a side moved in by so much
+
+
+def test_in_words(capsys: Output) -> None:
+    assert main(["check", str(CONFIG / "bramble.yaml")]) == 0
+    out = capsys.readouterr().out
+    assert out.startswith("bramble: ")
+    for words in ("can be used", "6 legs, 18 servos on 2 board(s)", "tripod", "wave", "envelope"):
+        assert words in out
+    assert max(len(line) for line in out.splitlines() if not line.startswith("warning")) <= 110
+
+
+def test_as_json(capsys: Output) -> None:
+    assert main(["check", "--json", str(CONFIG / "bramble.yaml")]) == 0
+    told = json.loads(capsys.readouterr().out)
+    assert told["ok"] is True
+    assert told["digest"] == bramble().digest
+    assert [gait["name"] for gait in told["gaits"]] == [gait.name for gait in bramble().gaits]
+
+
+def test_quick_only_reads(capsys: Output, monkeypatch: pytest.MonkeyPatch) -> None:
+    from hobnail.workshop import check as module
+
+    def walks(_robot: object) -> Check:
+        raise AssertionError("walked")
+
+    monkeypatch.setattr(module, "check", walks)
+    assert main(["check", "--quick", str(CONFIG / "juniper.yaml")]) == 0
+    assert "can be used" in capsys.readouterr().out
+    assert main(["check", "--quick", "--json", str(CONFIG / "juniper.yaml")]) == 0
+    assert json.loads(capsys.readouterr().out)["ok"] is True
+
+
+def test_problems_as_json(capsys: Output, tmp_path: object) -> None:
+    assert main(["check", "--json", f"{tmp_path}/none.yaml"]) == 78
+    told = json.loads(capsys.readouterr().out)
+    assert told["ok"] is False
+    assert told["problems"][0]["found"] == "no such file"
