@@ -104,9 +104,14 @@ class Keyframe:
     lift: float
 
 
+# Up and forward at once, forward at a steady speed, and down on the spot: the travel ends
+# before the swing does, so that a foot which meets the ground early does not brake.
 BUILT_IN_SWING: tuple[Keyframe, ...] = (
     Keyframe(time=0.0, travel=0.0, lift=0.0),
-    Keyframe(time=0.5, travel=0.5, lift=1.0),
+    Keyframe(time=0.27, travel=0.214, lift=0.55),
+    Keyframe(time=0.45, travel=0.5, lift=1.0),
+    Keyframe(time=0.63, travel=0.786, lift=0.6),
+    Keyframe(time=0.9, travel=1.0, lift=0.08),
     Keyframe(time=1.0, travel=1.0, lift=0.0),
 )
 

@@ -25,7 +25,7 @@ class GaitPattern:
 # Hildebrand, Science 150:701 (1965): duty factor, and D, the lag of the fore foot after
 # the hind foot on the same side; the sides are half a cycle apart.  Then the body shift.
 _SYMMETRICAL = {
-    "trot": (0.6, 0.5, 0.0),
+    "trot": (0.6, 0.5, 1.0),
     "crawl": (0.8, 0.25, 1.0),  # lateral sequence
     "pace": (0.6, 0.0, 0.0),
     "amble": (0.7, 0.25, 0.0),
