@@ -150,9 +150,9 @@ def test_a_route_in_a_pipe_tells_its_steps_and_sums_up_as_json(
 def test_a_stop_in_the_middle_of_the_route_ends_with_75(config: str, route: str, tmp_path: Path) -> None:
     with running(tmp_path, config, "--route", route, "--plain") as process:
         with Client(tmp_path / "hobnail.sock") as client:
-            told: dict[str, Any]
             for told in client.watch(rate_hz=50.0):
-                if told["pose"]["x_m"] > 0.03:
+                pose: Any = told["pose"]
+                if pose["x_m"] > 0.03:
                     break
             client.stop(category=1, reason="a cat")
         out, _ = process.communicate(timeout=TIMEOUT_S)
