@@ -174,6 +174,18 @@ def test_a_leg_may_differ_from_the_defaults(tmp_path: Path) -> None:
     assert knee.angle_limits_rad == other.joints[2].angle_limits_rad
 
 
+def test_a_joint_may_have_its_own_map_and_limits(tmp_path: Path) -> None:
+    path = tmp_path / "robot.yaml"
+    own = (
+        "{channel: 2, direction: 1, pulse_map_deg_us: [[-90, 600], [90, 2400]], pulse_limits_us: [650, 2350]}"
+    )
+    path.write_text(JUNIPER.replace("{channel: 2, direction: 1}", own))
+    _, hip, knee = load_robot(path).legs[0].joints
+    assert knee.pulse_map == ((-math.pi / 2, 600.0), (math.pi / 2, 2400.0))
+    assert knee.pulse_limits_us == (650.0, 2350.0)
+    assert hip.pulse_limits_us == (550.0, 2450.0)
+
+
 def test_own_swing_keyframes_and_extras(tmp_path: Path) -> None:
     path = tmp_path / "robot.yaml"
     path.write_text(

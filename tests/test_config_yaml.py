@@ -9,7 +9,7 @@ import pytest
 import yaml
 
 from hobnail import config_yaml
-from hobnail.config_yaml import Listing, Mapping, Report, Scalar, parse, read_file
+from hobnail.config_yaml import Listing, Mapping, Report, Scalar, parse, read_file, shown
 
 
 @pytest.fixture(params=["C", "Python"], autouse=True)
@@ -129,6 +129,13 @@ def test_odd_keys_cannot_break_a_message() -> None:
     for problem in report.problems():
         assert str(problem).isprintable()
         assert len(str(problem)) < 300
+
+
+def test_values_over_several_lines_cannot_break_a_message() -> None:
+    report = Report("robot.yaml")
+    root = parse(b"a: 0\n\n\n  .5\n", report)
+    assert root is not None
+    assert shown(root.entries["a"]) == repr("0\n\n.5")
 
 
 def told(path: Path) -> str:

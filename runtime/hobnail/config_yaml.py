@@ -115,7 +115,7 @@ def shown(node: Node) -> str:
     """What was written, short enough for a message."""
     if isinstance(node, Scalar):
         text = node.text if len(node.text) <= 40 else node.text[:37] + "..."
-        if not node.plain:
+        if not node.plain or not text.isprintable():  # plain text may go on over empty lines
             return repr(text)
         return text or "nothing"
     if isinstance(node, Listing):
