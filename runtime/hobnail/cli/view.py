@@ -157,11 +157,10 @@ class View:
         top.add(right.rjust(max(1, width - top.width)), "dim")
         bottom = Line().add(" " * len(badge), style).add(f"  {about}{volts}", "dim")
         centre = Line().add(badge, style).add(middle)
+        style = "alarm" if stop["latched"] else "dim"
         if len(claim) + bottom.width + 2 <= width:
-            bottom.add(f"; {claim}", "alarm" if stop["latched"] else "dim")
-            return [top, centre, bottom]
-        note = textwrap.wrap(claim, width)
-        return [top, centre, bottom, *(Line().add(text, "alarm") for text in note[:2])]
+            return [top, centre, bottom.add(f"; {claim}", style)]
+        return [top, centre, bottom, *(Line().add(text, style) for text in textwrap.wrap(claim, width)[:2])]
 
     def _speeds(self, snapshot: Snapshot, width: int) -> list[Line]:
         route, command, real = snapshot.get("route"), snapshot["command"], snapshot["velocity"]
@@ -198,7 +197,8 @@ class View:
         for leg, name in enumerate(names):
             line = Line().add(f"{name:<{wide}} ").add("down " if shown[-1][leg] else "lift ", "dim")
             steps = [s[leg] if leg < len(s) else True for s in shown]
-            line.add("".join(self.glyphs.down if down else self.glyphs.up for down in steps), "bar")
+            if len(steps) > 1:
+                line.add("".join(self.glyphs.down if down else self.glyphs.up for down in steps), "bar")
             lines.append(line)
         return lines
 
@@ -306,13 +306,10 @@ def _place(snapshot: Snapshot) -> list[Line]:
 def _timing(snapshot: Snapshot) -> list[Line]:
     timing, counters = snapshot["timing"], snapshot["counters"]
     late = timing["lateness_us"]
-    first = f"{timing['period_s'] * 1000:g} ms tick, {timing['ticks']} done, {timing['skipped']} skipped; "
-    first += "late us " + ", ".join(
-        f"{name} {late[key]:.0f}"
-        for name, key in (("p50", "p50"), ("p99", "p99"), ("p99.9", "p999"), ("max", "max"))
-        if late[key] is not None
+    ticks = f"{timing['period_s'] * 1000:g} ms tick, {timing['ticks']} done, {timing['skipped']} skipped; "
+    ticks += (
+        f"{counters['clamped']} clamped, {counters['out_of_reach']} out of reach, {counters['slowed']} slowed"
     )
-    counts = (
-        f"clamped {counters['clamped']}, out of reach {counters['out_of_reach']}, slowed {counters['slowed']}"
-    )
-    return [Line().add(first, "dim"), Line().add(counts, "dim")]
+    names = (("p50", "p50"), ("p99", "p99"), ("p99.9", "p999"), ("max", "max"))
+    lateness = "late by us: " + ", ".join(f"{name} {late[key]:.0f}" for name, key in names)
+    return [Line().add(ticks, "dim"), Line().add(lateness, "dim")]
