@@ -123,50 +123,87 @@ def settle(offset: Motion, time_s: float, remaining_s: float) -> Motion:
     return value, slope / remaining_s, curve / (remaining_s * remaining_s)
 
 
-GlideState = tuple[list[float], list[float], list[Motion], float, bool]
+GlideState = tuple[list[float], list[float], list[Motion], float, list[Motion], float, bool]
 
 
 class Glide:
-    """Several numbers that move to their targets by quintic pieces, each at its own rate."""
+    """Several numbers that move to their targets by quintic pieces, each at its own rate.
 
-    __slots__ = ("_offset", "_remaining_s", "moving", "rates", "target", "value")
+    A motion is a sum of two: the way to the target, and what is left of the motion
+    before it, taken off within a few EASE_S.  So no old motion is carried on for the time
+    of a long new one, however often targets change: slopes stay below 1.6 times
+    their rates (found by search), and from rest below the rates themselves.
+    """
+
+    __slots__ = ("_left_s", "_old", "_old_left_s", "_way", "moving", "rates", "target", "value")
 
     def __init__(self, value: Sequence[float], rates: Sequence[float]) -> None:
         self.value = list(value)
         self.target = list(value)
         self.rates = tuple(rates)
-        self._offset: list[Motion] = [AT_REST] * len(self.value)
-        self._remaining_s = 0.0
+        self._way: list[Motion] = [AT_REST] * len(self.value)
+        self._left_s = 0.0
+        self._old: list[Motion] = list(self._way)
+        self._old_left_s = 0.0
         self.moving = False
 
     def aim(self, target: Sequence[float], within_s: float | None = None) -> None:
-        """Set new targets: reached together, at the rates given, or just `within_s`."""
-        time = 0.0
-        offsets: list[Motion] = []
-        for value, goal, (_, slope, curve), rate in zip(
-            self.value, target, self._offset, self.rates, strict=True
-        ):
-            offsets.append((value - goal, slope, curve))
-            # Minimum jerk peaks at 1.875 times its mean slope.
-            time = max(time, 1.875 * abs(value - goal) / rate, 5.0 * EASE_S * abs(slope) / rate)
-        self.target = list(target)
-        self._offset = offsets
-        self._remaining_s = time if within_s is None else within_s
-        self.moving = any(offset != AT_REST for offset in offsets)
+        """Set new targets: reached together, at the rates given, or just `within_s`.
+
+        The same targets again, with no time, change nothing.
+        """
+        goals = list(target)
+        if goals == self.target and within_s is None:
+            return
+        slopes = [way[1] + old[1] for way, old in zip(self._way, self._old, strict=True)]
+        gaps = [value - goal for value, goal in zip(self.value, goals, strict=True)]
+        # Minimum jerk peaks at 1.875 times its mean slope.
+        time = max(1.875 * abs(gap) / rate for gap, rate in zip(gaps, self.rates, strict=True))
+        time = within_s if within_s is not None else max(time, 3.0 * EASE_S)
+        ease = max(3.0 * abs(slope) / rate for slope, rate in zip(slopes, self.rates, strict=True))
+        ways, olds = [], []
+        for gap, slope, way, old in zip(gaps, slopes, self._way, self._old, strict=True):
+            # The new way takes over a slope that it can use: such a quintic overshoots only
+            # when it starts away from its end, or at more than 2.5 times its mean slope.
+            keep = slope if 0.0 < -slope * gap * time <= 2.5 * gap * gap else 0.0
+            ways.append((gap, keep, 0.0))
+            olds.append((0.0, slope - keep, way[2] + old[2]))
+        self.target = goals
+        self._way, self._left_s = ways, time
+        self._old, self._old_left_s = olds, min(max(ease, 1.0) * EASE_S, time)
+        self.moving = any(motion != AT_REST for motion in ways + olds)
 
     def advance(self, time_s: float) -> None:
         """Move on by `time_s`."""
-        left = self._remaining_s
-        self._offset = [settle(offset, time_s, left) for offset in self._offset]
-        self.value = [goal + offset[0] for goal, offset in zip(self.target, self._offset, strict=True)]
-        self._remaining_s = left - time_s
-        if time_s >= left:
-            self.moving = False
+        self._way = [settle(motion, time_s, self._left_s) for motion in self._way]
+        self._old = [settle(motion, time_s, self._old_left_s) for motion in self._old]
+        self.value = [
+            goal + way[0] + old[0] for goal, way, old in zip(self.target, self._way, self._old, strict=True)
+        ]
+        self.moving = time_s < self._left_s
+        self._left_s -= time_s
+        self._old_left_s -= time_s
 
     def state(self) -> GlideState:
         """A snapshot for `restore`."""
-        return self.value, self.target, self._offset, self._remaining_s, self.moving
+        return (
+            self.value,
+            self.target,
+            self._way,
+            self._left_s,
+            self._old,
+            self._old_left_s,
+            self.moving,
+        )
 
     def restore(self, state: GlideState) -> None:
         """Go back to a snapshot."""
-        self.value, self.target, self._offset, self._remaining_s, self.moving = state
+        (
+            self.value,
+            self.target,
+            self._way,
+            self._left_s,
+            self._old,
+            self._old_left_s,
+            self.moving,
+        ) = state
