@@ -36,13 +36,13 @@ from hobnail.errors import CalibrationError, ConfigError
 from hobnail.robot import Robot
 from hobnail.servo import pulse_us
 
-JUNIPER = Path(__file__).parent.parent / "config" / "juniper.yaml"
-ROBOT = load_robot(JUNIPER)
+SORREL = Path(__file__).parent / "corpus" / "sorrel.yaml"
+ROBOT = load_robot(SORREL)
 WHEN = "2026-03-01T14:30:00Z"
 
 MEASURED = """\
 version: 1
-robot: juniper
+robot: sorrel
 boards:
   main: {oscillator_mhz: 25.31}
 joints:
@@ -58,9 +58,9 @@ history:
 
 @pytest.fixture
 def config(tmp_path: Path) -> Path:
-    """A copy of juniper's configuration, with no calibration beside it yet."""
-    path = tmp_path / "juniper.yaml"
-    path.write_bytes(JUNIPER.read_bytes())
+    """A copy of sorrel's configuration, with no calibration beside it yet."""
+    path = tmp_path / "sorrel.yaml"
+    path.write_bytes(SORREL.read_bytes())
     return path
 
 
@@ -74,7 +74,7 @@ def refused(config: Path, text: str) -> list[str]:
 
 
 def test_it_is_kept_beside_the_configuration() -> None:
-    assert calibration_path("/etc/hobnail/juniper.yaml") == Path("/etc/hobnail/juniper.calibration.yaml")
+    assert calibration_path("/etc/hobnail/sorrel.yaml") == Path("/etc/hobnail/sorrel.calibration.yaml")
 
 
 def test_what_was_measured_goes_before_what_was_configured(config: Path) -> None:
@@ -108,14 +108,14 @@ def test_reading_alone_is_as_strict(config: Path) -> None:
 
 
 def test_none_is_an_empty_one(config: Path) -> None:
-    assert read_calibration(calibration_path(config), ROBOT) == Calibration(robot="juniper")
-    assert apply_calibration(ROBOT, Calibration(robot="juniper")) == ROBOT
+    assert read_calibration(calibration_path(config), ROBOT) == Calibration(robot="sorrel")
+    assert apply_calibration(ROBOT, Calibration(robot="sorrel")) == ROBOT
 
 
 @pytest.mark.parametrize(
     ("old", "new", "told"),
     [
-        ("robot: juniper", "robot: bramble", "2:8: robot: found bramble; allowed: juniper"),
+        ("robot: sorrel", "robot: bramble", "2:8: robot: found bramble; allowed: sorrel"),
         ("version: 1", "version: 2", "1:10: version: found 2"),
         ("version: 1\n", "", "1:1: version: found nothing"),
         ("left-front.roll:", "left-front.rol:", "Did you mean left-front.roll?"),
@@ -205,7 +205,7 @@ def read_whole(data: bytes, robot: Robot = ROBOT) -> Calibration:
 
 def test_changes_are_written_down_with_old_and_new() -> None:
     first = changed(
-        Calibration(robot="juniper"),
+        Calibration(robot="sorrel"),
         ROBOT,
         "left-front.hip",
         when=WHEN,
@@ -253,11 +253,11 @@ def test_changes_are_written_down_with_old_and_new() -> None:
 )
 def test_a_change_that_would_not_load_is_refused(name: str, values: dict[str, Any], told: str) -> None:
     with pytest.raises(CalibrationError, match=told):
-        changed(Calibration(robot="juniper"), ROBOT, name, when=WHEN, who="bench", **values)
+        changed(Calibration(robot="sorrel"), ROBOT, name, when=WHEN, who="bench", **values)
     with pytest.raises(CalibrationError, match="a date and time"):
-        changed(Calibration(robot="juniper"), ROBOT, "main", when="now", who="bench", oscillator_hz=25e6)
+        changed(Calibration(robot="sorrel"), ROBOT, "main", when="now", who="bench", oscillator_hz=25e6)
     with pytest.raises(KeyError):
-        changed(Calibration(robot="juniper"), ROBOT, "left-front.toe", when=WHEN, who="bench", trim_rad=0.0)
+        changed(Calibration(robot="sorrel"), ROBOT, "left-front.toe", when=WHEN, who="bench", trim_rad=0.0)
 
 
 @settings(max_examples=60, deadline=None)
@@ -277,7 +277,7 @@ def test_what_is_written_reads_back_the_same(
         points.append((points[-1][0] + width, round(points[-1][1] + width / 1e4 * rate, 2)))
     values: dict[str, Any] = {"trim_rad": trim, "direction": direction}
     values["pulse_map"] = tuple((math.radians(shaft / 1e4), pulse) for shaft, pulse in points)
-    empty = Calibration(robot="juniper")
+    empty = Calibration(robot="sorrel")
     once = changed(empty, ROBOT, "left-hind.roll", when=WHEN, who=who, **values)
     once = changed(once, ROBOT, "main", when=WHEN, who=who, oscillator_hz=oscillator)
     assert read_whole(render(once).encode()) == once
@@ -297,7 +297,7 @@ def test_what_is_written_reads_back_the_same(
 # --- Writing ---------------------------------------------------------------------
 
 OLD = Calibration(
-    robot="juniper",
+    robot="sorrel",
     joints={"left-front.roll": JointCalibration(trim_rad=math.radians(1.0))},
     history=(Change(when=WHEN, who="bench", what="left-front.roll trim_deg", old="0", new="1"),),
 )
@@ -328,7 +328,7 @@ class Dying(io.FileIO):
 def test_failing_at_any_byte_leaves_the_old_file(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, end: BaseException
 ) -> None:
-    path = tmp_path / "juniper.calibration.yaml"
+    path = tmp_path / "sorrel.calibration.yaml"
     write_calibration(path, OLD)
 
     def dying_open(descriptor: int, mode: str, encoding: str, newline: str) -> io.TextIOWrapper:
@@ -351,7 +351,7 @@ def test_failing_at_any_byte_leaves_the_old_file(
 def test_failing_at_any_step_leaves_a_whole_file(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, name: str, end: BaseException
 ) -> None:
-    path = tmp_path / "juniper.calibration.yaml"
+    path = tmp_path / "sorrel.calibration.yaml"
     write_calibration(path, OLD)
     real: Callable[..., Any] = getattr(os, name)
     for good in range(2 if name == "fsync" else 1):
@@ -376,7 +376,7 @@ def test_failing_at_any_step_leaves_a_whole_file(
 
 
 def test_bytes_are_on_the_disk_before_the_name_is(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    path = tmp_path / "juniper.calibration.yaml"
+    path = tmp_path / "sorrel.calibration.yaml"
     done: list[str] = []
 
     def traced(name: str, real: Callable[..., Any]) -> Callable[..., Any]:
@@ -409,7 +409,7 @@ def test_a_left_over_temporary_file_harms_nothing(config: Path) -> None:
 def test_mode_and_links_are_kept(tmp_path: Path) -> None:
     real = tmp_path / "state"
     real.mkdir()
-    link = tmp_path / "juniper.calibration.yaml"
+    link = tmp_path / "sorrel.calibration.yaml"
     link.symlink_to(real / "measured.yaml")
     write_calibration(link, OLD)
     assert (real / "measured.yaml").stat().st_mode & 0o777 == 0o644
@@ -422,4 +422,4 @@ def test_mode_and_links_are_kept(tmp_path: Path) -> None:
 
 def test_a_folder_that_cannot_be_written_to_is_told(tmp_path: Path) -> None:
     with pytest.raises(CalibrationError, match=r"No such file.*The file is as it was"):
-        write_calibration(tmp_path / "none" / "juniper.calibration.yaml", NEW)
+        write_calibration(tmp_path / "none" / "sorrel.calibration.yaml", NEW)

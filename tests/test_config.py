@@ -47,17 +47,18 @@ from hobnail.robot import (
 )
 
 CONFIG = Path(__file__).parent.parent / "config"
-JUNIPER = (CONFIG / "juniper.yaml").read_text()
-BRAMBLE = (CONFIG / "bramble.yaml").read_text()
+CORPUS = Path(__file__).parent / "corpus"
+SORREL = (CORPUS / "sorrel.yaml").read_text()
+BURDOCK = (CORPUS / "burdock.yaml").read_text()
 
 Told = Callable[..., list[str]]
 
 
 @pytest.fixture
 def told(tmp_path: Path) -> Told:
-    """The problems of a demo file after replacing text in it, each starting `line:column: key path`."""
+    """The problems of a good file after replacing text in it, each starting `line:column: key path`."""
 
-    def told(*changes: tuple[str, str], text: str = JUNIPER) -> list[str]:
+    def told(*changes: tuple[str, str], text: str = SORREL) -> list[str]:
         for old, new in changes:
             assert old in text, old
             text = text.replace(old, new, 1)
@@ -97,16 +98,30 @@ def test_juniper_is_as_ordered() -> None:
     # 0.0980665 N m, exactly.
     assert servo.speed_rad_s == pytest.approx(8.7266 * 12 / 13, rel=1e-5)
     assert servo.torque_nm == pytest.approx(20 * 0.0980665, rel=1e-12)
-    assert robot.joints[1].zero_rad == pytest.approx(math.radians(40))
-    (board,) = robot.boards
-    assert (board.bus, board.address, board.oscillator_hz) == (1, 0x40, 25e6)
-    trot = robot.gaits[0]
-    assert (trot.name, trot.duty, trot.cycle_s, trot.cycle_range_s) == ("trot", 0.6, None, (0.4, 1.0))
-    assert (robot.period_s, robot.safety.wake_interval_s, robot.stance.height_m) == (0.01, 0.15, 0.17)
+    assert (robot.gaits[0].name, robot.gaits[0].duty) == ("trot", 0.6)
     assert (robot.envelope.forward_m_s, robot.envelope.sideways_m_s, robot.envelope.turn_rad_s) == (
         0.25,
         0.12,
         0.9,
+    )
+
+
+def test_units_become_si() -> None:
+    robot = load_robot(CORPUS / "sorrel.yaml")
+    assert robot.joints[1].zero_rad == math.radians(40)
+    assert robot.joints[0].servo.shortest_frame_s == 0.003
+    assert robot.joints[0].pulse_map == ((math.radians(-135), 500.0), (math.radians(135), 2500.0))
+    assert robot.joints[0].pulse_limits_us == (550.0, 2450.0)
+    (board,) = robot.boards
+    assert (board.bus, board.address, board.oscillator_hz) == (1, 0x40, 25e6)
+    trot = robot.gaits[0]
+    assert (trot.cycle_s, trot.cycle_range_s, trot.lift_m) == (None, (0.4, 1.0), 0.03)
+    assert (robot.period_s, robot.safety.wake_interval_s, robot.safety.wake_group) == (0.01, 0.15, 1)
+    assert (robot.stance.height_m, robot.stance.rest_height_m, robot.body.belly_m) == (0.17, 0.072, 0.07)
+    assert (robot.posture_limits.height_m, robot.posture_limits.rate_m_s) == ((0.12, 0.195), 0.08)
+    assert (robot.posture_limits.roll_rad, robot.posture_limits.rate_rad_s) == (
+        math.radians(11),
+        math.radians(30),
     )
 
 
@@ -121,17 +136,17 @@ def test_bramble_is_another_machine() -> None:
 
 def test_source_and_digest_tell_the_file(tmp_path: Path) -> None:
     path = tmp_path / "juniper.yaml"
-    path.write_text(JUNIPER)
+    path.write_text(SORREL)
     robot = load_robot(str(path))
     assert robot.source == str(path)
-    assert robot.digest == hashlib.sha256(JUNIPER.encode()).hexdigest() == digest_on_disk(path)
+    assert robot.digest == hashlib.sha256(SORREL.encode()).hexdigest() == digest_on_disk(path)
 
 
 def test_a_change_on_disk_is_seen(tmp_path: Path) -> None:
     path, beside = tmp_path / "juniper.yaml", tmp_path / "juniper.calibration.yaml"
-    path.write_text(JUNIPER)
+    path.write_text(SORREL)
     seen = {digest_on_disk(path)}
-    path.write_text(JUNIPER + "# more\n")
+    path.write_text(SORREL + "# more\n")
     seen.add(digest_on_disk(path))
     beside.write_text("version: 1\n")  # need not be good
     seen.add(digest_on_disk(str(path)))
@@ -143,9 +158,7 @@ def test_a_change_on_disk_is_seen(tmp_path: Path) -> None:
 
 
 def test_what_is_left_out_has_the_default_of_the_robot(tmp_path: Path) -> None:
-    text = "\n".join(
-        line for line in JUNIPER.splitlines() if "wake_group" not in line and "low_v" not in line
-    )
+    text = "\n".join(line for line in SORREL.splitlines() if "wake_group" not in line and "low_v" not in line)
     text = text.replace(
         "  - name: crawl                   # one foot at a time, the body over the other three",
         "  - crawl\n  - name: trot-2\n    duty: 0.5\n    phases: [0.5, 0, 0, 0.5]",
@@ -162,7 +175,7 @@ def test_what_is_left_out_has_the_default_of_the_robot(tmp_path: Path) -> None:
 def test_a_leg_may_differ_from_the_defaults(tmp_path: Path) -> None:
     path = tmp_path / "robot.yaml"
     path.write_text(
-        JUNIPER.replace(
+        SORREL.replace(
             "knee: {channel: 2, direction: 1}",
             "knee: {channel: 15, direction: -1, zero_deg: -80}\n    upper_mm: 106",
         )
@@ -179,7 +192,7 @@ def test_a_joint_may_have_its_own_map_and_limits(tmp_path: Path) -> None:
     own = (
         "{channel: 2, direction: 1, pulse_map_deg_us: [[-90, 600], [90, 2400]], pulse_limits_us: [650, 2350]}"
     )
-    path.write_text(JUNIPER.replace("{channel: 2, direction: 1}", own))
+    path.write_text(SORREL.replace("{channel: 2, direction: 1}", own))
     _, hip, knee = load_robot(path).legs[0].joints
     assert knee.pulse_map == ((-math.pi / 2, 600.0), (math.pi / 2, 2400.0))
     assert knee.pulse_limits_us == (650.0, 2350.0)
@@ -189,7 +202,7 @@ def test_a_joint_may_have_its_own_map_and_limits(tmp_path: Path) -> None:
 def test_own_swing_keyframes_and_extras(tmp_path: Path) -> None:
     path = tmp_path / "robot.yaml"
     path.write_text(
-        JUNIPER.replace(
+        SORREL.replace(
             "    lift_mm: 20\n",
             "    lift_mm: 20\n    cycle_s: 0.5\n    body_shift: 0.25\n    swing:\n"
             "      - {time: 0, travel: 0, lift: 0}\n      - {time: 0.3, travel: -0.1, lift: 1}\n"
@@ -373,10 +386,10 @@ def test_a_keyframe_lacks_nothing(told: Told) -> None:
 
 
 def test_addresses_are_unique_on_a_bus_only(told: Told) -> None:
-    assert told(("address: 0x41", "address: 0x41"), text=BRAMBLE) == []
-    (problem,) = told(("address: 0x41", "address: 0x40"), text=BRAMBLE)
-    assert problem.startswith("33:14: boards[1].address: found 0x40 on bus 1")
-    two_buses = BRAMBLE.replace("bus: 1\n    address: 0x41", "bus: 2\n    address: 0x40")
+    assert told(("address: 0x41", "address: 0x41"), text=BURDOCK) == []
+    (problem,) = told(("address: 0x41", "address: 0x40"), text=BURDOCK)
+    assert problem.startswith("24:14: boards[1].address: found 0x40 on bus 1")
+    two_buses = BURDOCK.replace("bus: 1\n    address: 0x41", "bus: 2\n    address: 0x40")
     assert told(text=two_buses) == []
 
 
@@ -414,12 +427,12 @@ def test_all_problems_at_once_in_the_order_of_the_file(told: Told) -> None:
 def test_message_is_short_and_exact(told: Told) -> None:
     problems = told(("upper_mm: 105", "uper_mm: 105"))
     assert problems[0] == (
-        "52:3: leg_defaults.uper_mm: found unknown key; allowed: abduction_mm, upper_mm, lower_mm, "
+        "40:3: leg_defaults.uper_mm: found unknown key; allowed: abduction_mm, upper_mm, lower_mm, "
         "knee_bends, foot_radius_mm, hip_kg, upper_kg, lower_kg, joints. Did you mean upper_mm?"
     )
     (range_problem,) = told(("lower_mm: 125", "lower_mm: 12500"))
     assert (
-        range_problem == "53:13: leg_defaults.lower_mm: found 12500 mm; allowed: a number from 10 to 1000 mm"
+        range_problem == "41:13: leg_defaults.lower_mm: found 12500 mm; allowed: a number from 10 to 1000 mm"
     )
 
 
@@ -441,7 +454,7 @@ def test_message_is_short_and_exact(told: Told) -> None:
 def test_yaml_surprises_are_told_with_their_reason(told: Told, written: str, reason: str) -> None:
     problems = told(("period_ms: 10 ", f"period_ms: {written} "))
     assert len(problems) == 1
-    assert problems[0].startswith("17:12: period_ms: found ")
+    assert problems[0].startswith("5:12: period_ms: found ")
     assert reason in problems[0]
 
 
@@ -451,8 +464,8 @@ def test_ways_to_write_a_number(told: Told, written: str) -> None:
 
 
 def test_names_that_yaml_takes_for_something_else_need_quotes(told: Told) -> None:
-    assert told(("name: juniper", "name: 'no'")) == []
-    (problem,) = told(("name: juniper", "name: no"))
+    assert told(("name: sorrel", "name: 'no'")) == []
+    (problem,) = told(("name: sorrel", "name: no"))
     assert "put it in quotes" in problem
 
 

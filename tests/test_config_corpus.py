@@ -21,13 +21,14 @@ from hobnail.errors import ConfigError, Problem
 from hobnail.robot import Robot
 
 CONFIG = Path(__file__).parent.parent / "config"
-JUNIPER = (CONFIG / "juniper.yaml").read_text()
-BRAMBLE = (CONFIG / "bramble.yaml").read_text()
-DATA = yaml.safe_load(JUNIPER)
+CORPUS = Path(__file__).parent / "corpus"
+SORREL = (CORPUS / "sorrel.yaml").read_text()
+BURDOCK = (CORPUS / "burdock.yaml").read_text()
+DATA = yaml.safe_load(SORREL)
 BLOCK = damage.dumped(DATA)  # the same without comments, every value on a line of its own
 SCHEMA = json.loads((CONFIG / "hobnail.schema.json").read_text())
 
-# Keys that juniper writes but could leave out, listed by hand.
+# Keys that sorrel writes but could leave out, listed by hand.
 OPTIONAL = {
     "body.com_mm",
     "body.size_mm",
@@ -128,7 +129,7 @@ def test_a_missing_key_is_told_unless_it_has_a_default(
 
 
 def test_a_misspelt_key_is_told_with_the_nearest_good_one(refused: Refused) -> None:
-    for damaged in damage.misspelt(JUNIPER):
+    for damaged in damage.misspelt(SORREL):
         check_damage(damaged, refused)
 
 
@@ -138,18 +139,18 @@ def test_a_duplicate_key_is_told(refused: Refused) -> None:
 
 
 def test_a_wrong_value_is_told(refused: Refused) -> None:
-    for damaged in damage.wrong_values(JUNIPER):
+    for damaged in damage.wrong_values(SORREL):
         if not damaged.label.endswith("cycle_s: 12"):  # a good cycle time
             check_damage(damaged, refused)
 
 
 def test_two_robots_and_ends_of_ranges_are_good(load: Callable[[str | bytes], Robot]) -> None:
     """The corpus would prove nothing if everything were refused."""
-    for text in (JUNIPER, BRAMBLE, BLOCK):
+    for text in (SORREL, BURDOCK, BLOCK):
         load(text)
 
 
-@pytest.mark.parametrize("whole", [JUNIPER, BRAMBLE], ids=["juniper", "bramble"])
+@pytest.mark.parametrize("whole", [SORREL, BURDOCK], ids=["sorrel", "burdock"])
 def test_a_file_cut_short_is_refused_or_truly_good(whole: str, load: Callable[[str | bytes], Robot]) -> None:
     validator = jsonschema.Draft202012Validator(SCHEMA)
     accepted = 0
@@ -172,12 +173,12 @@ def test_everything_accepted_passes_the_schema(load: Callable[[str | bytes], Rob
     validator = jsonschema.Draft202012Validator(SCHEMA)
     numbers = ("-1", "0", "0.5", "1", "3", "12", "90", "180", "2500")
     accepted = 0
-    for entry in damage.entries(JUNIPER):
+    for entry in damage.entries(SORREL):
         if not isinstance(entry.value, yaml.ScalarNode):
             continue
         for number in numbers:
             start, end = entry.value.start_mark.index, entry.value.end_mark.index
-            text = JUNIPER[:start] + number + JUNIPER[end:]
+            text = SORREL[:start] + number + SORREL[end:]
             try:
                 load(text)
             except ConfigError as error:
@@ -228,7 +229,7 @@ FRAGMENTS = (
 def test_any_damage_ends_in_a_robot_or_in_problems(
     data: st.DataObject, load: Callable[[str | bytes], Robot]
 ) -> None:
-    text = bytearray(JUNIPER.encode())
+    text = bytearray(SORREL.encode())
     for _ in range(data.draw(st.integers(1, 4))):
         start = data.draw(st.integers(0, len(text)))
         end = start + data.draw(st.integers(0, 40))
