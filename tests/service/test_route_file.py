@@ -6,14 +6,16 @@ import json
 import math
 from pathlib import Path
 
+import jsonschema
 import pytest
+import yaml
 from hypothesis import given
 from hypothesis import strategies as st
 
 from hobnail.config import load_robot
 from hobnail.errors import CommandError, RouteError
 from hobnail.service.route import expected_seconds, moved
-from hobnail.service.route_file import load_route, steps_from_json, steps_to_json
+from hobnail.service.route_file import load_route, schema_text, steps_from_json, steps_to_json
 from hobnail.service.route_steps import ChangeGait, Move, Pose, Speed, Step, Wait
 
 CONFIG = Path(__file__).parents[2] / "config"
@@ -268,3 +270,40 @@ def test_the_bench_round_shows_every_kind_of_step_in_less_than_a_minute() -> Non
     walked_m = sum(math.hypot(x, y) for x, y, _ in twists)
     assert 2.0 <= walked_m <= 3.0
     assert sum(expected_seconds(steps, JUNIPER)) < 45.0
+
+
+PUBLISHED = CONFIG / "routes" / "hobnail-route.schema.json"
+
+
+def test_the_published_schema_is_current() -> None:
+    """If not: python -m hobnail.service.route_file > config/routes/hobnail-route.schema.json"""
+    assert PUBLISHED.read_text() == schema_text()
+
+
+@pytest.mark.parametrize(
+    ("text", "good"),
+    [
+        (None, True),
+        ("steps: [{forward_mm: 3, note: x}]", True),
+        ("steps: []", False),
+        ("steps: [{note: x}]", False),
+        ("steps: [{forward_mm: 3, wait_s: 1}]", False),
+        ("steps: [{forward_mm: 30000}]", False),
+        ("steps: [{arc: {radius_mm: 30}}]", False),
+        ("steps: [{posture: {}}]", False),
+        ("steps: [{fowrard_mm: 3}]", False),
+        ("steps: [{wait_s: '1'}]", False),
+    ],
+)
+def test_the_schema_and_the_reader_agree(text: str | None, good: bool, tmp_path: Path) -> None:
+    # Judge from outside: the jsonschema library.
+    validator = jsonschema.Draft202012Validator(json.loads(PUBLISHED.read_text()))
+    for path in sorted((CONFIG / "routes").glob("*.yaml")) if text is None else [written(tmp_path, text)]:
+        assert text is not None or path.read_text().startswith(
+            f"# yaml-language-server: $schema={PUBLISHED.name}\n"
+        )
+        assert validator.is_valid(yaml.safe_load(path.read_text())) is good
+        if good:
+            load_route(path)
+        else:
+            problems(path)

@@ -67,10 +67,13 @@ def configure(parser: Parser) -> None:
 def run(arguments: Namespace) -> int:
     """Run until told to end; the exit code of the service."""
     from hobnail.config import load_robot
-    from hobnail.service.route_file import load_route
 
     robot = load_robot(arguments.config)
-    route = load_route(arguments.route, robot) if arguments.route else None
+    route = None
+    if arguments.route:
+        from hobnail.service.route_file import load_route
+
+        route = load_route(arguments.route, robot)
 
     from hobnail.cli.live import Display
     from hobnail.service.serve import run as serve

@@ -3,10 +3,13 @@
 A file is a mapping with one key, `steps`; a step is a mapping with exactly one
 action and, if wanted, a `note`.  The same steps, as JSON, are what the request
 `route` takes on the socket.  Does not walk them: `hobnail.service.route`.
+`python -m hobnail.service.route_file > config/routes/hobnail-route.schema.json`
+publishes the JSON Schema for editors.
 """
 
 from __future__ import annotations
 
+import json
 import math
 from collections.abc import Sequence
 from pathlib import Path
@@ -107,6 +110,16 @@ def steps_from_json(value: object, robot: Robot | None = None) -> tuple[Step, ..
 def steps_to_json(steps: Sequence[Step]) -> list[dict[str, object]]:
     """What `steps_from_json` reads."""
     return [{**_action(step), **({"note": step.note} if step.note else {})} for step in steps]
+
+
+def schema_text() -> str:
+    """The JSON Schema, draft 2020-12, of a route file, as published."""
+    schema = ROUTE.schema()
+    steps = schema["properties"]["steps"]
+    steps["items"]["oneOf"] = [{"required": [action.key]} for action in ACTIONS]
+    steps["items"]["properties"]["posture"]["minProperties"] = 1
+    head = {"$schema": "https://json-schema.org/draft/2020-12/schema", "title": "hobnail route"}
+    return json.dumps({**head, **schema}, indent=1) + "\n"
 
 
 def _read(root: Mapping, report: Report, robot: Robot | None) -> list[Step]:
@@ -237,3 +250,7 @@ def _node(value: object, path: str, depth: int) -> Node:
     else:
         text = str(value)
     return Scalar(path=path, line=0, column=0, text=text, plain=not isinstance(value, str))
+
+
+if __name__ == "__main__":
+    print(schema_text(), end="")
