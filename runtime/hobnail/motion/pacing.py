@@ -25,6 +25,10 @@ SAMPLES = 24  # points along a swing
 # for arcs, changes of command and the corrections for load.
 SPEED_SHARE = 0.9
 
+# Load up to which a speed is offered: at the peak of its swing the robot slows for a moment.
+FASTEST_LOAD = 1.3
+LEVELS = 24  # speeds tried for that, from standing to the peak
+
 Array = NDArray[np.float64]
 
 
@@ -77,10 +81,11 @@ class CycleTable:
     the lift of the foot, and at speed the swing forward.  For each leg a grid
     over the foot's velocity holds the shortest cycle within the gait's range
     whose straight step keeps all three joints within their speed; between grid
-    points it is interpolated.
+    points it is interpolated.  `fastest_m_s` is the greatest foot velocity along
+    x and along y, leg by leg, for which there is such a cycle at all.
     """
 
-    __slots__ = ("_peaks", "_tables", "range_s")
+    __slots__ = ("_tables", "fastest_m_s", "range_s")
 
     def __init__(
         self,
@@ -89,49 +94,93 @@ class CycleTable:
         neutrals_m: Sequence[Vec3],
         speeds_rad_s: Sequence[Vec3],
         peaks_m_s: Sequence[Vec2],
+        reaches_m: Sequence[float],
     ) -> None:
         """`neutrals_m` are relative to the hips; `speeds_rad_s` is what each joint may do;
-        `peaks_m_s` the greatest foot velocity along x and y that commands can ask for."""
+        `peaks_m_s` the greatest foot velocity along x and y that commands can ask for;
+        `reaches_m` how far from neutral a stance may lead a foot."""
         self.range_s = gait.cycle_range_s
-        self._peaks = [(max(x, 1e-6), max(y, 1e-6)) for x, y in peaks_m_s]
-        path = FootPath(gait.swing)
-        u = np.linspace(0.0, 1.0, SAMPLES)
-        shape = np.array([path.at(float(t)) for t in u])
-        cycles = np.geomspace(*gait.cycle_range_s, CYCLES)
-        axis = np.linspace(-1.0, 1.0, GRID)
+        self.fastest_m_s: list[Vec2] = []
         self._tables: list[list[list[float]]] = []
-        for leg, neutral, speeds, (peak_x, peak_y) in zip(
-            legs, neutrals_m, speeds_rad_s, self._peaks, strict=True
+        cycles = np.geomspace(*gait.cycle_range_s, CYCLES)
+        levels = np.linspace(-1.0, 1.0, 2 * LEVELS + 1)
+        axis = np.linspace(-1.0, 1.0, GRID)
+        nought = np.zeros(1)
+        for leg, neutral, speeds, peaks, reach in zip(
+            legs, neutrals_m, speeds_rad_s, peaks_m_s, reaches_m, strict=True
         ):
-            vx = (peak_x * axis)[:, None, None, None]
-            vy = (peak_y * axis)[None, :, None, None]
-            cycle = cycles[None, None, :, None]
-            # Over the ground the foot goes one stride; the body goes on under it.
-            ahead = cycle * (shape[:, 0] - 0.5 * gait.duty - u * (1.0 - gait.duty))
-            x = neutral[0] + vx * ahead
-            y = neutral[1] + vy * ahead
-            x, y = np.broadcast_arrays(x, y)
-            z = np.broadcast_to(neutral[2] + gait.lift_m * shape[:, 1], x.shape)
-            with np.errstate(invalid="ignore"):
-                angles = leg.angles(x, y, z, xp=np)
-            step_s = (1.0 - gait.duty) * cycles / (SAMPLES - 1)
-            load = np.zeros((GRID, GRID, CYCLES))
-            for angle, speed in zip(angles, speeds, strict=True):
-                steps = np.abs(np.diff(angle, axis=-1)).max(axis=-1)
-                load = np.maximum(load, steps / (step_s * speed * SPEED_SHARE))
-            self._tables.append(_shortest(np.where(np.isnan(load), np.inf, load), cycles).tolist())
+            step = _StraightStep(gait, leg, neutral, speeds, reach, cycles)
+            fastest_x = _fastest(step.load(peaks[0] * levels, nought)[:, 0]) * peaks[0]
+            fastest_y = _fastest(step.load(nought, peaks[1] * levels)[0]) * peaks[1]
+            self.fastest_m_s.append((max(fastest_x, 1e-6), max(fastest_y, 1e-6)))
+            self._tables.append(_shortest(step.load(fastest_x * axis, fastest_y * axis), cycles).tolist())
 
     def cycle_s(self, velocities_m_s: Sequence[Vec2], slow: float = 1.0) -> float:
         """Cycle time (s) for each leg's foot velocity over the ground (m/s); `slow` >= 1
         is by how much the servos are slower than the table assumed."""
         need = 0.0
-        for table, (peak_x, peak_y), (vx, vy) in zip(self._tables, self._peaks, velocities_m_s, strict=True):
+        for table, (peak_x, peak_y), (vx, vy) in zip(
+            self._tables, self.fastest_m_s, velocities_m_s, strict=True
+        ):
             i, s = _place(vx / peak_x)
             j, t = _place(vy / peak_y)
             near = table[i][j] + t * (table[i][j + 1] - table[i][j])
             far = table[i + 1][j] + t * (table[i + 1][j + 1] - table[i + 1][j])
             need = max(need, near + s * (far - near))
         return min(max(need * slow, self.range_s[0]), self.range_s[1])
+
+
+class _StraightStep:
+    """How hard the joints of one leg work in a swing, by foot velocity and cycle."""
+
+    def __init__(
+        self,
+        gait: Gait,
+        leg: LegKinematics,
+        neutral_m: Vec3,
+        speeds_rad_s: Vec3,
+        reach_m: float,
+        cycles_s: Array,
+    ) -> None:
+        u = np.linspace(0.0, 1.0, SAMPLES)
+        path = FootPath(gait.swing)
+        shape = np.array([path.at(float(t)) for t in u])
+        self._leg = leg
+        self._neutral = neutral_m
+        self._speeds = speeds_rad_s
+        self._reach = reach_m
+        self._cycles = cycles_s
+        self._duty = gait.duty
+        # Over the ground the foot goes one stride; the body goes on under it.
+        self._ahead = shape[:, 0] - 0.5 * gait.duty - u * (1.0 - gait.duty)
+        self._up = gait.lift_m * shape[:, 1]
+        self._step_s = (1.0 - gait.duty) * cycles_s / (SAMPLES - 1)
+
+    def load(self, vx: Array, vy: Array) -> Array:
+        """Greatest joint speed as a share of what is planned with, shape (x, y, cycles);
+        inf where the foot cannot go."""
+        vx, vy = vx[:, None, None, None], vy[None, :, None, None]
+        cycle = self._cycles[:, None]
+        ahead = cycle * self._ahead
+        x, y = np.broadcast_arrays(self._neutral[0] + vx * ahead, self._neutral[1] + vy * ahead)
+        with np.errstate(invalid="ignore"):
+            angles = self._leg.angles(x, y, self._neutral[2] + self._up, xp=np)
+        load = np.zeros(x.shape[:-1])
+        for angle, speed in zip(angles, self._speeds, strict=True):
+            steps = np.abs(np.diff(angle, axis=-1)).max(axis=-1)
+            load = np.maximum(load, steps / (self._step_s * speed * SPEED_SHARE))
+        sweep = 0.5 * self._duty * cycle[:, 0] * np.hypot(vx, vy)[..., 0]
+        out: Array = np.where(np.isnan(load) | (sweep > self._reach), np.inf, load)
+        return out
+
+
+def _fastest(load: Array) -> float:
+    """The greatest share of the peak speed, the same both ways, up to which some cycle
+    will do; `load` is over -1..1 and the cycles."""
+    ok = load.min(axis=-1) <= FASTEST_LOAD
+    both = ok[LEVELS:] & ok[LEVELS::-1]
+    beyond = np.flatnonzero(~both)
+    return float((beyond[0] - 1 if len(beyond) else LEVELS) / LEVELS)
 
 
 def _place(share: float) -> tuple[int, float]:
@@ -167,6 +216,15 @@ def fit_envelope(twist: Twist, envelope: Envelope) -> Twist:
         + (yaw_rate / envelope.turn_rad_s) ** 2
     )
     return twist if size <= 1.0 else (vx / size, vy / size, yaw_rate / size)
+
+
+def fit_feet(twist: Twist, feet: Sequence[Vec2], fastest_m_s: Sequence[Vec2]) -> Twist:
+    """A twist scaled as a whole so that no foot must go faster over the ground than it can."""
+    vx, vy, yaw_rate = twist
+    most = 1.0
+    for (x, y), (along, across) in zip(feet, fastest_m_s, strict=True):
+        most = max(most, abs(vx - yaw_rate * y) / along, abs(vy + yaw_rate * x) / across)
+    return twist if most == 1.0 else (vx / most, vy / most, yaw_rate / most)
 
 
 def fit_stride(twist: Twist, stance_s: float, feet: Sequence[Vec2], radii_m: Sequence[float]) -> Twist:

@@ -9,6 +9,7 @@ from hobnail.motion.foot_path import FootPath
 from hobnail.motion.pacing import (
     CycleTable,
     fit_envelope,
+    fit_feet,
     fit_stride,
     peak_foot_velocities,
     reach_radius,
@@ -53,14 +54,16 @@ class GaitPlan:
                 neutrals,
                 joint_speeds_rad_s(robot, robot.supply.nominal_v),
                 peak_foot_velocities(robot, self._neutral),
+                self.reach_m,
             )
 
     def fit(self, twist: Twist, slow_supply: float) -> tuple[Twist, float]:
         """The command that is walked for the one asked, and its cycle rate (1/s): scaled as
-        a whole into the envelope and into what the stride allows."""
+        a whole into the envelope and into what the servos and the stride allow."""
         twist = fit_envelope(twist, self._robot.envelope)
         cycle_s = self.gait.cycle_s
         if self._table:
+            twist = fit_feet(twist, self._neutral, self._table.fastest_m_s)
             vx, vy, yaw_rate = twist
             velocities = [(vx - yaw_rate * y, vy + yaw_rate * x) for x, y in self._neutral]
             cycle_s = self._table.cycle_s(velocities, slow_supply)
