@@ -13,7 +13,6 @@ import contextlib
 import json
 import math
 import os
-import tempfile
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, fields, replace
 from pathlib import Path
@@ -284,6 +283,8 @@ def write_calibration(path: Path, calibration: Calibration) -> None:
 
     Raises CalibrationError when that cannot be done, and says which of the two it is.
     """
+    import tempfile  # slow to import, and loading a robot does without
+
     path = Path(os.path.realpath(path))
     temporary, outcome = "", "The file is as it was."
     try:
