@@ -123,7 +123,7 @@ def test_none_is_an_empty_one(config: Path) -> None:
         (
             "  main:",
             "  mian:",
-            "4:3: boards.mian: found unknown name mian; allowed: main. Did you mean main?",
+            "4:3: boards.mian: found unknown name 'mian'; allowed: main. Did you mean main?",
         ),
         ("trim_deg: 2", "trim: 2", "Did you mean trim_deg?"),
         ("trim_deg: 2", "trim_deg: 46", "allowed: a number from -45 to 45 deg"),

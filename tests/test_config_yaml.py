@@ -55,6 +55,7 @@ def test_nodes_know_their_place_and_path() -> None:
         (b"a: 1\nb: *x\n", 2, 4, "b", "anchor or alias"),
         (b"a: !!python/object/apply:os.system [x]\n", 1, 4, "a", "the tag"),
         (b"a: !!float 1\n", 1, 4, "a", "the tag"),
+        (b"a: !%0a 1\n", 1, 4, "a", "the tag"),
         (b"a: !mine 1\n", 1, 4, "a", "the tag"),
         (b"a: 1\na: 2\n", 2, 1, "a", "a second a"),
         (b"x:\n  a: 1\n  b: 1\n  a: 1\n", 4, 3, "x.a", "first is in line 2"),

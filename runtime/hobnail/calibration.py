@@ -162,9 +162,11 @@ def _check_names(section: Section, robot: Robot, report: Report) -> None:
 
 
 def _check_known(node: Node, known: Mapping[str, Joint | Board], report: Report) -> None:
-    for name, key in node.keys.items() if isinstance(node, YamlMapping) else ():
-        if name not in known and node.path:  # no path: the section is not there at all
-            report.add(key, f"unknown name {name}", ", ".join(known), nearest(name, known))
+    if not isinstance(node, YamlMapping) or not node.path:  # no path: the section is not there at all
+        return
+    for name, key in node.keys.items():
+        if name not in known and not report.full:
+            report.add(key, f"unknown name {name[:40]!r}", ", ".join(known), nearest(name, known))
 
 
 def apply_calibration(robot: Robot, calibration: Calibration) -> Robot:

@@ -62,7 +62,7 @@ class Reach:
 
 def check_reach(section: Section, report: Report) -> None:
     """Tell which heights are out of reach, feet straight under their legs; for what could be read."""
-    legs = [leg for leg in _built_legs(section) if leg is not None]
+    legs = _built_legs(section)
     stance = section.values.get("stance")
     if not legs or stance is None:
         return
@@ -84,17 +84,16 @@ def check_balanced_reach(section: Section, robot: Robot, report: Report) -> None
     _check_heights(section, Reach(robot.legs, feet), hint, report)
 
 
-def _built_legs(section: Section) -> list[Leg | None]:
+def _built_legs(section: Section) -> list[Leg]:
+    """The legs of which nothing is missing or bad."""
     servos = {
         each.values["name"]: each for each in section.values.get("servos") or () if "name" in each.values
     }
-    return [
-        build_leg(leg, servos) if _complete(leg, servos) else None for leg in section.values.get("legs") or ()
-    ]
+    legs = section.values.get("legs") or ()
+    return [build_leg(leg, servos) for leg in legs if _complete(leg, servos)]
 
 
 def _complete(leg: Section, servos: dict[str, Section]) -> bool:
-    """True when nothing that makes a leg is missing or bad."""
     if not _has_required(leg) or abs(leg.values["hip_mm"][1]) < CLEAR_M:
         return False
     for joint in (leg.values["joints"].values.get(name) for name in JOINT_NAMES):

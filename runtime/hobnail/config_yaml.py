@@ -251,7 +251,7 @@ class _Composer:
                 event, "an anchor or alias", "values written out", "Write the value again, without & and *."
             )
         if tag is not None:
-            self._refuse(event, f"the tag {tag[:40]}", "values without tags", "Remove the tag.")
+            self._refuse(event, f"the tag {tag[:40]!r}", "values without tags", "Remove the tag.")
         if isinstance(event, yaml.ScalarEvent):
             return Scalar(path=path, line=line, column=column, text=event.value, plain=not event.style)
         if depth >= MAX_DEPTH:
