@@ -48,22 +48,30 @@ def derivatives(path: FootPath, at: float, step: float) -> NDArray[np.float64]:
     return np.array(found)
 
 
+STRAIGHT = FootPath((Keyframe(time=0.0, travel=0.0, lift=0.0), Keyframe(time=1.0, travel=1.0, lift=0.0)))
+
+
 def test_minimum_jerk_at_a_quarter() -> None:
     """Flash & Hogan 1985: 10 u^3 - 15 u^4 + 6 u^5 at u = .25 is .103515625, exactly.
 
-    A swing of two keyframes is that profile for its travel; the built-in one lifts
-    with it, to the top in half the time.
+    Between two keyframes at rest that profile is the whole path: travel from end to
+    end, and lift up to a middle keyframe and down again.
     """
-    bare = FootPath((Keyframe(time=0.0, travel=0.0, lift=0.0), Keyframe(time=1.0, travel=1.0, lift=0.0)))
-    assert bare.at(0.25) == (0.103515625, 0.0)
-    assert FootPath(BUILT_IN_SWING).at(0.125)[1] == 0.103515625
-    assert FootPath(BUILT_IN_SWING).at(0.875)[1] == pytest.approx(0.103515625, abs=1e-15)
+    up_and_down = FootPath(
+        (
+            Keyframe(time=0.0, travel=0.0, lift=0.0),
+            Keyframe(time=0.5, travel=0.5, lift=1.0),
+            Keyframe(time=1.0, travel=1.0, lift=0.0),
+        )
+    )
+    assert STRAIGHT.at(0.25) == (0.103515625, 0.0)
+    assert up_and_down.at(0.125)[1] == 0.103515625
+    assert up_and_down.at(0.875)[1] == pytest.approx(0.103515625, abs=1e-15)
 
 
 def test_minimum_jerk_peaks() -> None:
     """Flash & Hogan 1985: peak speed 1.875 d/T, peak acceleration (10 / sqrt 3) d/T^2."""
-    bare = FootPath((Keyframe(time=0.0, travel=0.0, lift=0.0), Keyframe(time=1.0, travel=1.0, lift=0.0)))
-    travel = sampled(bare, np.linspace(0.0, 1.0, 20001))[0]
+    travel = sampled(STRAIGHT, np.linspace(0.0, 1.0, 20001))[0]
     speed = np.gradient(travel, 1.0 / 20000)
     assert speed.max() == pytest.approx(1.875, rel=1e-7)
     assert np.gradient(speed, 1.0 / 20000).max() == pytest.approx(10.0 / 3.0**0.5, rel=1e-4)
@@ -151,3 +159,14 @@ def test_slope_cap_is_the_greatest_that_keeps_quintics_monotone() -> None:
 
     assert steepest_fall(SLOPE_CAP) >= -1e-12
     assert steepest_fall(1.1 * SLOPE_CAP) < 0.0
+
+
+def test_built_in_swing_ends_its_travel_before_it_lands() -> None:
+    """Common practice: the foot comes down on the spot, and leaves the ground before it goes far."""
+    path = FootPath(BUILT_IN_SWING)
+    times = np.linspace(0.0, 1.0, 201)
+    travel, lift = sampled(path, times)
+    assert lift.max() == 1.0
+    assert lift[1:-1].min() > 0.0
+    assert travel[times >= 0.9] == pytest.approx(1.0)
+    assert np.diff(travel).min() >= -1e-12
