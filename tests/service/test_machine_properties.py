@@ -158,7 +158,7 @@ class MachineLife(RuleBasedStateMachine):
     def restart(self) -> None:
         """The service dies (its pulses are released after it) and starts again."""
         rig = self.rig
-        last = rig.machine.body._last
+        last = rig.machine.body.last_rad
         rig.machine = Machine(rig.robot, now_s=rig.now_s, last_joints_rad=last)
         rig.frame = None
         rig.states.append(State.OFF)

@@ -50,6 +50,11 @@ class Body:
             self._supply_v = self.controller.supply_v = volts
 
     @property
+    def last_rad(self) -> tuple[float, ...] | None:
+        """Where every joint was last commanded to; None when nothing is known."""
+        return self._last
+
+    @property
     def is_waking(self) -> bool:
         """Joints are being woken, or move to the rest posture after that."""
         return self._waking is not None

@@ -96,6 +96,11 @@ class Bus:
         """Start the thread; the boards are not touched yet."""
         self._thread.start()
 
+    @property
+    def thread_id(self) -> int:
+        """The system's number of the thread, for its scheduling; 0 before `start`."""
+        return self._thread.native_id or 0
+
     def submit(self, pulses_us: Pulses) -> None:
         """Send this frame, instead of one that is still waiting."""
         with self._wanted:

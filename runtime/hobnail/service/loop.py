@@ -10,7 +10,7 @@ from __future__ import annotations
 import gc
 import time
 import traceback
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from typing import Protocol
 
 from hobnail.service.bus import Bus
@@ -63,9 +63,9 @@ class Loop:
         supply: SupplyWatch | None = None,
         stop_input: StopInputWatch | None = None,
         before_tick: Callable[[float], object] | None = None,
-        after_tick: Callable[[float], object] | None = None,
+        after_tick: Sequence[Callable[[float], object]] = (),
     ) -> None:
-        """`before_tick` and `after_tick` are called with the time once a tick; they must be short."""
+        """`before_tick` and each of `after_tick` are called with the time once a tick; they must be short."""
         self.machine = machine
         self.bus = bus
         self.lateness = Lateness()
@@ -216,8 +216,8 @@ class Loop:
             self._checked_s = now_s
             self.bus.check()
         self._feed(frame, now_s)
-        if self._after_tick is not None:
-            self._after_tick(now_s)
+        for call in self._after_tick:
+            call(now_s)
         if now_s - self._old_s >= OLD_EVERY_S and frame.state is not State.WALKING:
             self._old_s = self._young_s = now_s
             gc.collect()

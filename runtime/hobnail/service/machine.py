@@ -17,10 +17,12 @@ from hobnail.robot import Robot
 from hobnail.service.body import Body
 from hobnail.service.commander import Commander
 from hobnail.service.faults import Faults, Severity, run_each
+from hobnail.service.overload import LoadWatch
 from hobnail.service.requests import Params, Requests
 from hobnail.service.snapshot import snapshot
 from hobnail.service.states import (
     CARRYING,
+    LYING,
     NEXT,
     NO_PULSES,
     ON_FEET,
@@ -74,6 +76,7 @@ class Machine:
         self.instruments = dict(instruments or {})
         self.counters = {"clamped": 0, "out_of_reach": 0, "slowed": 0}
         self.on_cut: Callable[[], object] | None = None
+        self._load = LoadWatch(robot)
         self._requests = Requests(self)
         self._route_client = LOCAL_CLIENT
         self._active_s = now_s
@@ -243,6 +246,9 @@ class Machine:
     def _advance(self, now_s: float, dt_s: float) -> None:
         body = self.body
         self._steer(now_s)
+        carried = body.tick if self.state not in LYING else None
+        for name in self._load.update(carried, dt_s, body.supply_v):
+            self.report("overload", now_s, name)
         if self.state in NO_PULSES:
             return
         if body.is_waking:

@@ -7,9 +7,10 @@ from __future__ import annotations
 
 import gc
 import os
+import resource
 import sys
 
-FIFO_PRIORITY = 50  # above every ordinary process, below the kernel's own interrupt threads' usual 50 at most
+FIFO_PRIORITY = 40  # above every ordinary process, below the kernel's interrupt threads at 50
 SWITCH_S = 0.0005  # how long another thread may compute before the loop gets its turn
 _MCL_CURRENT, _MCL_FUTURE = 1, 2
 
@@ -28,20 +29,26 @@ def usual_collector() -> None:
     gc.unfreeze()
 
 
-def go_realtime() -> list[str]:
-    """Take real-time scheduling for this thread and lock memory; what came of it, in words."""
+def go_realtime(bus_thread_id: int) -> list[str]:
+    """Real-time scheduling for this thread and the bus thread, and locked memory; what came
+    of it, in words."""
     told = []
     try:
-        # Children, if there were any, must not inherit it.
-        os.sched_setscheduler(0, os.SCHED_FIFO | os.SCHED_RESET_ON_FORK, os.sched_param(FIFO_PRIORITY))
+        for thread_id in (0, bus_thread_id):
+            # Children, if there were any, must not inherit it.
+            os.sched_setscheduler(
+                thread_id, os.SCHED_FIFO | os.SCHED_RESET_ON_FORK, os.sched_param(FIFO_PRIORITY)
+            )
         told.append(f"real-time scheduling: on, SCHED_FIFO {FIFO_PRIORITY}")
     except OSError as error:
         told.append(f"real-time scheduling: off, {error.strerror}; LimitRTPRIO in the unit allows it")
     import ctypes  # needed only here, and slow to load
 
+    # To lock what is yet to come as well would make an allocation fail where locking is limited.
+    unlimited = resource.getrlimit(resource.RLIMIT_MEMLOCK)[0] == resource.RLIM_INFINITY
     libc = ctypes.CDLL(None, use_errno=True)
-    if libc.mlockall(_MCL_CURRENT | _MCL_FUTURE) == 0:
-        told.append("memory: locked")
+    if libc.mlockall(_MCL_CURRENT | _MCL_FUTURE if unlimited else _MCL_CURRENT) == 0:
+        told.append("memory: locked" if unlimited else "memory: what is there now is locked")
     else:
         told.append(
             f"memory: not locked, {os.strerror(ctypes.get_errno())}; LimitMEMLOCK in the unit allows it"

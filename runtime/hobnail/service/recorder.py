@@ -34,6 +34,7 @@ HEADER_BYTES = 8192
 _HEADER = struct.Struct("<8sII")  # magic, length and CRC-32 of the JSON text that follows
 _NUMBERS = 12  # lateness, command 3, velocity 3, pose 3, slowdown, supply
 _CRC = struct.Struct("<I")
+_NUMBER = struct.Struct("<Q")  # what every row begins with
 _STATES = tuple(State)
 _FAULTS = tuple(KINDS)
 
@@ -68,22 +69,12 @@ class Ring:
     header: dict[str, object]
     rows: tuple[Row, ...]
 
-    def last_posture(self) -> tuple[float, ...] | None:
-        """The newest commanded angle of each joint, rad; None when one is not known."""
-        if not self.rows:
-            return None
-        posture = [math.nan] * len(self.rows[-1].joints_rad)
-        for row in reversed(self.rows):
-            posture = [
-                new if math.isnan(old) else old for old, new in zip(posture, row.joints_rad, strict=True)
-            ]
-            if not any(map(math.isnan, posture)):
-                return tuple(posture)
-        return None
-
 
 class Recorder:
-    """Writes the ring; `row` costs some microseconds and touches no file."""
+    """Writes the ring; `row` costs some microseconds and touches no file.
+
+    `was_interrupted`: the ring before this one, kept as the previous one, does not end at rest.
+    """
 
     def __init__(self, directory: Path, robot: Robot) -> None:
         """Start a new ring; one with rows in it is kept as the previous one.
@@ -91,7 +82,10 @@ class Recorder:
         Raises OSError when there is no room, or no right to write there.
         """
         path = directory / RING_NAME
-        if has_rows(path):
+        last = last_state(path)
+        # Killed or crashed: the robot was not even at rest when its last row was written.
+        self.was_interrupted = last not in (None, State.RESTING)
+        if last is not None:
             path.replace(directory / PREVIOUS_NAME)
         joints = len(robot.joints)
         self._row = _row_struct(joints)
@@ -174,48 +168,71 @@ def read_ring(path: Path) -> Ring:
     Raises OSError when it cannot be read, ServiceError when not even its header is whole.
     """
     data = path.read_bytes()
-    header = _read_header(data, path)
-    names = header["joints"]
-    assert isinstance(names, list)
-    joints = len(names)
+    header, joints = _read_header(data, path)
     form = _row_struct(joints)
-    rows = []
-    for start in range(HEADER_BYTES, len(data) - form.size - _CRC.size + 1, form.size + _CRC.size):
-        body = data[start : start + form.size]
-        if body.count(0) == len(body):
-            continue  # never written
-        if _CRC.unpack_from(data, start + form.size) == (zlib.crc32(body),):
-            rows.append(_unpacked(form.unpack(body), joints))
-    rows.sort(key=lambda row: row.number)
+    rows = [_unpacked(form.unpack_from(data, start), joints) for start in _whole_rows(data, form)]
     return Ring(header, tuple(rows))
 
 
 def last_posture(directory: Path, robot: Robot) -> tuple[float, ...] | None:
-    """Where the joints of this very configuration were last commanded to; None when not known."""
+    """Where the joints of this very configuration were last commanded to, rad; None when not known."""
     for name in (RING_NAME, PREVIOUS_NAME):
+        path = directory / name
         try:
-            ring = read_ring(directory / name)
+            data = path.read_bytes()
+            header, joints = _read_header(data, path)
         except (OSError, ServiceError):
             continue
-        posture = ring.last_posture() if ring.header.get("digest") == robot.digest else None
+        if header.get("digest") != robot.digest or joints != len(robot.joints):
+            continue
+        posture = _newest_angles(data, joints)
         if posture is not None:
             return posture
     return None
 
 
-def has_rows(path: Path) -> bool:
-    """There is a ring with at least one row in it."""
+def last_state(path: Path) -> State | None:
+    """The state in the newest row of a ring file; None when there is no ring, or no row in it."""
     try:
-        return bool(read_ring(path).rows)
+        data = path.read_bytes()
+        _, joints = _read_header(data, path)
     except (OSError, ServiceError):
-        return False
+        return None
+    form = _row_struct(joints)
+    starts = _whole_rows(data, form)
+    return _unpacked(form.unpack_from(data, starts[-1]), joints).state if starts else None
+
+
+def _newest_angles(data: bytes, joints: int) -> tuple[float, ...] | None:
+    """The newest commanded angle of each joint; while joints wake, some are in older rows only."""
+    form = _row_struct(joints)
+    posture = (math.nan,) * joints
+    for start in reversed(_whole_rows(data, form)):
+        angles = form.unpack_from(data, start)[-joints:]
+        posture = tuple(old if math.isfinite(old) else new for old, new in zip(posture, angles, strict=True))
+        if all(map(math.isfinite, posture)):
+            return posture
+    return None
+
+
+def _whole_rows(data: bytes, form: struct.Struct) -> list[int]:
+    """Where the rows with a right checksum begin, oldest first."""
+    size = form.size
+    found = []
+    for start in range(HEADER_BYTES, len(data) - size - _CRC.size + 1, size + _CRC.size):
+        number = _NUMBER.unpack_from(data, start)[0]
+        # Rows count from 1: a row of zeros was never written.
+        if number and _CRC.unpack_from(data, start + size)[0] == zlib.crc32(data[start : start + size]):
+            found.append((number, start))
+    return [start for _, start in sorted(found)]
 
 
 def _row_struct(joints: int) -> struct.Struct:
     return struct.Struct(f"<QddIB3x{_NUMBERS + 2 * joints}f")
 
 
-def _read_header(data: bytes, path: Path) -> dict[str, object]:
+def _read_header(data: bytes, path: Path) -> tuple[dict[str, object], int]:
+    """The header, and the number of joints in it."""
     problem = ServiceError(
         f"{path}: not a recording of hobnail, or its first {HEADER_BYTES} bytes are damaged"
     )
@@ -226,9 +243,7 @@ def _read_header(data: bytes, path: Path) -> dict[str, object]:
     if magic != MAGIC or zlib.crc32(text) != checksum:
         raise problem
     header = json.loads(text)
-    if not isinstance(header, dict):
-        raise problem
-    return header
+    return header, len(header["joints"])
 
 
 def _unpacked(values: tuple[Any, ...], joints: int) -> Row:

@@ -19,12 +19,15 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Self
 
+from hobnail.calibration import calibration_path
 from hobnail.errors import DriverUnavailableError
 from hobnail.robot import Robot
+from hobnail.service.archive import load_posture
 from hobnail.service.bus import Bus, advice
 from hobnail.service.drivers import open_contact, open_driver, open_monitor
 from hobnail.service.errand import Errand
 from hobnail.service.faults import run_each
+from hobnail.service.keeper import Keeper
 from hobnail.service.loop import Loop
 from hobnail.service.machine import Machine
 from hobnail.service.notify import Notifier
@@ -137,12 +140,13 @@ def run(
     """Run the robot until it is told to end; the exit code, 0 or 75.
 
     `driver` is a name from the entry-point group, with its argument after a
-    colon.  The last minute, the last posture and the note for `hobnail-release`
-    are kept in `state_dir`, by default the socket's directory, which should be
-    a tmpfs.  Log lines go to stderr and, as JSON, to `log_dir`.  `route` is
-    walked at once; the run then ends lying down, pulses off, with 0 when every
-    step was walked and 75 when not.  `on_state` is called ten times a second,
-    in a thread of its own, with what `state` tells.
+    colon.  The last minute and the note for `hobnail-release` are kept in the
+    socket's directory, which should be a tmpfs; what is to outlive a reboot, the
+    last posture and the recordings of stops, in `state_dir`.  Log lines go to
+    stderr and, as JSON, to `log_dir`.  `route` is walked at once; the run then
+    ends lying down, pulses off, with 0 when every step was walked and 75 when
+    not.  `on_state` is called ten times a second, in a thread of its own, with
+    what `state` tells.
 
     Raises DriverUnavailableError, ServiceError (the socket), CommandError (a
     route that does not fit the robot), OSError (a directory).
@@ -166,7 +170,8 @@ class Running:
         self._robot = robot
         self._driver_name = driver
         self._socket_path = socket_path
-        self._directory = state_dir or socket_path.parent
+        self._runtime_dir = socket_path.parent
+        self._state_dir = state_dir
         self._log_dir = log_dir
         self._group = group
         self._closers: list[Callable[[], object]] = []
@@ -185,14 +190,14 @@ class Running:
 
     def _open(self) -> None:
         robot = self._robot
-        for folder in (self._socket_path.parent, self._directory, self._log_dir):
+        for folder in (self._runtime_dir, self._state_dir, self._log_dir):
             if folder is not None:
                 folder.mkdir(mode=0o750, parents=True, exist_ok=True)
         writer = Writer("writer")
         self._closers.append(lambda: writer.close(CLOSE_S))
         self.log = EventLog(writer, self._log_dir, (_to_stderr,))
         driver = open_driver(self._driver_name, robot)
-        note_boards(self._directory / NOTE_NAME, driver.notes())
+        note_boards(self._runtime_dir / NOTE_NAME, driver.notes())
         monitor, contact = (None, None) if driver.is_model else (open_monitor(robot), open_contact(robot))
         for device in (monitor, contact):
             if device is not None:
@@ -202,10 +207,18 @@ class Running:
         self.bus.start()
         self._set_up()
         now_s = time.monotonic()
-        self.machine = Machine(robot, now_s=now_s, last_joints_rad=last_posture(self._directory, robot))
+        last = last_posture(self._runtime_dir, robot)
+        if last is None and self._state_dir is not None:
+            last = load_posture(self._state_dir, robot)
+        self.machine = Machine(robot, now_s=now_s, last_joints_rad=last)
         self.machine.instruments["driver"] = self._describe_driver
-        self.recorder = Recorder(self._directory, robot)
+        self.recorder = Recorder(self._runtime_dir, robot)
         self._closers.append(self.recorder.close)
+        source = Path(robot.source)
+        sources = (source, calibration_path(source)) if robot.source else ()
+        self.keeper = Keeper(self.machine, writer, sources, self._runtime_dir, self._state_dir)
+        if self.recorder.was_interrupted:
+            self.keeper.keep_previous()
         self.server = SocketServer(
             self._socket_path,
             lambda method, params, client: self.machine.request(method, params, client, time.monotonic()),
@@ -241,12 +254,12 @@ class Running:
             supply=SupplyWatch(self._robot.supply),
             stop_input=self.stop_input,
             before_tick=attendant.before_tick,
-            after_tick=attendant.after_tick,
+            after_tick=(self.keeper.update, attendant.after_tick),
         )
         self._closers.append(attendant.catch_signals())
         now_s = time.monotonic()
         if realtime:
-            for line in go_realtime():
+            for line in go_realtime(self.bus.thread_id):
                 self.log.event("start", line, now_s)
         quiet_collector()
         self._closers.append(usual_collector)

@@ -51,6 +51,7 @@ CARRYING = frozenset({State.RISING, State.STANDING, State.WALKING, State.LOWERIN
 ON_FEET = frozenset({State.STANDING, State.WALKING})
 STILL = frozenset({State.OFF, State.RESTING, State.STANDING})
 NO_PULSES = frozenset({State.OFF, State.STOPPED})
+LYING = NO_PULSES | {State.WAKING, State.RESTING}  # the belly carries the weight, not the servos
 LATCHED = frozenset({State.STOPPING, State.STOPPED})
 
 _ANY_UNLATCHED = frozenset(State) - LATCHED
