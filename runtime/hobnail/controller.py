@@ -12,9 +12,10 @@ from bisect import bisect_right
 from dataclasses import dataclass
 
 from hobnail.errors import CommandError
+from hobnail.motion.joint_steps import STEP_SHARE
 from hobnail.motion.plan import joint_speeds_rad_s
 from hobnail.motion.planar import to_origin
-from hobnail.motion.walker import STEP_SHARE, Walker
+from hobnail.motion.walker import Walker
 from hobnail.robot import Robot, Vec3
 from hobnail.servo import JointMap
 
@@ -152,7 +153,7 @@ class Controller:
         clamped = walker.clamped
         pulses = []
         body = walker.body
-        angles = (angle for leg in walker.commanded_rad for angle in leg)
+        angles = (angle for leg in walker.lead.commanded_rad for angle in leg)
         for angle, (knots, pieces, low, high) in zip(angles, self._pieces, strict=True):
             offset, slope = pieces[bisect_right(knots, angle)] if knots else pieces[0]
             pulse = offset + slope * angle
@@ -160,7 +161,7 @@ class Controller:
             pulses.append(low if pulse < low else high if pulse > high else pulse)
         return Tick(
             body.joints_rad,
-            walker.commanded_rad,
+            walker.lead.commanded_rad,
             body.feet_m,
             walker.stance,
             tuple(pulses),

@@ -19,15 +19,15 @@ from hobnail.robot import Envelope, Gait, Robot, Span, Vec2, Vec3
 
 DIRECTIONS = 16  # in which reach is tried
 GRID = 5  # foot velocities an axis, over the envelope
-CYCLES = 24  # cycle times tried
-SAMPLES = 24  # points along a swing
+CYCLES = 12  # cycle times tried
+SAMPLES = 20  # points along a swing
 # The part of the allowed joint speed that the automatic cycle plans with: the rest is
 # for arcs, changes of command and the corrections for load.
 SPEED_SHARE = 0.9
 
 # Load up to which a speed is offered: at the peak of its swing the robot slows for a moment.
 FASTEST_LOAD = 1.3
-LEVELS = 24  # speeds tried for that, from standing to the peak
+LEVELS = 12  # speeds tried for that, from standing to the peak
 
 Array = NDArray[np.float64]
 
@@ -239,6 +239,13 @@ def fit_stride(twist: Twist, stance_s: float, feet: Sequence[Vec2], radii_m: Seq
         if sweep > radius:
             share = min(share, radius / sweep)
     return twist if share == 1.0 else (twist[0] * share, twist[1] * share, twist[2] * share)
+
+
+def fit_steady(twist: Twist, cycle_s: float, strides: Vec3) -> Twist:
+    """A twist scaled as a whole so that its stride stays within the ellipsoid of those that
+    keep a slow gait's balance (`hobnail.motion.steadiness`)."""
+    size = math.sqrt(sum((v * cycle_s / most) ** 2 for v, most in zip(twist, strides, strict=True)))
+    return twist if size <= 1.0 else (twist[0] / size, twist[1] / size, twist[2] / size)
 
 
 def peak_foot_velocities(robot: Robot, feet: Sequence[Vec2]) -> list[Vec2]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 
 from hobnail.motion.foot import Foot
@@ -10,12 +11,15 @@ from hobnail.motion.pacing import (
     CycleTable,
     fit_envelope,
     fit_feet,
+    fit_steady,
     fit_stride,
     peak_foot_velocities,
     reach_radius,
     room_between_feet,
 )
 from hobnail.motion.planar import Twist
+from hobnail.motion.steadiness import steady_strides
+from hobnail.motion.support import support_centre
 from hobnail.motion.sway import PeriodicSway
 from hobnail.robot import Gait, Robot, Vec2, Vec3
 
@@ -28,7 +32,18 @@ class GaitPlan:
     """A gait on a robot: its foot path, sway and load transfer, how far each foot may be
     led from neutral, and how commands are fitted to all that."""
 
-    __slots__ = ("_neutral", "_robot", "_table", "arm2_m2", "gait", "load_ramp", "path", "reach_m", "sway")
+    __slots__ = (
+        "_neutral",
+        "_robot",
+        "_strides",
+        "_table",
+        "arm2_m2",
+        "gait",
+        "load_ramp",
+        "path",
+        "reach_m",
+        "sway",
+    )
 
     def __init__(self, robot: Robot, gait: Gait, feet: Sequence[Foot]) -> None:
         self._robot = robot
@@ -46,6 +61,12 @@ class GaitPlan:
         # Mean square distance of the feet from the body: a turning moment over it is the
         # force over arm of each.
         self.arm2_m2 = sum(x * x + y * y for x, y in self._neutral) / len(feet)
+        self._strides: Vec3 | None = None
+        if self.sway.leads:
+            longest = 2.0 * max(self.reach_m)
+            arm = math.sqrt(self.arm2_m2)
+            centre = support_centre(self._neutral, robot.gaits[0].duty, robot.gaits[0].phases)
+            self._strides = steady_strides(self._neutral, gait, centre, (longest, longest, longest / arm))
         self._table: CycleTable | None = None
         if gait.cycle_s is None:
             self._table = CycleTable(
@@ -59,7 +80,7 @@ class GaitPlan:
 
     def fit(self, twist: Twist, slow_supply: float) -> tuple[Twist, float]:
         """The command that is walked for the one asked, and its cycle rate (1/s): scaled as
-        a whole into the envelope and into what the servos and the stride allow."""
+        a whole into the envelope and into what servos, reach and balance allow."""
         twist = fit_envelope(twist, self._robot.envelope)
         cycle_s = self.gait.cycle_s
         if self._table:
@@ -69,6 +90,8 @@ class GaitPlan:
             cycle_s = self._table.cycle_s(velocities, slow_supply)
         assert cycle_s is not None
         twist = fit_stride(twist, cycle_s * self.gait.duty, self._neutral, self.reach_m)
+        if self._strides:
+            twist = fit_steady(twist, cycle_s, self._strides)
         return twist, 1.0 / cycle_s
 
 

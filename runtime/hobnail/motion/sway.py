@@ -148,8 +148,8 @@ class BodyShift:
             ease_x, ease_y = self._ease
             self._ease = (settle(ease_x, time_s, left), settle(ease_y, time_s, left))
             self._left_s = max(left - time_s, 0.0)
-            (ease_x, _, bend_x), (ease_y, _, bend_y) = self._ease
-            x, y, ax, ay = x + ease_x, y + ease_y, ax + bend_x, ay + bend_y
+            (off_x, _, bend_x), (off_y, _, bend_y) = self._ease
+            x, y, ax, ay = x + off_x, y + off_y, ax + bend_x, ay + bend_y
         if time_s > 0.0:
             self._speed = ((x - self.value[0]) / time_s, (y - self.value[1]) / time_s)
         self.value = (x, y)

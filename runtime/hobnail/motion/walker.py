@@ -19,10 +19,11 @@ from collections.abc import Sequence
 from hobnail.motion.balance import GRAVITY_M_S2, neutral_feet
 from hobnail.motion.foot import LAST_AIM, Foot, FootState, Swing
 from hobnail.motion.glide import AT_REST, Glide, GlideState, Slew, SlewState, minimum_jerk
+from hobnail.motion.joint_steps import ServoLead, clamp_steps, excess_step
 from hobnail.motion.plan import GaitPlan
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist
 from hobnail.motion.sway import NONE, BodyShift, SwayState
-from hobnail.motion.whole_body import WholeBody, hold
+from hobnail.motion.whole_body import WholeBody
 from hobnail.robot import Gait, Robot, Span, Vec2, Vec3
 
 STILL: Twist = (0.0, 0.0, 0.0)
@@ -34,12 +35,13 @@ REACH_SHARE = 0.95
 CLOCK_STEP = 0.05
 # Share of a cycle for the body to move over its first support before a foot lifts.
 START_SHIFT = 0.25
+# Share of the command's speed at which a slow gait starts, until every foot has stepped:
+# its balance counts on feet that are where the gait has put them.
+START_SHARE = 0.4
 # The feet's share of the weight never changes faster than all of it in 1/40 s.
 LOAD_RATE_HZ = 40.0
 # Height above rest (m) over which the feet take the weight from the belly.
 LOADING_M = 0.01
-# Of the allowed joint step: rounding must not carry a joint past it.
-STEP_SHARE = 0.9999
 RETRIES = 8
 RETRY_SHARE = 0.9995
 
@@ -49,8 +51,8 @@ _Saved = tuple[tuple[Pose, float, float], SwayState, SlewState, GlideState, list
 class Walker:
     """The robot's motion.  A new one stands at its neutral stance, or lies at rest height.
 
-    `body` holds the angles and feet of the latest tick, `commanded_rad` what the servos
-    are to be sent.
+    `body` holds the angles and feet of the latest tick, `lead` what the servos are to be
+    sent for them.
     """
 
     def __init__(
@@ -67,8 +69,8 @@ class Walker:
             Foot(leg, neutral, robot.stance.height_m, limits, 1.0 / len(robot.legs))
             for leg, neutral, limits in zip(robot.legs, neutral_feet(robot), limits_rad, strict=True)
         ]
-        self._plans: dict[str, GaitPlan] = {}
-        self._plan = self._planned(robot.gaits[0])
+        self._plans = {gait.name: GaitPlan(robot, gait, self._feet) for gait in robot.gaits}
+        self._plan = self._plans[robot.gaits[0].name]
         self._next_plan: GaitPlan | None = None
         self._pose: Pose = (0.0, 0.0, 0.0)  # of the walk: without shift and posture
         self._clock = 0.0
@@ -89,8 +91,7 @@ class Walker:
         self.clamped = 0
         self.body = WholeBody()
         self._solve()
-        self.commanded_rad = self.body.loaded_rad
-        self._speeds = [(0.0, 0.0, 0.0)] * len(self._feet)  # of the joints along the path, rad/s
+        self.lead = ServoLead(self._feet, self.body)
 
     # -- what is asked of it -------------------------------------------------
 
@@ -105,7 +106,7 @@ class Walker:
 
     def choose_gait(self, gait: Gait) -> None:
         """Change the gait: feet in the air land first, then the new one starts."""
-        plan = self._planned(gait)
+        plan = self._plans[gait.name]
         if plan is self._plan or not self._walking:
             self._plan, self._next_plan = plan, None
         else:
@@ -176,8 +177,8 @@ class Walker:
             self._advance(time_s)
             self._solve()
             excess = max(
-                _excess(loaded, body.loaded_rad, steps_rad),
-                _excess(joints, body.joints_rad, steps_rad),
+                excess_step(loaded, body.loaded_rad, steps_rad),
+                excess_step(joints, body.joints_rad, steps_rad),
             )
             if excess <= 1.0:
                 break
@@ -187,8 +188,8 @@ class Walker:
             time_s *= RETRY_SHARE / excess if attempt < RETRIES - 2 else 0.0
         self.clamped = 0
         if excess > 1.0:
-            self._clamp(loaded, steps_rad)
-        self._lead(joints, time_s, steps_rad)
+            body.loaded_rad, self.clamped = clamp_steps(loaded, body.loaded_rad, steps_rad)
+        self.lead.advance(joints, body, time_s, steps_rad)
         share = self.slowdown = time_s / dt_s
         pace = self._pace.value
         self.velocity = (pace[0] * share, pace[1] * share, pace[2] * share)
@@ -326,31 +327,37 @@ class Walker:
             return True
         return not self._planting and math.hypot(*self._excursion(foot)) > IN_PLACE_M
 
-    def _planned(self, gait: Gait) -> GaitPlan:
-        if gait.name not in self._plans:
-            self._plans[gait.name] = GaitPlan(self._robot, gait, self._feet)
-        return self._plans[gait.name]
-
     def _start(self) -> None:
         """Set the gait clock so that a foot lifts as soon as the body is over the support
-        that it leaves: first one that lifts after the longest time without a lift-off."""
+        that it leaves."""
         plan = self._plan
-        phases, duty = plan.gait.phases, plan.gait.duty
-        lifts = sorted((phase + duty) % 1.0 for phase in phases)
-        gaps = [(lift - before) % 1.0 for before, lift in zip([lifts[-1], *lifts], lifts, strict=False)]
-        first = lifts[gaps.index(max(gaps))]
         shifts = plan.sway.leads or self._shift.value != NONE
+        self._walking = True
         self._hold = START_SHIFT if shifts else 0.0
-        self._clock = (first - self._hold - 1e-9) % 1.0
-        for foot, phase in zip(self._feet, phases, strict=True):
+        self._clock = (self._first_lift() - self._hold - 1e-9) % 1.0
+        for foot, phase in zip(self._feet, plan.gait.phases, strict=True):
             foot.offset = phase
             foot.phase = (self._clock - phase) % 1.0
             foot.stepped = False
-        self._walking = True
         self._retarget()
         rate = self._pace.target[3]
         self._pace.jump(3, rate)
         self._shift.change(plan.sway, self._clock, self._pace.value, START_SHIFT / rate)
+
+    def _first_lift(self) -> float:
+        """Time of the cycle to start at: a lift-off after as long a time without one as the
+        gait has, and of those the one that is rearmost on the way to go, since the body
+        will be moving off the feet that stay behind."""
+        gait = self._plan.gait
+        lifts = [(phase + gait.duty) % 1.0 for phase in gait.phases]
+        gaps = [min((lift - other) % 1.0 or 1.0 for other in lifts) for lift in lifts]
+        vx, vy, _ = self._wanted
+        _, first = min(
+            (foot.neutral[0] * vx + foot.neutral[1] * vy, lift)
+            for foot, lift, gap in zip(self._feet, lifts, gaps, strict=True)
+            if gap > max(gaps) - 1e-9
+        )
+        return first
 
     def _retarget(self) -> None:
         """Bring the command within what may be asked, and start to slew towards it."""
@@ -387,6 +394,8 @@ class Walker:
             stride = 0.5 * duty / rate * math.hypot(vx - yaw_rate * y, vy + yaw_rate * x)
             limit = max(REACH_SHARE * reach, stride)
             share = min(share, _share_within(ex, ey, dx, dy, limit))
+            if not foot.stepped and self._plan.sway.leads:
+                share = min(share, START_SHARE)
         twist = (vx * share, vy * share, yaw_rate * share)
         if any(abs(a - b) > 1e-9 for a, b in zip(twist, self._pace.target, strict=False)):
             self._aim_pace(twist, rate)
@@ -427,33 +436,6 @@ class Walker:
         )
         self.body.solve(self._feet, self._pose, shift.value, self._posture.value, drive)
 
-    def _clamp(self, before: tuple[Vec3, ...], steps_rad: Sequence[Vec3]) -> None:
-        """The last resort: hold each joint to its step, off the path, and count it."""
-        held = []
-        for old, new, steps in zip(before, self.body.loaded_rad, steps_rad, strict=True):
-            angles = _near(old, new, steps)
-            self.clamped += sum(a != b for a, b in zip(angles, new, strict=True))
-            held.append(angles)
-        self.body.loaded_rad = tuple(held)
-
-    def _lead(self, before: tuple[Vec3, ...], time_s: float, steps_rad: Sequence[Vec3]) -> None:
-        """Command each joint ahead by what its servo trails behind at the present speed, as
-        far as the joint's step allows."""
-        body = self.body
-        if time_s > 0.0:
-            self._speeds = [
-                ((a1 - a0) / time_s, (b1 - b0) / time_s, (c1 - c0) / time_s)
-                for (a0, b0, c0), (a1, b1, c1) in zip(before, body.joints_rad, strict=True)
-            ]
-        commanded = []
-        for foot, last, (a, b, c), (va, vb, vc), steps in zip(
-            self._feet, self.commanded_rad, body.loaded_rad, self._speeds, steps_rad, strict=True
-        ):
-            ta, tb, tc = foot.correction.trail_s
-            ahead = (a + ta * va, b + tb * vb, c + tc * vc)
-            commanded.append(hold(_near(last, ahead, steps), foot.limits))
-        self.commanded_rad = tuple(commanded)
-
     # -- trying a tick again -------------------------------------------------
 
     def _save(self) -> _Saved:
@@ -473,28 +455,6 @@ class Walker:
         self._posture.restore(posture)
         for foot, state in zip(self._feet, feet, strict=True):
             foot.restore(state)
-
-
-def _excess(before: Sequence[Vec3], after: Sequence[Vec3], steps: Sequence[Vec3]) -> float:
-    """Greatest joint step as a multiple of what is allowed; 0 when all are within."""
-    worst = 0.0
-    for old, new, most in zip(before, after, steps, strict=True):
-        if not _within(old, new, most):
-            worst = max(worst, *(abs(y - x) / d for x, y, d in zip(old, new, most, strict=True)))
-    return worst
-
-
-def _near(old: Vec3, new: Vec3, steps: Vec3) -> Vec3:
-    """`new`, or the nearest to it within one step of `old`."""
-    if _within(old, new, steps):
-        return new
-    a, b, c = (min(max(y, x - d), x + d) for x, y, d in zip(old, new, steps, strict=True))
-    return a, b, c
-
-
-def _within(old: Vec3, new: Vec3, steps: Vec3) -> bool:
-    a, b, c = steps
-    return -a <= new[0] - old[0] <= a and -b <= new[1] - old[1] <= b and -c <= new[2] - old[2] <= c
 
 
 def _share_within(ex: float, ey: float, dx: float, dy: float, limit: float) -> float:

@@ -1,0 +1,74 @@
+"""How far joints may turn in one tick, and how far ahead they are commanded; rad, s.
+
+The allowed steps are leg by leg (roll, hip pitch, knee pitch), all above zero.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from hobnail.motion.foot import Foot
+from hobnail.motion.whole_body import WholeBody, hold
+from hobnail.robot import Vec3
+
+# Of the allowed joint step: rounding must not carry a joint past it.
+STEP_SHARE = 0.9999
+
+
+def excess_step(before: Sequence[Vec3], after: Sequence[Vec3], steps: Sequence[Vec3]) -> float:
+    """Greatest joint step as a multiple of what is allowed; 0 when all are within."""
+    worst = 0.0
+    for old, new, most in zip(before, after, steps, strict=True):
+        if not _within(old, new, most):
+            worst = max(worst, *(abs(y - x) / d for x, y, d in zip(old, new, most, strict=True)))
+    return worst
+
+
+def clamp_steps(
+    before: Sequence[Vec3], after: Sequence[Vec3], steps: Sequence[Vec3]
+) -> tuple[tuple[Vec3, ...], int]:
+    """The last resort: each joint held to its step, off the path, and how many were."""
+    held = tuple(_near(old, new, most) for old, new, most in zip(before, after, steps, strict=True))
+    count = sum(a != b for one, two in zip(held, after, strict=True) for a, b in zip(one, two, strict=True))
+    return held, count
+
+
+class ServoLead:
+    """What the servos are sent: each joint ahead by what its servo trails behind at the
+    present speed, as far as the joint's step allows."""
+
+    __slots__ = ("_feet", "_speeds", "commanded_rad")
+
+    def __init__(self, feet: Sequence[Foot], body: WholeBody) -> None:
+        self._feet = feet
+        self._speeds = [(0.0, 0.0, 0.0)] * len(feet)  # of the joints along their path, rad/s
+        self.commanded_rad = body.loaded_rad
+
+    def advance(self, before: Sequence[Vec3], body: WholeBody, time_s: float, steps: Sequence[Vec3]) -> None:
+        """Go on with the body, which went from `before` in `time_s` along its path."""
+        if time_s > 0.0:
+            self._speeds = [
+                ((a1 - a0) / time_s, (b1 - b0) / time_s, (c1 - c0) / time_s)
+                for (a0, b0, c0), (a1, b1, c1) in zip(before, body.joints_rad, strict=True)
+            ]
+        commanded = []
+        for foot, last, (a, b, c), (va, vb, vc), most in zip(
+            self._feet, self.commanded_rad, body.loaded_rad, self._speeds, steps, strict=True
+        ):
+            ta, tb, tc = foot.correction.trail_s
+            ahead = (a + ta * va, b + tb * vb, c + tc * vc)
+            commanded.append(hold(_near(last, ahead, most), foot.limits))
+        self.commanded_rad = tuple(commanded)
+
+
+def _near(old: Vec3, new: Vec3, most: Vec3) -> Vec3:
+    """`new`, or the nearest to it within one step of `old`."""
+    if _within(old, new, most):
+        return new
+    a, b, c = (min(max(y, x - d), x + d) for x, y, d in zip(old, new, most, strict=True))
+    return a, b, c
+
+
+def _within(old: Vec3, new: Vec3, most: Vec3) -> bool:
+    a, b, c = most
+    return -a <= new[0] - old[0] <= a and -b <= new[1] - old[1] <= b and -c <= new[2] - old[2] <= c
