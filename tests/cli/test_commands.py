@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 from collections.abc import Iterator
 from functools import partial
 from itertools import islice
@@ -190,6 +191,42 @@ def test_waiting_ends_in_time_and_at_a_fault_that_lies_down() -> None:
     low = {"name": "supply-low", "severity": "rest", "message": "the supply is low", "next": "charge"}
     with pytest.raises(FaultError, match="supply-low: the supply is low; next: charge"):
         wait(Told(faults=[low]))
+
+
+def test_the_gait_is_listed_and_changed(service: FastService, capsys: Output) -> None:
+    main(["stand"])
+    capsys.readouterr()
+    assert main(["gait"]) == 0
+    assert capsys.readouterr().out.splitlines() == ["* trot", "  crawl", "  pace", "  amble"]
+    assert main(["gait", "crawl"]) == 0
+    assert capsys.readouterr().out == "gait crawl\n"
+    service.sleep(0.1)
+    assert main(["gait", "--json"]) == 0
+    assert json.loads(capsys.readouterr().out)["now"] == "crawl"
+    assert main(["gait", "gallop"]) == 64
+    assert "trot, crawl, pace, amble" in capsys.readouterr().err
+
+
+def test_the_posture_is_taken_in_mm_and_degrees(service: FastService, capsys: Output) -> None:
+    main(["stand"])
+    before = state(capsys)["feet_m"]
+    assert main(["posture", "--height-mm", "150", "--lean-mm", "10", "-5"]) == 0
+    service.sleep(3.0)
+    after = state(capsys)
+    assert after["height_m"] == pytest.approx(0.15)
+    for (x, y, z), (new_x, new_y, new_z) in zip(before, after["feet_m"], strict=True):
+        # The body went forward, right and down, so its feet are further back, left and up.
+        assert (new_x - x, new_y - y, new_z - z) == pytest.approx((-0.01, 0.005, 0.02), abs=1e-9)
+    assert main(["posture", "--roll-deg", "-3", "--lean-mm", "0", "0"]) == 0
+    service.sleep(3.0)
+    left, right = state(capsys)["feet_m"][:2]
+    # Rolled to the left, by the right-hand rule: the left feet are nearer to the body.
+    assert left[2] - right[2] == pytest.approx(math.sin(math.radians(3)) * (before[0][1] - before[1][1]))
+    capsys.readouterr()
+    assert main(["posture", "--height-mm", "900"]) == 64
+    assert "0.12 to 0.195" in capsys.readouterr().err
+    assert main(["posture"]) == 64
+    assert "nothing to do" in capsys.readouterr().err
 
 
 SHORT = "steps:\n  - forward_mm: 60\n  - turn_deg: 20\n    note: at the door\n"

@@ -3,14 +3,18 @@
 from __future__ import annotations
 
 import io
+import os
+import signal
 import sys
+from collections.abc import Iterator
 from typing import Any
 
 import pytest
 
-from hobnail.cli import live
+from hobnail.cli import live, watch
 from hobnail.cli.live import Display, Summary
 from hobnail.cli.screen import Screen, is_live, speaks_unicode, wants_color
+from hobnail.cli.view import View
 from robots import juniper
 from snapshots import fault, snapshot
 
@@ -101,6 +105,24 @@ def test_the_terminal_is_left_as_it_was_after_an_error_too(monkeypatch: pytest.M
     with pytest.raises(RuntimeError, match="driver"), Display(juniper()):
         raise RuntimeError("driver")
     assert terminal.getvalue().endswith("\x1b[?1049l")
+
+
+def test_watching_draws_each_snapshot_and_survives_a_closed_window(monkeypatch: pytest.MonkeyPatch) -> None:
+    terminal = on_a_terminal(monkeypatch)
+    before = signal.getsignal(signal.SIGTERM)
+
+    def snapshots() -> Iterator[dict[str, Any]]:
+        yield snapshot()
+        yield snapshot(state="standing")
+        os.kill(os.getpid(), signal.SIGTERM)
+        yield snapshot()
+
+    with pytest.raises(SystemExit) as ended:
+        watch._draw(View(), snapshots())
+    assert ended.value.code == 143
+    assert terminal.getvalue().count("\x1b[H") == 2
+    assert terminal.getvalue().endswith("\x1b[?1049l")
+    assert signal.getsignal(signal.SIGTERM) is before
 
 
 def test_log_lines_wait_until_the_screen_is_given_back(

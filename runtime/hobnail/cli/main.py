@@ -32,6 +32,8 @@ COMMANDS = {
     "stand": "wake the joints and stand up",
     "walk": "walk with a velocity until Ctrl-C, then stand",
     "route": "walk a route file",
+    "gait": "change the gait",
+    "posture": "move the body over its standing feet",
     "rest": "lie down, pulses on",
     "off": "lie down, then end the pulses",
     "stop": "emergency stop; latches",

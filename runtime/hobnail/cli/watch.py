@@ -63,7 +63,10 @@ def print_lines(snapshots: Iterable[dict[str, Any]], clock: Callable[[], float] 
 
 def _draw(view: View, snapshots: Iterable[dict[str, Any]]) -> None:
     # Ended by the service manager or by a closed window: leave the terminal whole all the same.
-    signal.signal(signal.SIGTERM, lambda *_: sys.exit(128 + signal.SIGTERM))
-    with Screen() as screen:
-        for snapshot in snapshots:
-            screen.show(view.draw(snapshot, *screen.size))
+    before = signal.signal(signal.SIGTERM, lambda *_: sys.exit(128 + signal.SIGTERM))
+    try:
+        with Screen() as screen:
+            for snapshot in snapshots:
+                screen.show(view.draw(snapshot, *screen.size))
+    finally:
+        signal.signal(signal.SIGTERM, before)
