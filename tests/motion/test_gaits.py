@@ -22,7 +22,7 @@ EIGHT: list[Vec3] = [(x, y, 0.0) for y in (0.05, -0.05) for x in (0.3, 0.1, -0.1
 
 @pytest.mark.parametrize(
     ("name", "duty", "lag"),
-    [("trot", 0.6, 0.5), ("crawl", 0.8, 0.25), ("pace", 0.6, 0.0), ("amble", 0.7, 0.25)],
+    [("trot", 0.6, 0.5), ("crawl", 0.8, 0.25), ("pace", 0.7, 0.0), ("amble", 0.7, 0.25)],
 )
 def test_hildebrand_touch_downs(name: str, duty: float, lag: float) -> None:
     """Left hind 0, left fore D, right hind 1/2, right fore 1/2 + D."""

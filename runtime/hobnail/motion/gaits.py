@@ -27,8 +27,8 @@ class GaitPattern:
 _SYMMETRICAL = {
     "trot": (0.6, 0.5, 1.0),
     "crawl": (0.8, 0.25, 1.0),  # lateral sequence
-    "pace": (0.6, 0.0, 0.0),
-    "amble": (0.7, 0.25, 0.0),
+    "pace": (0.7, 0.0, 1.0),
+    "amble": (0.7, 0.25, 1.0),
 }
 
 BUILT_IN_GAITS = (*_SYMMETRICAL, "tripod", "wave")
