@@ -242,9 +242,10 @@ def fit_stride(twist: Twist, stance_s: float, feet: Sequence[Vec2], radii_m: Seq
 
 
 def fit_steady(twist: Twist, cycle_s: float, strides: Vec3) -> Twist:
-    """A twist scaled as a whole so that its stride stays within the ellipsoid of those that
-    keep a slow gait's balance (`hobnail.motion.steadiness`)."""
-    size = math.sqrt(sum((v * cycle_s / most) ** 2 for v, most in zip(twist, strides, strict=True)))
+    """A twist scaled as a whole so that its stride keeps a slow gait's balance: what it
+    takes ahead, sideways and in turning may together use up no more than the margin
+    that each alone would (`hobnail.motion.steadiness`)."""
+    size = sum(abs(v) * cycle_s / most for v, most in zip(twist, strides, strict=True))
     return twist if size <= 1.0 else (twist[0] / size, twist[1] / size, twist[2] / size)
 
 

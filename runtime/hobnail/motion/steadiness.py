@@ -18,7 +18,7 @@ from hobnail.robot import Gait, Vec2, Vec3
 
 INSTANTS = 40  # of the cycle, at which the margin is taken
 HALVINGS = 6  # of the longest stride, to find where the margin ends
-MARGIN_M = 0.01
+MARGIN_M = 0.015
 # Of a gait's margin on the spot, where that is small already, this much must be left.
 MARGIN_SHARE = 0.5
 

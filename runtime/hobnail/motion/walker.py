@@ -37,7 +37,7 @@ CLOCK_STEP = 0.05
 START_SHIFT = 0.25
 # Share of the command's speed at which a slow gait starts, until every foot has stepped:
 # its balance counts on feet that are where the gait has put them.
-START_SHARE = 0.4
+START_SHARE = 0.2
 # The feet's share of the weight never changes faster than all of it in 1/40 s.
 LOAD_RATE_HZ = 40.0
 # Height above rest (m) over which the feet take the weight from the belly.
