@@ -8,7 +8,6 @@ does not decide when to stop, and it never sets boards up again by itself.
 
 from __future__ import annotations
 
-import errno
 import threading
 import time
 from collections import deque
@@ -21,25 +20,6 @@ from hobnail_drivers.errors import BusError, DriverError
 
 if TYPE_CHECKING:
     from hobnail_drivers.supply import SupplyMonitor
-
-ADVICE: dict[int, str] = {
-    errno.EREMOTEIO: "the board does not answer: check its address and its logic power",
-    errno.ENXIO: "the board does not answer: check its address and its logic power",
-    errno.ETIMEDOUT: "the bus is wedged: a board holds a line down; switch the boards' power off and on",
-    errno.EIO: "the transfer broke off: check cable length, pull-ups and grounding",
-    errno.EAGAIN: "the bus was taken by another master: only hobnail may use it",
-    errno.EBUSY: "the address is taken by a kernel driver: unbind it",
-    errno.ENODEV: "the bus adapter is gone: check its cable or its kernel driver",
-    errno.ENOENT: "there is no such bus: enable I2C and check the bus number",
-    errno.EACCES: "no permission for the bus: put the user into the group i2c",
-}
-
-
-def advice(error: Exception) -> str:
-    """What happened, with what to do about it where the errno tells."""
-    hint = ADVICE.get(error.errno or 0, "") if isinstance(error, OSError) else ""
-    return f"{error}; {hint}" if hint else str(error)
-
 
 class Event(NamedTuple):
     """Something the state machine has to know: a fault by name, and its detail."""
@@ -210,9 +190,9 @@ class Bus:
                 self.driver.write(pulses_us)
             except BusError as error:
                 if attempt == self._retries:
-                    self._fail("bus-error", advice(error))
+                    self._fail("bus-error", str(error))
                 else:
-                    self._events.append(Event("bus-retried", advice(error)))
+                    self._events.append(Event("bus-retried", str(error)))
             except Exception as error:  # noqa: BLE001 -- whatever a back end does, pulses end
                 self._fail("internal", f"a frame was refused: {error!r}")
                 return
@@ -234,7 +214,7 @@ class Bus:
             if not isinstance(error, DriverError):
                 self._events.append(Event("internal", f"release: {error!r}"))
             else:
-                self._events.append(Event("bus-error", f"pulses could not be cut: {advice(error)}"))
+                self._events.append(Event("bus-error", f"pulses could not be cut: {error}"))
             self.is_set_up = False
         else:
             self.released = True
@@ -246,7 +226,7 @@ class Bus:
             self.health = self.driver.health()
         except Exception as error:  # noqa: BLE001 -- told, and asked for again by `reset`
             self.set_up_error = error
-            self._events.append(Event("bus-error", f"the boards could not be set up: {advice(error)}"))
+            self._events.append(Event("bus-error", f"the boards could not be set up: {error}"))
         else:
             self.set_up_error = None
             self.released = self.is_set_up = True
@@ -260,7 +240,7 @@ class Bus:
                 self.volts = self._monitor.volts()
             except Exception as error:  # noqa: BLE001 -- the monitor is not worth a stop
                 self.volts = None
-                self._events.append(Event("supply-unread", advice(error)))
+                self._events.append(Event("supply-unread", str(error)))
 
     def _check_health(self) -> None:
         for attempt in range(self._retries + 1):
@@ -268,9 +248,9 @@ class Bus:
                 self.health = self.driver.health()
             except BusError as error:
                 if attempt == self._retries:
-                    self._fail("bus-error", f"settings could not be read back: {advice(error)}")
+                    self._fail("bus-error", f"settings could not be read back: {error}")
                 else:
-                    self._events.append(Event("bus-retried", advice(error)))
+                    self._events.append(Event("bus-retried", str(error)))
             except Exception as error:  # noqa: BLE001
                 self._fail("internal", f"health: {error!r}")
                 return
@@ -285,6 +265,6 @@ class Bus:
             try:
                 action()
             except Exception as error:  # noqa: BLE001 -- the next one is tried all the same
-                self._events.append(Event("bus-error", f"while closing: {advice(error)}"))
+                self._events.append(Event("bus-error", f"while closing: {error}"))
             else:
                 self.released = True

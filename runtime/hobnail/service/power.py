@@ -28,9 +28,7 @@ class SupplyWatch:
         """Take a reading; False when there is none, or it is no voltage."""
         if reading_v is None or not math.isfinite(reading_v) or reading_v <= 0.0:
             return False
-        if self._last_s is None:
-            self.volts = reading_v
-        else:
+        if self._last_s is not None:
             self.volts += (reading_v - self.volts) * -math.expm1((self._last_s - now_s) / SMOOTH_S)
         self._last_s = now_s
         if self._low_v is not None:

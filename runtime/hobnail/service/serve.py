@@ -23,7 +23,7 @@ from hobnail.calibration import calibration_path
 from hobnail.errors import DriverUnavailableError
 from hobnail.robot import Robot
 from hobnail.service.archive import load_posture
-from hobnail.service.bus import Bus, advice
+from hobnail.service.bus import Bus
 from hobnail.service.drivers import open_contact, open_driver, open_monitor
 from hobnail.service.errand import Errand
 from hobnail.service.faults import run_each
@@ -282,7 +282,7 @@ class Running:
             if error is None:
                 return
             if not isinstance(error, BusError) or time.monotonic() + BUS_PAUSE_S > until_s:
-                raise DriverUnavailableError(f"driver {self._driver_name}: {advice(error)}") from error
+                raise DriverUnavailableError(f"driver {self._driver_name}: {error}") from error
             time.sleep(BUS_PAUSE_S)
 
     def _describe_driver(self) -> dict[str, object]:
