@@ -144,6 +144,14 @@ def test_idle_time_is_waited_for_in_one_piece_and_its_end_left_to_the_loop(at: B
     assert began_s + PERIOD_S - 1.1 * EARLY_S < at.clock.now_s < began_s + PERIOD_S - 0.9 * EARLY_S
 
 
+def test_a_client_in_debt_is_served_as_its_credit_comes_not_at_the_end_of_the_wait(at: Bench) -> None:
+    client = at.client()
+    client.send(request("state") * 200)
+    at.server.serve(at.clock.now_s + 0.4)
+    assert len(at.calls) == 200
+    assert max(at.clock.waits_s) < 0.01 + 0.4 - 75 / 250
+
+
 @pytest.mark.parametrize("call_s", [0.0001, 0.001, 0.002])
 def test_no_bite_is_begun_that_would_not_end_in_time(at: Bench, call_s: float) -> None:
     """With calls of one length, known after the first, no call ends after its period."""
@@ -233,6 +241,18 @@ def test_each_watcher_gets_states_at_its_own_rate(at: Bench) -> None:
         assert answers[1] == {"jsonrpc": "2.0", "method": "state", "params": {"tick": 0}}
     assert other.answers() == []
     assert at.calls == []  # watching is the server's own business
+
+
+def test_a_state_a_tick_is_not_thinned_out_by_uneven_ticks(at: Bench) -> None:
+    client = at.client()
+    at.run()
+    at.server.watch(1, 100.0)
+    for i in range(200):
+        at.server.publish({})
+        at.run(PERIOD_S + (0.001 if i % 2 else -0.001))
+        client.receive()
+    at.run()
+    assert _states(client.answers()) >= 198
 
 
 def test_watching_ends_on_request_and_by_the_owner(at: Bench) -> None:

@@ -351,7 +351,7 @@ def test_without_file_descriptors_the_server_pauses_accepting_and_recovers(at: B
         polite.ask("state", 1)
         at.run(1.0)
         assert len(polite.answers()) == 1
-        assert len(at.clock.waits_s) < 250  # it does not spin
+        assert 90 <= len(at.clock.waits_s) <= 220  # it neither spins nor sleeps through
     finally:
         resource.setrlimit(resource.RLIMIT_NOFILE, (soft, hard))
     assert [where for where, _ in at.errors] == ["accept"]

@@ -94,8 +94,6 @@ class Link(Connection):
         wanted = select.EPOLLIN if self.has_room() else 0
         if self.outbox and self._blocked:
             wanted |= select.EPOLLOUT
-        if not wanted & select.EPOLLIN:
-            self._readable = False
         if wanted == self._interest:
             return
         if not wanted:  # not only masked: a hang-up is reported for everything registered
