@@ -35,7 +35,8 @@ def clamp_steps(
 
 class ServoLead:
     """What the servos are sent: each joint ahead by what its servo trails behind at the
-    present speed, as far as the joint's step allows."""
+    present speed, and across its dead band to the side on which it bears its torque, as
+    far as the joint's step allows."""
 
     __slots__ = ("_feet", "_speeds", "commanded_rad")
 
@@ -52,11 +53,28 @@ class ServoLead:
                 for (a0, b0, c0), (a1, b1, c1) in zip(before, body.joints_rad, strict=True)
             ]
         commanded = []
-        for foot, last, (a, b, c), (va, vb, vc), most in zip(
-            self._feet, self.commanded_rad, body.loaded_rad, self._speeds, steps, strict=True
+        for foot, last, (a, b, c), (va, vb, vc), (la, lb, lc), most in zip(
+            self._feet,
+            self.commanded_rad,
+            body.loaded_rad,
+            self._speeds,
+            body.torques_nm,
+            steps,
+            strict=True,
         ):
-            ta, tb, tc = foot.correction.trail_s
-            ahead = (a + ta * va, b + tb * vb, c + tc * vc)
+            correction = foot.correction
+            ta, tb, tc = correction.trail_s
+            sa, sb, sc = correction.slope_nm_s
+            da, db, dc = correction.slack_rad
+            ua, ub, uc = correction.sure_nm
+            la += sa * va
+            lb += sb * vb
+            lc += sc * vc
+            ahead = (
+                a + ta * va + da * la / (abs(la) + ua),
+                b + tb * vb + db * lb / (abs(lb) + ub),
+                c + tc * vc + dc * lc / (abs(lc) + uc),
+            )
             commanded.append(hold(_near(last, ahead, most), foot.limits))
         self.commanded_rad = tuple(commanded)
 

@@ -3,10 +3,13 @@ round foot on a slow servo where a rigid, pointed one would be.
 
 Sag: a hobby servo holds with a stiffness k; a torque turns its shaft by
 torque/k.  Commanding the opposite in advance removes it (virtual work: the
-ground's force f on the foot makes the torque f . dp/dq on each joint).
+ground's force f on the foot makes the torque f . dp/dq on each joint, and so do
+the weights of the leg's links, which a foot in the air has as well).
 Trailing: a motor that turns at w gives less torque by w times stall torque over
 no-load speed, the slope of its torque-speed line; its position loop trails by
 that over k, a fixed time, by which the command goes ahead.
+Dead band: a servo that bears a torque stands off by half its dead band more, towards
+the side on which it is pushed.
 Rolling: a foot of radius r rolls as its shank turns, and its centre moves by r
 times the angle; the leg is sent there.
 
@@ -17,14 +20,32 @@ from __future__ import annotations
 
 import math
 
+from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.leg import LegKinematics
-from hobnail.robot import Leg, Vec3
+from hobnail.robot import Joint, Leg, Vec3
+
+# Share of the stall torque from which on the side is sure to which a torque pushes a servo:
+# about the friction of its gears (common practice).
+SURE_SHARE = 0.03
 
 
 class LegCorrection:
     """Corrections of one leg about its neutral angles."""
 
-    __slots__ = ("_give", "_lower_m", "_neutral", "_radius_m", "_upper_m", "active", "trail_s")
+    __slots__ = (
+        "_give",
+        "_lower_m",
+        "_neutral",
+        "_radius_m",
+        "_side_nm",
+        "_upper_m",
+        "_weights_n",
+        "active",
+        "slack_rad",
+        "slope_nm_s",
+        "sure_nm",
+        "trail_s",
+    )
 
     def __init__(self, leg: Leg, kinematics: LegKinematics, neutral_rad: Vec3) -> None:
         self._upper_m = kinematics.upper_m
@@ -33,28 +54,46 @@ class LegCorrection:
         self._neutral = (neutral_rad[0], neutral_rad[1] + neutral_rad[2])
         stiffness = [joint.servo.stiffness_nm_rad for joint in leg.joints]
         self._give = tuple(1.0 / k if k else 0.0 for k in stiffness)
+        a, b, c = (joint.servo.torque_nm / joint.servo.speed_rad_s for joint in leg.joints)
+        self.slope_nm_s = (a, b, c)  # of the torque-speed line, N m s/rad
+        ga, gb, gc = self._give
+        self.trail_s = (a * ga, b * gb, c * gc)  # by which each servo trails a steady motion
         a, b, c = (
-            joint.servo.torque_nm / joint.servo.speed_rad_s * give
-            for joint, give in zip(leg.joints, self._give, strict=True)
+            half_dead_band_rad(joint) if k else 0.0 for joint, k in zip(leg.joints, stiffness, strict=True)
         )
-        self.trail_s = (a, b, c)  # by which each servo trails a steady motion
+        self.slack_rad = (a, b, c)
+        a, b, c = (SURE_SHARE * joint.servo.torque_nm for joint in leg.joints)
+        self.sure_nm = (a, b, c)
+        # Link masses sit midway: the weights that act at the knee, and half of it at the foot.
+        self._weights_n = (
+            GRAVITY_M_S2 * (0.5 * leg.upper_kg + leg.lower_kg),
+            GRAVITY_M_S2 * 0.5 * leg.lower_kg,
+        )
+        self._side_nm = GRAVITY_M_S2 * (leg.hip_kg + leg.upper_kg + leg.lower_kg) * leg.abduction_m
         self.active = self._radius_m > 0.0 or any(self._give)
 
-    def apply(self, roll: float, hip: float, knee: float, y: float, z: float, force_n: Vec3) -> Vec3:
+    def apply(
+        self, roll: float, hip: float, knee: float, y: float, z: float, force_n: Vec3
+    ) -> tuple[Vec3, Vec3]:
         """Angles to command for the geometric angles (rad), the foot's y and z relative to
-        the hip (m) and the force of the ground on it (body frame, N)."""
+        the hip (m) and the force of the ground on it (body frame, N); and the torques
+        (N m) by which the servos hold that load."""
         shank = hip + knee
-        shank_x = -self._lower_m * math.sin(shank)
-        foot_x = shank_x - self._upper_m * math.sin(hip)
-        give = self._give
-        # Sag: minus f/k dp/dq.
+        upper_x, shank_x = -self._upper_m * math.sin(hip), -self._lower_m * math.sin(shank)
+        upper_z, shank_z = -self._upper_m * math.cos(hip), -self._lower_m * math.cos(shank)
+        foot_x, foot_z = upper_x + shank_x, upper_z + shank_z
         ahead, left, up = force_n
-        push = up * math.cos(roll) - left * math.sin(roll)
-        shank_z = -self._lower_m * math.cos(shank)
-        foot_z = shank_z - self._upper_m * math.cos(hip)
-        roll_by = (left * z - up * y) * give[0]
-        hip_by = (push * foot_x - ahead * foot_z) * give[1]
-        knee_by = (push * shank_x - ahead * shank_z) * give[2]
+        cos_roll, sin_roll = math.cos(roll), math.sin(roll)
+        push = up * cos_roll - left * sin_roll
+        # Minus f . dp/dq, for the ground's push and for the weights of the links.
+        at_knee, at_foot = self._weights_n
+        torques = (
+            left * z - up * y + self._side_nm * cos_roll - sin_roll * (at_knee * upper_z + at_foot * shank_z),
+            push * foot_x - ahead * foot_z - cos_roll * (at_knee * upper_x + at_foot * shank_x),
+            push * shank_x - ahead * shank_z - cos_roll * at_foot * shank_x,
+        )
+        give = self._give
+        roll_by, hip_by, knee_by = torques[0] * give[0], torques[1] * give[1], torques[2] * give[2]
         radius = self._radius_m
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
@@ -65,4 +104,10 @@ class LegCorrection:
                 hip_by += forward * shank_x / folded
                 knee_by -= forward * foot_x / folded
             roll_by += radius * (roll - self._neutral[0]) / z
-        return roll + roll_by, hip + hip_by, knee + knee_by
+        return (roll + roll_by, hip + hip_by, knee + knee_by), torques
+
+
+def half_dead_band_rad(joint: Joint) -> float:
+    """Half the servo's dead band (rad of the joint), by the slope of its pulse map as a whole."""
+    (low_rad, low_us), (high_rad, high_us) = joint.pulse_map[0], joint.pulse_map[-1]
+    return abs((high_rad - low_rad) / (high_us - low_us)) * joint.servo.dead_band_us / 2

@@ -16,20 +16,23 @@ from hobnail.robot import Span, Vec2, Vec3
 # What the ground does through all feet together: force ahead, left and up (N), and the
 # turning about the body, as force over arm for a foot that carries everything (N/m).
 Drive = tuple[float, float, float, float]
+NO_TORQUE: Vec3 = (0.0, 0.0, 0.0)
 
 
 class WholeBody:
     """The latest solution: `pose` of the body on the ground (x, y, yaw), `feet_m` in the
     body frame, `joints_rad` geometric, `loaded_rad` with the corrections for load and
-    round feet, and the count of feet that were `out_of_reach`."""
+    round feet, `torques_nm` by which the servos hold that load, and the count of feet
+    that were `out_of_reach`."""
 
-    __slots__ = ("feet_m", "joints_rad", "loaded_rad", "out_of_reach", "pose")
+    __slots__ = ("feet_m", "joints_rad", "loaded_rad", "out_of_reach", "pose", "torques_nm")
 
     def __init__(self) -> None:
         self.pose: Pose = (0.0, 0.0, 0.0)
         self.feet_m: tuple[Vec3, ...] = ()
         self.joints_rad: tuple[Vec3, ...] = ()
         self.loaded_rad: tuple[Vec3, ...] = ()
+        self.torques_nm: tuple[Vec3, ...] = ()
         self.out_of_reach = 0
 
     def solve(
@@ -57,7 +60,7 @@ class WholeBody:
         tilted = roll != 0.0 or pitch != 0.0
         if tilted:
             cr, sr, cp, sp = math.cos(roll), math.sin(roll), math.cos(pitch), math.sin(pitch)
-        feet_m, joints, loaded = [], [], []
+        feet_m, joints, loaded, torques = [], [], [], []
         self.out_of_reach = 0
         ahead, left, up, spin = drive
         for foot in feet:
@@ -83,12 +86,16 @@ class WholeBody:
             if foot.correction.active:
                 load = foot.load
                 push = (load * (ahead - spin * y), load * (left + spin * x), load * up)
-                angles = foot.correction.apply(*angles, at_y, at_z, push)
+                angles, torque = foot.correction.apply(*angles, at_y, at_z, push)
                 angles = hold(angles, foot.limits)
+                torques.append(torque)
+            else:
+                torques.append(NO_TORQUE)
             loaded.append(angles)
         self.feet_m = tuple(feet_m)
         self.joints_rad = tuple(joints)
         self.loaded_rad = tuple(loaded)
+        self.torques_nm = tuple(torques)
 
 
 def hold(angles: Vec3, limits: tuple[Span, ...]) -> Vec3:
