@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import pty
@@ -54,12 +55,16 @@ class Ready:
         self.path = directory / "notify"
         self._socket = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM)
         self._socket.bind(str(self.path))
-        self._socket.settimeout(TIMEOUT_S)
+        self._socket.settimeout(0.2)
 
-    def wait(self) -> None:
-        while b"READY=1" not in self._socket.recv(4096):
-            pass
-        self._socket.close()
+    def wait(self, process: subprocess.Popen[str]) -> None:
+        with self._socket:
+            while process.poll() is None:
+                with contextlib.suppress(TimeoutError):
+                    if b"READY=1" in self._socket.recv(4096):
+                        return
+        assert process.stderr is not None
+        pytest.fail(f"ended with {process.returncode} before it was ready: {process.stderr.read()}")
 
 
 @contextmanager
@@ -73,13 +78,13 @@ def running(tmp_path: Path, *words: str) -> Iterator[subprocess.Popen[str]]:
         stderr=subprocess.PIPE,
         text=True,
     )
-    try:
-        ready.wait()
-        yield process
-    finally:
-        if process.poll() is None:
-            process.kill()
-            process.wait()
+    with process:
+        try:
+            ready.wait(process)
+            yield process
+        finally:
+            if process.poll() is None:
+                process.kill()
 
 
 def test_a_route_on_a_terminal_is_shown_live_and_ends_off_with_a_summary(
@@ -143,7 +148,7 @@ def test_a_route_in_a_pipe_tells_its_steps_and_sums_up_as_json(
     assert told["exit_code"] == 0
     assert told["state"] == "off"
     assert told["route"]["done"] is True
-    assert told["distance_m"] == pytest.approx(0.08, abs=0.03)
+    assert 0.04 < told["distance_m"] < 0.16  # summed from ten snapshots a second, fewer on a busy machine
     assert "\x1b" not in out + err
 
 
