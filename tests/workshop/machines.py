@@ -25,9 +25,16 @@ from hobnail.robot import (
 KGF_CM = 0.0980665  # N m
 LEG_NAMES = ("left-front", "right-front", "left-hind", "right-hind")
 # Leg order as above; a trot's diagonal pairs touch down together.
-TROT = Gait(name="trot", duty=0.6, phases=(0.0, 0.5, 0.5, 0.0), cycle_range_s=(0.4, 1.5))
+TROT = Gait(
+    name="trot", duty=0.6, phases=(0.0, 0.5, 0.5, 0.0), cycle_range_s=(0.4, 0.5), lift_m=0.018, body_shift=1.0
+)
 CRAWL = Gait(
-    name="crawl", duty=0.8, phases=(0.25, 0.75, 0.0, 0.5), cycle_range_s=(0.8, 4.0), body_shift=1.0
+    name="crawl",
+    duty=0.8,
+    phases=(0.25, 0.75, 0.0, 0.5),
+    cycle_range_s=(1.2, 4.0),
+    lift_m=0.02,
+    body_shift=1.0,
 )
 
 

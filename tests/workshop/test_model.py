@@ -9,7 +9,6 @@ import mujoco
 import numpy as np
 import numpy.typing as npt
 import pytest
-from workshop.machines import burdock, thistle
 
 from hobnail.errors import CommandError
 from hobnail.motion.leg import LegKinematics
@@ -17,6 +16,7 @@ from hobnail.robot import Leg, Robot
 from hobnail.workshop.rehearse.disturbances import Disturbances
 from hobnail.workshop.rehearse.model import TIP_RADIUS_M, build
 from hobnail.workshop.rehearse.plant import Plant
+from workshop.machines import burdock, thistle
 
 Floats = npt.NDArray[np.float64]
 
@@ -152,7 +152,13 @@ class TestDisturbances:
 
     @pytest.mark.parametrize(
         ("name", "value"),
-        [("friction", -1.0), ("slope_rad", math.nan), ("lost_frames", 1.5), ("weak_servo", 2.0), ("seed", -1)],
+        [
+            ("friction", -1.0),
+            ("slope_rad", math.nan),
+            ("lost_frames", 1.5),
+            ("weak_servo", 2.0),
+            ("seed", -1),
+        ],
     )
     def test_values_out_of_range_are_told(self, name: str, value: float) -> None:
         with pytest.raises(CommandError, match=f"{name} is .*allowed"):

@@ -8,12 +8,12 @@ from dataclasses import replace
 import mujoco
 import numpy as np
 import pytest
-from workshop.machines import burdock, thistle
 
 from hobnail.robot import Robot
 from hobnail.workshop.rehearse.disturbances import Disturbances
 from hobnail.workshop.rehearse.model import FRICTION_SHARE, GRAVITY_M_S2, STEP_S
 from hobnail.workshop.rehearse.plant import Plant, half_dead_band_rad
+from workshop.machines import burdock, thistle
 
 HIGH_M = 20.0  # nothing falls so far in these tests
 

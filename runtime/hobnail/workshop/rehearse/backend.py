@@ -67,15 +67,14 @@ class RehearsalDriver(Driver):
         }
         self._luck = np.random.default_rng((plant.disturbances.seed, 4))
         self._targets: list[float | None] = [None] * len(outputs)
-        self._waiting: dict[str, list[float | None]] = {}  # by board: counts for its next frame
+        # By board: the physics step at which its next frame begins, and the angles sent with it.
+        self._waiting: dict[str, tuple[int, list[float | None]]] = {}
 
     def targets_rad(self, pulses_us: Pulses) -> list[float | None]:
         """The joint angles that the real servos understand these pulses as."""
         targets: list[float | None] = []
         for pulse, count_us, joint in zip(pulses_us, self._count_us, self._maps, strict=True):
-            targets.append(
-                None if pulse is None else joint.angle_rad(round(pulse / count_us) * count_us)
-            )
+            targets.append(None if pulse is None else joint.angle_rad(round(pulse / count_us) * count_us))
         return targets
 
     def advance(self, dt_s: float) -> None:
@@ -85,17 +84,11 @@ class RehearsalDriver(Driver):
         """
         plant = self.plant
         end = round((plant.time_s + dt_s) / STEP_S)
-        while self._waiting:
-            starts = {
-                name: math.ceil(math.floor(plant.time_s * hz + 1.0) / hz / STEP_S - 1e-9)
-                for name, hz in self._frame_hz.items()
-                if name in self._waiting
-            }
-            name = min(starts, key=lambda board: starts[board])
-            if starts[name] > end:
+        for due, name in sorted((due, name) for name, (due, _) in self._waiting.items()):
+            if due > end:
                 break
-            plant.advance(starts[name] - plant.steps)
-            values = self._waiting.pop(name)
+            plant.advance(due - plant.steps)
+            _, values = self._waiting.pop(name)
             for index, value in zip(self._of_board[name], values, strict=True):
                 self._targets[index] = value
             plant.command(self._targets)
@@ -111,8 +104,12 @@ class RehearsalDriver(Driver):
             board = self.boards[0].name
             raise BusError(errno.EREMOTEIO, "no acknowledge: a frame was lost on purpose", board)
         targets = self.targets_rad(pulses_us)
+        time_s = self.plant.time_s
         for name, indices in self._of_board.items():
-            self._waiting[name] = [targets[index] for index in indices]
+            frame_hz = self._frame_hz[name]
+            next_frame_s = math.ceil(time_s * frame_hz - 1e-6) / frame_hz
+            due = math.ceil(next_frame_s / STEP_S - 1e-6)
+            self._waiting[name] = (due, [targets[index] for index in indices])
 
     def _release(self) -> None:
         self._waiting.clear()

@@ -84,7 +84,9 @@ class Disturbances:
         """
         names = [joint.name for joint in robot.joints]
         if self.weak_joint and self.weak_joint not in names:
-            raise CommandError(f"weak_joint is {self.weak_joint!r}; joints of {robot.name}: {', '.join(names)}")
+            raise CommandError(
+                f"weak_joint is {self.weak_joint!r}; joints of {robot.name}: {', '.join(names)}"
+            )
         weak = self.weak_joint or names[-1]
         # One stream an error kind, so that adding one kind leaves the draws of the others alone.
         zeros = np.random.default_rng((self.seed, 1))

@@ -111,12 +111,16 @@ class Result:
     def speed_error(self) -> float:
         """Worst speed error of any stretch as a share of its commanded speed (of 0.1 m/s,
         where that is larger, which makes 5 % of it the 5 mm/s of `Limits`)."""
-        return max((s.speed_error_m_s / max(math.hypot(*s.commanded[:2]), 0.1) for s in self.stretches), default=0.0)
+        return max(
+            (s.speed_error_m_s / max(math.hypot(*s.commanded[:2]), 0.1) for s in self.stretches), default=0.0
+        )
 
     @property
     def turn_error(self) -> float:
         """Worst turn rate error as a share of the commanded rate (of 0.4 rad/s, where that is larger)."""
-        return max((abs(s.turn_error_rad_s) / max(abs(s.commanded[2]), 0.4) for s in self.stretches), default=0.0)
+        return max(
+            (abs(s.turn_error_rad_s) / max(abs(s.commanded[2]), 0.4) for s in self.stretches), default=0.0
+        )
 
     @property
     def drift_rad_m(self) -> float:

@@ -164,7 +164,9 @@ def _back(robot: Robot) -> Scenario:
 
 
 def _sideways(robot: Robot) -> Scenario:
-    return walking(robot, 0.0, 0.9 * robot.envelope.sideways_m_s, name="sideways", about="to the left at 90 %")
+    return walking(
+        robot, 0.0, 0.9 * robot.envelope.sideways_m_s, name="sideways", about="to the left at 90 %"
+    )
 
 
 def _turn(robot: Robot) -> Scenario:
