@@ -14,8 +14,8 @@ import math
 from collections.abc import Sequence
 from pathlib import Path
 
-from hobnail.config_fields import Field, Group, Number, Section, Several, Text
-from hobnail.config_yaml import Listing, Mapping, Node, Report, Scalar, parse, read_file
+from hobnail.config.fields import Field, Group, Number, Section, Several, Text
+from hobnail.config.strict_yaml import Listing, Mapping, Node, Report, Scalar, parse, read_file
 from hobnail.errors import CommandError, RouteError
 from hobnail.robot import Robot
 from hobnail.service.route_steps import ChangeGait, Move, Pose, Speed, Step, Wait, misfits

@@ -16,8 +16,9 @@ import yaml
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from hobnail import calibration as module
-from hobnail.calibration import (
+from hobnail.config import calibration as module
+from hobnail.config import load_robot
+from hobnail.config.calibration import (
     BoardCalibration,
     Calibration,
     Change,
@@ -30,13 +31,12 @@ from hobnail.calibration import (
     render,
     write_calibration,
 )
-from hobnail.config import load_robot
-from hobnail.config_yaml import Report
+from hobnail.config.strict_yaml import Report
 from hobnail.errors import CalibrationError, ConfigError
 from hobnail.robot import Robot
 from hobnail.servo import pulse_us
 
-SORREL = Path(__file__).parent / "corpus" / "sorrel.yaml"
+SORREL = Path(__file__).parents[1] / "corpus" / "sorrel.yaml"
 ROBOT = load_robot(SORREL)
 WHEN = "2026-03-01T14:30:00Z"
 

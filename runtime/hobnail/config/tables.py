@@ -2,14 +2,14 @@
 
 Bounds are those of plausible machines, wide enough for any servo-driven robot
 that a person can lift, and narrow enough to catch a slipped decimal point or
-unit.  What depends on more than one value is in `hobnail.config_checks`.
+unit.  What depends on more than one value is in `hobnail.config.checks`.
 """
 
 from __future__ import annotations
 
 from dataclasses import replace
 
-from hobnail.config_fields import Choice, Field, Group, Integer, Number, NumberOr, Pair, Several, Text
+from hobnail.config.fields import Choice, Field, Group, Integer, Number, NumberOr, Pair, Several, Text
 
 MIN_LEGS = 4
 MAX_LEGS = 16

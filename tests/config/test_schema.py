@@ -14,16 +14,16 @@ import jsonschema
 import pytest
 import yaml
 
-from hobnail.config_schema import text
+from hobnail.config.schema import text
 
-CONFIG = Path(__file__).parent.parent / "config"
+CONFIG = Path(__file__).parents[2] / "config"
 PUBLISHED = CONFIG / "hobnail.schema.json"
 ROBOTS = sorted(CONFIG.glob("*.yaml"))
 VALIDATOR = jsonschema.Draft202012Validator(json.loads(PUBLISHED.read_text()))
 
 
 def test_the_published_schema_is_current() -> None:
-    """If not: python -m hobnail.config_schema > config/hobnail.schema.json"""
+    """If not: python -m hobnail.config.schema > config/hobnail.schema.json"""
     assert PUBLISHED.read_text() == text()
 
 

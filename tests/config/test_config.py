@@ -13,8 +13,8 @@ from pathlib import Path
 import pytest
 
 from hobnail.config import digest_on_disk, load_robot
-from hobnail.config_fields import Field
-from hobnail.config_tables import (
+from hobnail.config.fields import Field
+from hobnail.config.tables import (
     BOARD,
     BODY,
     ENVELOPE,
@@ -46,8 +46,8 @@ from hobnail.robot import (
     Supply,
 )
 
-CONFIG = Path(__file__).parent.parent / "config"
-CORPUS = Path(__file__).parent / "corpus"
+CONFIG = Path(__file__).parents[2] / "config"
+CORPUS = Path(__file__).parents[1] / "corpus"
 SORREL = (CORPUS / "sorrel.yaml").read_text()
 BURDOCK = (CORPUS / "burdock.yaml").read_text()
 

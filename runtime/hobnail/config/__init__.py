@@ -1,7 +1,7 @@
 """A robot's configuration: YAML file -> frozen `Robot` in SI units, or every problem in it at once.
 
 The calibration file beside it, if there is one, is laid over it.  The keys and
-their bounds are in `hobnail.config_tables`; nothing here computes a motion.
+their bounds are in `hobnail.config.tables`; nothing here computes a motion.
 """
 
 from __future__ import annotations
@@ -11,13 +11,13 @@ import os
 from dataclasses import replace
 from pathlib import Path
 
-from hobnail.calibration import apply_calibration, calibration_path, interpret
-from hobnail.config_build import build_robot
-from hobnail.config_checks import check_robot
-from hobnail.config_fields import Group, Section
-from hobnail.config_reach import check_balanced_reach, check_reach
-from hobnail.config_tables import LEG_DEFAULTS, ROBOT
-from hobnail.config_yaml import Listing, Mapping, Report, parse, read_file
+from hobnail.config.build import build_robot
+from hobnail.config.calibration import apply_calibration, calibration_path, interpret
+from hobnail.config.checks import check_robot
+from hobnail.config.fields import Group, Section
+from hobnail.config.reach import check_balanced_reach, check_reach
+from hobnail.config.strict_yaml import Listing, Mapping, Report, parse, read_file
+from hobnail.config.tables import LEG_DEFAULTS, ROBOT
 from hobnail.errors import CalibrationError, ConfigError
 from hobnail.robot import Robot
 

@@ -8,14 +8,14 @@ from pathlib import Path
 import pytest
 import yaml
 
-from hobnail import config_yaml
-from hobnail.config_yaml import Listing, Mapping, Report, Scalar, parse, read_file, shown
+from hobnail.config import strict_yaml
+from hobnail.config.strict_yaml import Listing, Mapping, Report, Scalar, parse, read_file, shown
 
 
 @pytest.fixture(params=["C", "Python"], autouse=True)
 def parser(request: pytest.FixtureRequest, monkeypatch: pytest.MonkeyPatch) -> None:
     loader = yaml.CBaseLoader if request.param == "C" else yaml.BaseLoader
-    monkeypatch.setattr(config_yaml, "_LOADER", loader)
+    monkeypatch.setattr(strict_yaml, "_LOADER", loader)
 
 
 def only_problem(data: bytes) -> tuple[int, int, str, str]:
@@ -120,7 +120,7 @@ def test_a_hundred_problems_are_enough() -> None:
     report = Report("robot.yaml")
     parse(b"a: 1\n" * 500, report)
     problems = report.problems()
-    assert len(problems) == config_yaml.MAX_PROBLEMS + 1
+    assert len(problems) == strict_yaml.MAX_PROBLEMS + 1
     assert "stopped looking" in problems[-1].found
 
 

@@ -4,7 +4,7 @@ Nothing is interpreted here: a scalar stays the text that was written, so that
 no YAML rule turns `on` into true or `010` into 8 behind the reader's back.
 What a configuration does not need is refused: tags, anchors, aliases, further
 documents, tabs, byte order marks, deep nesting.  Which keys and values are
-allowed is not known here; see `hobnail.config_fields`.
+allowed is not known here; see `hobnail.config.fields`.
 """
 
 from __future__ import annotations

@@ -2,7 +2,7 @@
 
 A kind reads a node, says in words what is allowed, and gives its JSON Schema;
 a `Field` puts a kind beside a key and the attribute that it becomes.  Which
-fields there are stands in `hobnail.config_tables`.
+fields there are stands in `hobnail.config.tables`.
 """
 
 from __future__ import annotations
@@ -15,8 +15,8 @@ from dataclasses import dataclass, field
 from itertools import pairwise
 from typing import Any, Protocol
 
-from hobnail.config_scalars import decimal, integer, is_text, surprise
-from hobnail.config_yaml import Listing, Mapping, Node, Report, Scalar, shown
+from hobnail.config.scalars import decimal, integer, is_text, surprise
+from hobnail.config.strict_yaml import Listing, Mapping, Node, Report, Scalar, shown
 
 KGF_CM_NM = 0.0980665  # exact, by the definition of the standard gravity
 

@@ -10,10 +10,10 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
-from hobnail.config_build import build_leg
-from hobnail.config_fields import Section
-from hobnail.config_tables import JOINT_NAMES
-from hobnail.config_yaml import Listing, Node, Report
+from hobnail.config.build import build_leg
+from hobnail.config.fields import Section
+from hobnail.config.strict_yaml import Listing, Node, Report
+from hobnail.config.tables import JOINT_NAMES
 from hobnail.motion.balance import neutral_feet
 from hobnail.motion.leg import LegKinematics
 from hobnail.robot import Gait, Leg, Robot, Vec2

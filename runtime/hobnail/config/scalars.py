@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import re
 
-from hobnail.config_yaml import Node, Scalar
+from hobnail.config.strict_yaml import Node, Scalar
 
 _DECIMAL = re.compile(r"[-+]?(?:(?:0|[1-9][0-9]{0,30})(?:\.[0-9]{0,30})?|\.[0-9]{1,30})")
 _INTEGER = re.compile(r"[-+]?(?:0|[1-9][0-9]{0,18})")

@@ -20,8 +20,8 @@ from hobnail.config import load_robot
 from hobnail.errors import ConfigError, Problem
 from hobnail.robot import Robot
 
-CONFIG = Path(__file__).parent.parent / "config"
-CORPUS = Path(__file__).parent / "corpus"
+CONFIG = Path(__file__).parents[2] / "config"
+CORPUS = Path(__file__).parents[1] / "corpus"
 SORREL = (CORPUS / "sorrel.yaml").read_text()
 BURDOCK = (CORPUS / "burdock.yaml").read_text()
 DATA = yaml.safe_load(SORREL)

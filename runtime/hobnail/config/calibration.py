@@ -18,11 +18,11 @@ from dataclasses import dataclass, field, fields, replace
 from pathlib import Path
 from typing import Any
 
-from hobnail.config_checks import FRAME_SHARE, check_pulse_map
-from hobnail.config_fields import Field, Group, Integer, Named, Section, Several, Text, nearest
-from hobnail.config_tables import DIRECTION, OSCILLATOR, PULSE_LIMITS, PULSE_MAP, TRIM
-from hobnail.config_yaml import Mapping as YamlMapping
-from hobnail.config_yaml import Node, Report, parse, read_file
+from hobnail.config.checks import FRAME_SHARE, check_pulse_map
+from hobnail.config.fields import Field, Group, Integer, Named, Section, Several, Text, nearest
+from hobnail.config.strict_yaml import Mapping as YamlMapping
+from hobnail.config.strict_yaml import Node, Report, parse, read_file
+from hobnail.config.tables import DIRECTION, OSCILLATOR, PULSE_LIMITS, PULSE_MAP, TRIM
 from hobnail.errors import CalibrationError, Problem
 from hobnail.robot import Board, Joint, Robot, Span, Vec2
 

@@ -2,7 +2,7 @@
 
 Values are in SI units; problems are told at the place in the file where they
 can be mended.  Each check skips what is missing, since that is told already.
-Whether feet can get where they must is in `hobnail.config_reach`.
+Whether feet can get where they must is in `hobnail.config.reach`.
 """
 
 from __future__ import annotations
@@ -12,9 +12,9 @@ from collections.abc import Iterable, Sequence
 from itertools import pairwise
 from typing import Any
 
-from hobnail.config_fields import Section, nearest
-from hobnail.config_tables import JOINT_NAMES
-from hobnail.config_yaml import Listing, Report
+from hobnail.config.fields import Section, nearest
+from hobnail.config.strict_yaml import Listing, Report
+from hobnail.config.tables import JOINT_NAMES
 from hobnail.motion.gaits import BUILT_IN_GAITS, built_in_gait, fewest_feet_down
 
 ALL_CALL = 0x70

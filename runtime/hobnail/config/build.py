@@ -1,14 +1,14 @@
 """From the sections of a configuration that was found good to the frozen `Robot`; SI units.
 
-Nothing is checked here: `hobnail.config_checks` comes first.
+Nothing is checked here: `hobnail.config.checks` comes first.
 """
 
 from __future__ import annotations
 
 from typing import Any
 
-from hobnail.config_fields import Section
-from hobnail.config_tables import JOINT_NAMES
+from hobnail.config.fields import Section
+from hobnail.config.tables import JOINT_NAMES
 from hobnail.motion.gaits import BUILT_IN_GAITS, built_in_gait
 from hobnail.robot import (
     Board,

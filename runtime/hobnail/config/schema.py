@@ -1,6 +1,6 @@
 """The JSON Schema of a robot's configuration, for editors: made from the tables that the loader uses.
 
-`python -m hobnail.config_schema > config/hobnail.schema.json` publishes it.  It
+`python -m hobnail.config.schema > config/hobnail.schema.json` publishes it.  It
 knows keys, types and bounds; checks between values are the loader's alone.
 """
 
@@ -9,8 +9,8 @@ from __future__ import annotations
 import json
 from typing import Any
 
-from hobnail.config_fields import Group
-from hobnail.config_tables import ROBOT
+from hobnail.config.fields import Group
+from hobnail.config.tables import ROBOT
 
 
 def robot_schema() -> dict[str, Any]:
