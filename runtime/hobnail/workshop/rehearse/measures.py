@@ -10,16 +10,20 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
 
 from hobnail.robot import Vec3
+from hobnail.workshop.rehearse.limits import Limits
 from hobnail.workshop.rehearse.runner import Recording
 
 Floats = npt.NDArray[np.float64]
 Flags = npt.NDArray[np.bool_]
 
+CARRIED_STATES = frozenset({"standing", "walking"})
+LYING_STATES = frozenset({"off", "waking", "resting", "stopped"})
 FELL_TILT_RAD = math.radians(40.0)
 LYING_M = 0.012  # this near to the rest height the trunk may touch the floor
 LEAST_CYCLES = 2
@@ -29,23 +33,11 @@ MID_SWING = (0.25, 0.75)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Limits:
-    """When a rehearsal passes.  Speeds may be off by a share of the command or an
-    absolute amount, whichever is larger."""
-
-    error_share: float = 0.05
-    speed_error_m_s: float = 0.005
-    turn_error_rad_s: float = 0.02
-    drift_rad_m: float = math.radians(1.0)
-    tilt_rad: float = math.radians(3.0)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
 class Stretch:
     """One stretch of constant command: twists are (vx, vy, yaw rate) at the body origin.
 
-    `drift_rad_m` is the heading gained a metre beyond the commanded turn;
-    `sideways_m_m` the way off to the side a metre, 0 for what does not travel.
+    `drift_rad_m` is the heading gained a metre of a walk straight ahead or back, 0 for any
+    other; `sideways_m_m` the way off to the side a metre, 0 for what turns or does not travel.
     """
 
     start_s: float
@@ -85,6 +77,7 @@ class Result:
 
     scenario: str
     robot: str
+    limits: Limits
     fell: bool
     why_fell: str
     stretches: tuple[Stretch, ...]
@@ -106,6 +99,8 @@ class Result:
     clamped: int
     out_of_reach: int
     lost_frames: int
+    route_failure: str
+    faults: tuple[str, ...]
 
     @property
     def speed_error(self) -> float:
@@ -128,9 +123,14 @@ class Result:
         return max((abs(s.drift_rad_m) for s in self.stretches), default=0.0)
 
     def failures(self, limits: Limits | None = None) -> list[str]:
-        """What is not good enough, each as a sentence; empty when the rehearsal passes."""
-        limits = limits or Limits()
+        """What is not good enough (for the scenario's own limits when none are given), each
+        as a sentence; empty when the rehearsal passes."""
+        limits = limits or self.limits
         told = [f"fell: {self.why_fell}"] if self.fell else []
+        if self.route_failure:
+            told.append(self.route_failure)
+        if self.faults:
+            told.append(f"faults: {', '.join(self.faults)}")
         if self.clamped:
             told.append(f"the last clamp acted {self.clamped} times; allowed: never")
         for s in self.stretches:
@@ -138,8 +138,8 @@ class Result:
             allowed = max(limits.error_share * speed, limits.speed_error_m_s)
             if s.speed_error_m_s > allowed:
                 told.append(
-                    f"speed is ({s.true[0]:.3f}, {s.true[1]:.3f}) m/s for a command of ({s.commanded[0]:.3f}, "
-                    f"{s.commanded[1]:.3f}) m/s; allowed: off by {allowed:.4f} m/s"
+                    f"speed is ({s.true[0]:.3f}, {s.true[1]:.3f}) m/s for a command of "
+                    f"({s.commanded[0]:.3f}, {s.commanded[1]:.3f}) m/s; allowed: off by {allowed:.4f} m/s"
                 )
             allowed = max(limits.error_share * abs(s.commanded[2]), limits.turn_error_rad_s)
             if abs(s.turn_error_rad_s) > allowed:
@@ -166,7 +166,7 @@ def measure(recording: Recording) -> Result:
     fell, why = _fall(r)
     tilt = np.arccos(np.clip(r.true_rotation[:, 2, 2], -1.0, 1.0))
     level = r.powered & ~r.posed & (np.arange(len(tilt)) > 0.3 / r.robot.period_s)
-    level &= r.height_m > r.robot.stance.rest_height_m + LYING_M
+    level &= np.array([state in CARRIED_STATES for state in r.state])
     # Standing still would dilute the tilt of a walk.
     if np.any(level & r.walking):
         level &= r.walking
@@ -184,6 +184,7 @@ def measure(recording: Recording) -> Result:
     x, y, yaw = _odometry_error(r)
     return Result(
         scenario=r.scenario.name,
+        limits=r.scenario.limits,
         robot=r.robot.name,
         fell=fell,
         why_fell=why,
@@ -206,6 +207,8 @@ def measure(recording: Recording) -> Result:
         clamped=r.clamped,
         out_of_reach=r.out_of_reach,
         lost_frames=r.lost_frames,
+        route_failure=r.route_failure,
+        faults=r.faults,
     )
 
 
@@ -243,7 +246,7 @@ def _stretches(r: Recording) -> list[Stretch]:
     found = []
     edges = np.flatnonzero(
         np.any(np.diff(r.command, axis=0) != 0.0, axis=1)
-        | np.array([a != b for a, b in zip(r.gait, r.gait[1:], strict=False)])
+        | np.array([a != b for a, b in pairwise(r.gait)])
         | (np.diff(r.powered.astype(int)) != 0)
     )
     for start, end in zip([0, *(edges + 1)], [*(edges + 1), len(r.time_s)], strict=True):
@@ -255,7 +258,7 @@ def _stretches(r: Recording) -> list[Stretch]:
         if len(inside) <= LEAST_CYCLES:
             continue
         true, odometry = [], []
-        for a, b in zip(inside[:-1], inside[1:], strict=True):
+        for a, b in pairwise(inside):
             time_s = float(r.time_s[b] - r.time_s[a])
             true.append(twist_between(poses[a], poses[b], time_s))
             odometry.append(np.mean(r.velocity[a:b], axis=0))
@@ -264,7 +267,7 @@ def _stretches(r: Recording) -> list[Stretch]:
         speed = math.hypot(command[0], command[1])
         drift = sideways = 0.0
         if speed > 0.02 and not command[2]:
-            drift = float(mean[2]) / speed
+            drift = float(mean[2]) / speed if not command[1] else 0.0
             sideways = float(command[0] * mean[1] - command[1] * mean[0]) / speed**2
         found.append(
             Stretch(
@@ -286,7 +289,7 @@ def _stretches(r: Recording) -> list[Stretch]:
 def _first_steady(r: Recording, beats: npt.NDArray[np.intp]) -> int:
     """Index of the touch-down from which on the odometry's velocity, averaged over each cycle,
     is that of the last cycle; and one cycle more, for the body to settle."""
-    means = [np.mean(r.velocity[a:b], axis=0) for a, b in zip(beats[:-1], beats[1:], strict=True)]
+    means = [np.mean(r.velocity[a:b], axis=0) for a, b in pairwise(beats)]
     if not means:
         return 0
     scale = np.array([0.02, 0.02, 0.1]) + np.max(np.abs(means[-1]))
@@ -301,7 +304,8 @@ def _fall(r: Recording) -> tuple[bool, str]:
     if np.any(tipped):
         at = int(np.argmax(tipped))
         return True, f"tipped over {math.degrees(FELL_TILT_RAD):.0f} deg at {r.time_s[at]:.2f} s"
-    may_lie = ~r.powered | (r.height_m < r.robot.stance.rest_height_m + LYING_M)
+    lying = np.array([state in LYING_STATES for state in r.state])
+    may_lie = lying | ~r.powered | (r.height_m < r.robot.stance.rest_height_m + LYING_M)
     touched = r.trunk_touches & ~may_lie
     if np.any(touched):
         return True, f"the trunk touched the floor at {r.time_s[int(np.argmax(touched))]:.2f} s"
@@ -309,7 +313,7 @@ def _fall(r: Recording) -> tuple[bool, str]:
 
 
 def _along_cycles(r: Recording) -> float:
-    """Way of the trunk over the ground from touch-down to touch-down, m; sway within a cycle does not count."""
+    """Way of the trunk over the ground, m, from touch-down to touch-down: sway does not count."""
     marks = [0, *touch_downs(r).tolist(), len(r.time_s) - 1]
     points = r.true_position_m[marks, :2]
     return float(np.sum(np.hypot(*np.diff(points, axis=0).T)))
@@ -339,9 +343,12 @@ def _odometry_error(r: Recording) -> tuple[float, float, float]:
     x0, y0, yaw0 = r.pose[0]
     x1, y1, yaw1 = r.pose[-1]
     turn = float(headings[-1] - headings[0]) - float(yaw1 - yaw0)
+    # The odometry's own start need not be at the origin of its frame.
+    ahead, left = x1 - x0, y1 - y0
+    c0, s0 = math.cos(yaw0), math.sin(yaw0)
     return (
-        float(c * dx + s * dy - (x1 - x0)),
-        float(-s * dx + c * dy - (y1 - y0)),
+        float(c * dx + s * dy - (c0 * ahead + s0 * left)),
+        float(-s * dx + c * dy - (-s0 * ahead + c0 * left)),
         math.remainder(turn, math.tau),
     )
 
