@@ -256,6 +256,8 @@ def test_notifications_are_never_answered_whatever_goes_wrong() -> None:
         (b"[" * 60_000, "more than 4096 values"),
         (b"[" * (MAX_DEPTH + 1) + b"]" * (MAX_DEPTH + 1), "nested more than 16 deep"),
         (b'{"a":' * (MAX_DEPTH + 1) + b"1" + b"}" * (MAX_DEPTH + 1), "nested more than 16 deep"),
+        (b"[" * (MAX_VALUES - 1), "nested too deep"),
+        (b"]" * 20 + b"[" * 20, "Expecting value"),
         (b"[" + b"0," * MAX_VALUES + b"0]", "more than 4096 values"),
         (b"01", "Extra data"),
         (b"{'a': 1}", "character 2"),
@@ -292,13 +294,12 @@ def test_a_text_within_the_limits_is_read(line: bytes, value: object) -> None:
 
 def test_an_unfinished_string_of_quotes_is_measured_in_linear_time() -> None:
     """Steps, not seconds: every match of the scan ends where the next one starts, so that
-    their number is bounded by the brackets and strings there are, here one."""
+    their number is that of the strings there are, here one."""
     from hobnail.service import protocol
 
     line = b"[" * (MAX_DEPTH + 1) + b'"' + b'\\"' * 30_000
-    matches = list(protocol._BRACKETS.finditer(line))
-    assert len(matches) == MAX_DEPTH + 2
-    assert matches[-1].end() == len(line)
+    matches = list(protocol._STRING.finditer(line))
+    assert [match.span() for match in matches] == [(MAX_DEPTH + 1, len(line))]
 
 
 def test_a_batch_beyond_the_limit_is_refused_as_a_whole() -> None:

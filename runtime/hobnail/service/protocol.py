@@ -124,19 +124,16 @@ _DECODER = json.JSONDecoder(
 _ENCODER = json.JSONEncoder(allow_nan=False)
 
 # A whole string, or an unfinished one up to the end, is one match: linear in any input.
-_BRACKETS = re.compile(rb'"[^"\\]*+(?:\\.[^"\\]*+)*+"?|[\[{]|[\]}]', re.DOTALL)
+_STRING = re.compile(rb'"[^"\\]*+(?:\\.[^"\\]*+)*+"?', re.DOTALL)
+_TO_SQUARE = bytes.maketrans(b"{}", b"[]")
+_NO_BRACKET = bytes(set(range(256)) - set(b"[]{}"))
 
 
-def _depth(line: bytes) -> int:
-    depth = deepest = 0
-    for match in _BRACKETS.finditer(line):
-        first = match.group()[:1]
-        if first in b"[{":
-            depth += 1
-            deepest = max(deepest, depth)
-        elif first in b"]}":
-            depth -= 1
-    return deepest
+def _is_too_deep(line: bytes) -> bool:
+    brackets = _STRING.sub(b"", line).translate(_TO_SQUARE, _NO_BRACKET)
+    for _ in range(MAX_DEPTH):
+        brackets = brackets.replace(b"[]", b"")  # the innermost level
+    return b"[]" in brackets  # what else is left does not match, and is no JSON
 
 
 def parse(line: bytes) -> object:
@@ -144,7 +141,7 @@ def parse(line: bytes) -> object:
     opened = line.count(b"[") + line.count(b"{")
     if opened + line.count(b",") > MAX_VALUES:
         raise BadLineError(f"more than {MAX_VALUES} values in a line")
-    if opened > MAX_DEPTH and _depth(line) > MAX_DEPTH:
+    if opened > MAX_DEPTH and _is_too_deep(line):
         raise BadLineError(f"nested more than {MAX_DEPTH} deep")
     try:
         value = _DECODER.decode(line.decode("utf-8"))
