@@ -93,6 +93,11 @@ def test_broken_yaml_is_told_with_its_place(data: bytes) -> None:
     assert "YAML" in text
 
 
+def test_a_last_line_cut_short_is_told_where_the_file_ends() -> None:
+    line, column, path, _ = only_problem(b"a: 1\nb: {c: 2, ")
+    assert (line, column, path) == (2, 11, "b")
+
+
 def test_merge_keys_are_plain_words() -> None:
     """`<<` has no meaning of its own, so that it ends as an unknown key."""
     report = Report("robot.yaml")

@@ -163,8 +163,10 @@ def parse(data: bytes, report: Report) -> Mapping | None:
     except _RefusedError:
         return None
     except yaml.MarkedYAMLError as error:
-        mark = error.problem_mark or error.context_mark
-        node = Node(path=composer.path, line=mark.line + 1, column=mark.column + 1) if mark else None
+        node = _place(text)  # the end; the C parser tells a line beyond it where a last line is cut short
+        if mark := error.problem_mark or error.context_mark:
+            node.line, node.column = min((mark.line + 1, mark.column + 1), (node.line, node.column))
+        node.path = composer.path
         what = " ".join(part for part in (error.context, error.problem) if part)
         report.add(
             node, what or "broken YAML", "YAML", "Check the indentation, colons and brackets here and above."
