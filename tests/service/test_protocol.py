@@ -515,6 +515,11 @@ def test_a_wrong_stop_that_fails_is_not_called_carried_out() -> None:
     assert answer is not None
     assert b"Carried out" not in answer
     assert told == ["request stop"]
+    refuses = Protocol(Recorder(errors.StateError("no")), on_error=lambda where, _error: told.append(where))
+    answer = refuses.answer(b'{"jsonrpc": "2.0", "method": "stop", "params": [9], "id": 1}')
+    assert answer is not None
+    assert b"Carried out" not in answer
+    assert len(told) == 1  # a refusal is no bug
 
 
 def test_only_a_stop_is_carried_out_when_wrong() -> None:

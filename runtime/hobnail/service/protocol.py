@@ -300,6 +300,8 @@ class Protocol:
             return False
         try:
             self._handler(name, self._methods[name].salvage(request.get("params")), client_id)
+        except errors.HobnailError:
+            return False
         except Exception as error:  # noqa: BLE001 the answer is an error already
             self._on_error(f"request {name}", error)
             return False
