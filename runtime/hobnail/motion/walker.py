@@ -184,8 +184,10 @@ class Walker:
                 break
             self._restore(saved)
             # Nearly linear in time: one more try is the rule, and it leaves the slow-down a
-            # smooth function of the path.
-            time_s *= RETRY_SHARE / excess if attempt < RETRIES - 2 else 0.0
+            # smooth function of the path.  What is not linear, such as a load that is given
+            # over at its own rate, must still go on: halve, and only the last try stands still.
+            share = RETRY_SHARE / excess
+            time_s *= share if attempt < 2 else min(share, 0.5) if attempt < RETRIES - 2 else 0.0
         self.clamped = 0
         if excess > 1.0:
             body.loaded_rad, self.clamped = clamp_steps(loaded, body.loaded_rad, steps_rad)
