@@ -15,55 +15,44 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from hobnail.robot import Robot
+from hobnail.robot import Joint, Robot
+from hobnail.service.drivers import output
 from hobnail.servo import JointMap
 from hobnail.workshop.rehearse.model import STEP_S
 from hobnail.workshop.rehearse.plant import Plant
 from hobnail_drivers.contract import BoardSettings, Driver, Health, Output, Pulses
 from hobnail_drivers.errors import BusError
+from hobnail_drivers.registers import pre_scale, true_frame_hz
 
 COUNTS = 4096  # of a frame
-PRESCALE_RANGE = (3, 255)
-
-
-def true_frame_hz(frame_hz: float, oscillator_hz: float) -> float:
-    """The frame rate that the chip really gives (PCA9685 data sheet, sec. 7.3.5)."""
-    low, high = PRESCALE_RANGE
-    prescale = min(max(round(oscillator_hz / (COUNTS * frame_hz)) - 1, low), high)
-    return oscillator_hz / (COUNTS * (prescale + 1))
 
 
 class RehearsalDriver(Driver):
-    """Drives the servos of a `Plant`.  `robot` is the robot as configured."""
+    """Drives the servos of a `Plant`; `joints`, one an output, are the real ones."""
 
-    def __init__(self, robot: Robot, plant: Plant) -> None:
-        boards = [
-            BoardSettings(
-                name=board.name,
-                bus=board.bus,
-                address=board.address,
-                frame_hz=board.frame_hz,
-                oscillator_hz=board.oscillator_hz,
-            )
-            for board in robot.boards
-        ]
-        outputs = [
-            Output(
-                board=joint.board,
-                channel=joint.channel,
-                min_us=joint.pulse_limits_us[0],
-                max_us=joint.pulse_limits_us[1],
-            )
-            for joint in robot.joints
-        ]
+    is_model = True
+
+    def __init__(
+        self,
+        boards: Sequence[BoardSettings],
+        outputs: Sequence[Output],
+        *,
+        plant: Plant,
+        joints: Sequence[Joint],
+    ) -> None:
+        """Raises SettingsError."""
         super().__init__(boards, outputs)
         self.plant = plant
         self.lost_frames = 0
-        self._frame_hz = {b.name: true_frame_hz(b.frame_hz, b.oscillator_hz) for b in boards}
-        self._count_us = [1e6 / (self._frame_hz[o.board] * COUNTS) for o in outputs]
-        self._maps = [JointMap(joint) for joint in plant.robot.joints]
+        self._frame_hz = {
+            board.name: true_frame_hz(board.oscillator_hz, pre_scale(board.oscillator_hz, board.frame_hz))
+            for board in boards
+        }
+        self._count_us = [1e6 / (self._frame_hz[output.board] * COUNTS) for output in outputs]
+        self._maps = [JointMap(joint) for joint in joints]
         self._of_board = {
-            b.name: [i for i, output in enumerate(outputs) if output.board == b.name] for b in boards
+            board.name: [i for i, output in enumerate(outputs) if output.board == board.name]
+            for board in boards
         }
         self._luck = np.random.default_rng((plant.disturbances.seed, 4))
         self._targets: list[float | None] = [None] * len(outputs)
@@ -123,6 +112,17 @@ class RehearsalDriver(Driver):
         self._release()
 
 
-def pulses_at(robot: Robot, joints_rad: Sequence[float]) -> list[float]:
-    """The pulses for these joint angles, as the robot is configured."""
-    return [JointMap(joint).pulse_us(angle) for joint, angle in zip(robot.joints, joints_rad, strict=True)]
+def connect(robot: Robot, plant: Plant) -> RehearsalDriver:
+    """The driver of a plant, wired as `robot` is configured; the plant has the real servos."""
+    boards = [
+        BoardSettings(
+            name=board.name,
+            bus=board.bus,
+            address=board.address,
+            frame_hz=board.frame_hz,
+            oscillator_hz=board.oscillator_hz,
+        )
+        for board in robot.boards
+    ]
+    outputs = [output(joint) for joint in robot.joints]
+    return RehearsalDriver(boards, outputs, plant=plant, joints=plant.robot.joints)

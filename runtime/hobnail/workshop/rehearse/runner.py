@@ -20,7 +20,7 @@ from hobnail.errors import HobnailError
 from hobnail.robot import Robot, Vec3
 from hobnail.service.machine import Machine
 from hobnail.service.states import NO_PULSES, Frame, State
-from hobnail.workshop.rehearse.backend import RehearsalDriver
+from hobnail.workshop.rehearse.backend import RehearsalDriver, connect
 from hobnail.workshop.rehearse.disturbances import Disturbances
 from hobnail.workshop.rehearse.plant import Plant, Probe
 from hobnail.workshop.rehearse.scenarios import STILL, Command, Scenario
@@ -91,7 +91,7 @@ def run(robot: Robot, scenario: Scenario, disturbances: Disturbances | None = No
     """
     disturbances = disturbances or Disturbances()
     plant = Plant(robot, disturbances)
-    driver = RehearsalDriver(robot, plant)
+    driver = connect(robot, plant)
     machine = Machine(robot, now_s=0.0)
     tick = machine.controller.tick(robot.period_s)
     now_s = 0.0
