@@ -21,7 +21,9 @@ class Servo:
 
     Speed is a no-load rating and torque a stall rating, both at `rated_v`.
     `stiffness_nm_rad` is the static torque per radian of position error of the
-    loaded servo; None when unknown, and then no sag is compensated.
+    loaded servo; None when unknown, and then no sag is compensated.  `trail_s` is
+    the time by which a moving servo trails its command, where it was measured;
+    None: what the slope of the torque-speed line over the stiffness gives.
     """
 
     name: str
@@ -30,6 +32,7 @@ class Servo:
     rated_v: float
     usable_speed: float = 0.8  # share of the no-load speed that a motion may ask for
     stiffness_nm_rad: float | None = None
+    trail_s: float | None = None
     dead_band_us: float = 4.0
     backlash_rad: float = 0.0
     shortest_frame_s: float = 0.003

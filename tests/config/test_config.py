@@ -168,7 +168,12 @@ def test_what_is_left_out_has_the_default_of_the_robot(tmp_path: Path) -> None:
     robot = load_robot(path)
     assert robot.safety.wake_group == Safety().wake_group
     assert robot.supply.low_v is None
-    assert robot.gait("crawl") == Gait(name="crawl", duty=0.8, phases=(0.25, 0.75, 0.0, 0.5), body_shift=1.0)
+    crawl = robot.gait("crawl")
+    assert (crawl.duty, crawl.phases, crawl.body_shift) == (0.8, (0.25, 0.75, 0.0, 0.5), 1.0)
+    # What depends on the robot's size: a tenth of its height, and 9 to 30 of its pendulum times.
+    pendulum_s = math.sqrt(robot.stance.height_m / 9.81)
+    assert crawl.lift_m == pytest.approx(0.1 * robot.stance.height_m)
+    assert crawl.cycle_range_s == pytest.approx((9.0 * pendulum_s, 30.0 * pendulum_s))
     assert robot.gait("trot-2").phases == (0.5, 0.0, 0.0, 0.5)
 
 

@@ -9,7 +9,7 @@ from typing import Any
 
 from hobnail.config.fields import Section
 from hobnail.config.tables import JOINT_NAMES
-from hobnail.motion.gaits import BUILT_IN_GAITS, built_in_gait
+from hobnail.motion.gaits import BUILT_IN_GAITS, LIFT_SHARE, built_in_gait
 from hobnail.robot import (
     Board,
     Body,
@@ -34,13 +34,14 @@ def build_robot(section: Section) -> Robot:
     servos = {servo.values["name"]: servo for servo in values["servos"]}
     legs = tuple(build_leg(leg, servos) for leg in values["legs"])
     hips = [leg.hip_m for leg in legs]
+    height_m = values["stance"].values["height_mm"]
     safety = values.get("safety")
     return Robot(
         **section.arguments(),
         body=Body(**values["body"].arguments()),
         legs=legs,
         boards=tuple(_board(board) for board in values["boards"]),
-        gaits=tuple(build_gait(gait, hips) for gait in values["gaits"]),
+        gaits=tuple(build_gait(gait, hips, height_m) for gait in values["gaits"]),
         stance=Stance(**values["stance"].arguments()),
         envelope=Envelope(**values["envelope"].arguments()),
         posture_limits=PostureLimits(**values["posture"].arguments()),
@@ -77,11 +78,17 @@ def _joint(name: str, section: Section, servos: dict[str, Section]) -> Joint:
     )
 
 
-def build_gait(section: Section, hips: list[Vec3]) -> Gait:
+def build_gait(section: Section, hips: list[Vec3], height_m: float) -> Gait:
     arguments: dict[str, Any] = {}
     if section.values["name"] in BUILT_IN_GAITS and "phases" not in section.values:
         pattern = built_in_gait(section.values["name"], hips)
-        arguments = {"duty": pattern.duty, "phases": pattern.phases, "body_shift": pattern.body_shift}
+        arguments = {
+            "duty": pattern.duty,
+            "phases": pattern.phases,
+            "body_shift": pattern.body_shift,
+            "cycle_range_s": pattern.cycle_range_s(height_m),
+            "lift_m": LIFT_SHARE * height_m,
+        }
     arguments |= section.arguments()
     if arguments.get("cycle_s") == "auto":
         arguments["cycle_s"] = None

@@ -15,6 +15,7 @@ from hobnail.config.fields import Section
 from hobnail.config.strict_yaml import Listing, Node, Report
 from hobnail.config.tables import JOINT_NAMES
 from hobnail.motion.balance import neutral_feet
+from hobnail.motion.gaits import BUILT_IN_GAITS, LIFT_SHARE
 from hobnail.motion.leg import LegKinematics
 from hobnail.robot import Gait, Leg, Robot, Vec2
 from hobnail.servo import reachable_rad
@@ -146,7 +147,10 @@ def _check_heights(section: Section, reach: Reach, hint: str, report: Report) ->
     if standing is None or reach.obstacle(standing):
         return
     for gait in section.values.get("gaits") or ():
-        lift = gait.values.get("lift_mm", Gait.__dataclass_fields__["lift_m"].default)
+        unsaid = Gait.__dataclass_fields__["lift_m"].default
+        if gait.values.get("name") in BUILT_IN_GAITS and "phases" not in gait.values:
+            unsaid = LIFT_SHARE * standing
+        lift = gait.values.get("lift_mm", unsaid)
         if obstacle := reach.obstacle(standing, lift):
             found = f"a lift of {lift * 1000.0:g} mm, where {obstacle}"
             report.add(gait.at("lift_mm"), found, "less lift, or more stance.height_mm", hint)

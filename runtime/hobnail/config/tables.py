@@ -119,6 +119,13 @@ SERVO = (
         required=False,
     ),
     Field(
+        "trail_ms",
+        "trail_s",
+        Number(0, 200, "ms"),
+        "Time by which it trails a moving command, if measured; left out: from speed, torque and stiffness.",
+        required=False,
+    ),
+    Field(
         "dead_band_us",
         "dead_band_us",
         Number(0, 50, "us"),

@@ -7,29 +7,43 @@ legs gives the same gait.  Nothing here moves a foot.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from hobnail.robot import Vec3
+from hobnail.robot import Span, Vec3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class GaitPattern:
-    """The numbers of a gait: `phases` in the order of the hips given."""
+    """The numbers of a gait: `phases` in the order of the hips given; `cycle_times` the
+    shortest and longest automatic cycle, in times of the body as a pendulum."""
 
     duty: float
     phases: tuple[float, ...]
+    cycle_times: Span
     body_shift: float = 0.0
+
+    def cycle_range_s(self, height_m: float) -> Span:
+        """Bounds of the automatic cycle of a robot that stands so high: a body tips over its
+        feet, and must be caught, in the time sqrt(z/g) of the inverted pendulum."""
+        time_s = math.sqrt(height_m / 9.81)
+        return self.cycle_times[0] * time_s, self.cycle_times[1] * time_s
 
 
 # Hildebrand, Science 150:701 (1965): duty factor, and D, the lag of the fore foot after
-# the hind foot on the same side; the sides are half a cycle apart.  Then the body shift.
+# the hind foot on the same side; the sides are half a cycle apart.  Then the cycle times:
+# a trot must be quick (our rehearsals), a crawl must not.
 _SYMMETRICAL = {
-    "trot": (0.6, 0.5, 1.0),
-    "crawl": (0.8, 0.25, 1.0),  # lateral sequence
-    "pace": (0.7, 0.0, 1.0),
-    "amble": (0.7, 0.25, 1.0),
+    "trot": (0.6, 0.5, (3.0, 4.5)),
+    "crawl": (0.8, 0.25, (9.0, 30.0)),  # lateral sequence
+    "pace": (0.7, 0.0, (3.0, 4.5)),
+    "amble": (0.7, 0.25, (4.0, 9.0)),
 }
+TRIPOD_TIMES = (4.0, 14.0)
+WAVE_TIMES = (14.0, 45.0)
+# A foot is lifted by this share of the stance height where nothing else is said.
+LIFT_SHARE = 0.1
 
 BUILT_IN_GAITS = (*_SYMMETRICAL, "tripod", "wave")
 
@@ -45,11 +59,12 @@ def built_in_gait(name: str, hips: Sequence[Vec3]) -> GaitPattern:
     if name in _SYMMETRICAL:
         if len(left) != 2:
             raise ValueError(f"{name} is for four legs, two a side")
-        duty, lag, body_shift = _SYMMETRICAL[name]
+        duty, lag, cycle_times = _SYMMETRICAL[name]
         return GaitPattern(
             duty=duty,
             phases=_placed(len(hips), left, (0.0, lag), right, (0.5, (0.5 + lag) % 1.0)),
-            body_shift=body_shift,
+            cycle_times=cycle_times,
+            body_shift=1.0,
         )
     if len(left) < 3:
         raise ValueError(f"{name} is for six legs or more, as many on either side")
@@ -57,6 +72,7 @@ def built_in_gait(name: str, hips: Sequence[Vec3]) -> GaitPattern:
     if name == "tripod":  # neighbours, along a side and across, step by turns
         return GaitPattern(
             duty=0.6,
+            cycle_times=TRIPOD_TIMES,
             phases=_placed(
                 len(hips), left, [row % 2 / 2 for row in rows], right, [(row + 1) % 2 / 2 for row in rows]
             ),
@@ -66,6 +82,7 @@ def built_in_gait(name: str, hips: Sequence[Vec3]) -> GaitPattern:
     legs = len(hips)
     return GaitPattern(
         duty=1.0 - 0.8 / legs,
+        cycle_times=WAVE_TIMES,
         phases=_placed(legs, left, [row / legs for row in rows], right, [0.5 + row / legs for row in rows]),
     )
 

@@ -56,8 +56,11 @@ class LegCorrection:
         self._give = tuple(1.0 / k if k else 0.0 for k in stiffness)
         a, b, c = (joint.servo.torque_nm / joint.servo.speed_rad_s for joint in leg.joints)
         self.slope_nm_s = (a, b, c)  # of the torque-speed line, N m s/rad
-        ga, gb, gc = self._give
-        self.trail_s = (a * ga, b * gb, c * gc)  # by which each servo trails a steady motion
+        a, b, c = (
+            slope * give if joint.servo.trail_s is None else joint.servo.trail_s
+            for joint, slope, give in zip(leg.joints, self.slope_nm_s, self._give, strict=True)
+        )
+        self.trail_s = (a, b, c)  # by which each servo trails a steady motion
         a, b, c = (
             half_dead_band_rad(joint) if k else 0.0 for joint, k in zip(leg.joints, stiffness, strict=True)
         )

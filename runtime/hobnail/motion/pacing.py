@@ -179,6 +179,9 @@ def _fastest(load: Array) -> float:
     will do; `load` is over -1..1 and the cycles."""
     ok = load.min(axis=-1) <= FASTEST_LOAD
     both = ok[LEVELS:] & ok[LEVELS::-1]
+    if not both[0]:
+        # Even stepping on the spot is too quick: the slow-down has to see to all of it.
+        return 1.0
     beyond = np.flatnonzero(~both)
     return float((beyond[0] - 1 if len(beyond) else LEVELS) / LEVELS)
 

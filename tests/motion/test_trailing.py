@@ -1,0 +1,52 @@
+"""Servos that trail their command are commanded ahead by it: the lead against its definition."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import pytest
+from robots import juniper
+
+from hobnail.controller import Controller
+from hobnail.robot import Robot
+
+
+def with_trail(trail_s: float | None) -> Robot:
+    robot = juniper()
+    legs = []
+    for leg in robot.legs:
+        roll, hip, knee = (
+            replace(joint, servo=replace(joint.servo, trail_s=trail_s, dead_band_us=0.0, backlash_rad=0.0))
+            for joint in leg.joints
+        )
+        legs.append(replace(leg, joints=(roll, hip, knee)))
+    return replace(robot, legs=tuple(legs))
+
+
+def leads(trail_s: float | None) -> list[float]:
+    """How far the hip of the first leg is commanded ahead, against not trailing at all, tick by tick."""
+    ahead, level = Controller(with_trail(trail_s)), Controller(with_trail(0.0))
+    found = []
+    for controller in (ahead, level):
+        controller.walk(0.05, 0.0, 0.0)
+    for _ in range(200):
+        one, two = ahead.tick(0.01), level.tick(0.01)
+        assert one.joints_rad == two.joints_rad
+        found.append(one.commanded_rad[0][1] - two.commanded_rad[0][1])
+    return found
+
+
+def test_a_measured_time_is_the_lead_over_the_speed() -> None:
+    controller = Controller(with_trail(0.0))
+    controller.walk(0.05, 0.0, 0.0)
+    hips = [controller.tick(0.01).joints_rad[0][1] for _ in range(200)]
+    for tick, lead in list(enumerate(leads(0.02)))[50:]:
+        speed = (hips[tick] - hips[tick - 1]) / 0.01
+        assert lead == pytest.approx(0.02 * speed, abs=1e-12)
+
+
+def test_unmeasured_it_is_the_slope_of_the_torque_speed_line_over_the_stiffness() -> None:
+    servo = juniper().legs[0].joints[1].servo
+    assert servo.stiffness_nm_rad is not None
+    derived = servo.torque_nm / servo.speed_rad_s / servo.stiffness_nm_rad
+    assert leads(None) == pytest.approx(leads(derived), abs=1e-12)
