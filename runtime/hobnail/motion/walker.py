@@ -260,7 +260,7 @@ class Walker:
             if swing is None:
                 if old < duty <= phase and self._may_lift(foot):
                     here = (foot.x, foot.y)
-                    swing = Swing(here, self._foothold(foot, (1.0 - old) / rate), AT_REST, AT_REST)
+                    swing = Swing(here, self._foothold(foot, (1.0 - phase) / rate), AT_REST, AT_REST)
                     foot.stepped = True
             elif phase < old:
                 foot.x, foot.y = swing.target
