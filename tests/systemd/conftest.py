@@ -41,7 +41,8 @@ def installed(debian: Path) -> Iterator[Path]:
             Board(fresh).follow("Install")
             _put_model_in_place(Board(fresh))
             (enable, _) = guide.blocks("Start")
-            fresh.run(enable.script)
+            done = fresh.run(enable.script, check=False)
+            assert done.returncode == 0, done.stdout + done.stderr + Board(fresh).journal()
             fresh.power_off()
         yield tree
 
