@@ -73,7 +73,7 @@ def test_walking_for_a_time_goes_that_far_and_ends_standing(capsys: Output) -> N
     snapshot = state(capsys)
     assert snapshot["state"] == "standing"
     # 0.2 m/s over 5 s, less for getting there, and for how coarsely the threads share time.
-    assert 0.7 < snapshot["pose"]["x_m"] < 1.4
+    assert 0.3 < snapshot["pose"]["x_m"] < 1.6
     assert abs(snapshot["pose"]["y_m"]) < 1e-6
     assert snapshot["faults"] == []  # the stream was never late for its time-to-live
 

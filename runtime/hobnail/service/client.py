@@ -284,7 +284,7 @@ def _error(error: object) -> errors.HobnailError:
     if isinstance(data, dict):
         if isinstance(data.get("detail"), str) and data["detail"] != text:
             text = f"{text}: {data['detail']}"
-        if data.get("next") and isinstance(data["next"], str):
+        if data.get("next") and isinstance(data["next"], str) and not text.endswith(data["next"]):
             text = f"{text}. Next: {data['next']}"
     made = _CLASSES.get(code, errors.ServiceError)(text)
     if isinstance(data, dict) and isinstance(data.get("cause"), str):

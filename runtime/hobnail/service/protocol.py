@@ -310,8 +310,10 @@ class Protocol:
 
 def _own_error(error: errors.HobnailError) -> _Error:
     code, next_step = next((code, next_step) for kind, code, next_step in _CODES if isinstance(error, kind))
-    next_step = getattr(error, "next_step", "") or next_step
-    return code, str(error) or error.cause, {"cause": error.cause, "next": next_step}
+    message = str(error) or error.cause
+    # A message that says itself what to do says it last, after a semicolon.
+    next_step = message.rpartition("; ")[2] if "; " in message else next_step
+    return code, message, {"cause": error.cause, "next": next_step}
 
 
 class Exchange:
