@@ -24,10 +24,8 @@ from hobnail.robot import (
 
 KGF_CM = 0.0980665  # N m
 LEG_NAMES = ("left-front", "right-front", "left-hind", "right-hind")
-# Leg order as above; a trot's diagonal pairs touch down together.
-TROT = Gait(
-    name="trot", duty=0.6, phases=(0.0, 0.5, 0.5, 0.0), cycle_range_s=(0.4, 0.5), lift_m=0.018, body_shift=1.0
-)
+# Leg order as above; in a trot diagonal pairs touch down together.
+DIAGONAL = (0.0, 0.5, 0.5, 0.0)
 CRAWL = Gait(
     name="crawl",
     duty=0.8,
@@ -54,6 +52,9 @@ def four_legs(
     spread_m: float,
     envelope: Envelope,
     supply_v: float,
+    belly_m: float,
+    trot: Gait,
+    forward_m: float = 0.0,
     period_s: float = 0.01,
 ) -> Robot:
     """A robot with four legs on one board; `hips_m` is (length, width) between hips."""
@@ -102,13 +103,13 @@ def four_legs(
         body=Body(
             mass_kg=trunk_kg,
             com_m=com_m,
-            size_m=(hips_m[0] + 0.04, hips_m[1], 0.05),
-            belly_m=0.03,
+            size_m=(hips_m[0] + 0.04, hips_m[1], 0.06),
+            belly_m=belly_m,
         ),
         legs=tuple(legs),
         boards=(Board(name="main", bus=1, address=0x40, frame_hz=200.0),),
-        gaits=(TROT, CRAWL),
-        stance=Stance(height_m=height_m, rest_height_m=rest_height_m, spread_m=spread_m),
+        gaits=(trot, CRAWL),
+        stance=Stance(height_m=height_m, rest_height_m=rest_height_m, spread_m=spread_m, forward_m=forward_m),
         envelope=envelope,
         posture_limits=PostureLimits(height_m=(height_m - 0.03, height_m + 0.02)),
         supply=Supply(nominal_v=supply_v),
@@ -136,7 +137,13 @@ def thistle() -> Robot:
         foot_radius_m=0.008,
         servo=servo,
         height_m=0.21,
-        rest_height_m=0.10,
+        rest_height_m=0.052,
+        belly_m=0.05,
+        # Rehearsed: with more duty or longer cycles it rocks; its feet stand a little behind.
+        trot=Gait(
+            name="trot", duty=0.5, phases=DIAGONAL, cycle_range_s=(0.38, 0.4), lift_m=0.015, body_shift=1.0
+        ),
+        forward_m=-0.005,
         spread_m=0.01,
         envelope=Envelope(forward_m_s=0.25, sideways_m_s=0.12, turn_rad_s=0.8),
         supply_v=7.4,
@@ -164,8 +171,13 @@ def burdock() -> Robot:
         foot_radius_m=0.014,
         servo=servo,
         height_m=0.125,
-        rest_height_m=0.06,
+        rest_height_m=0.042,
+        belly_m=0.04,
+        # Rehearsed: a low robot tips quickly and has to step quickly, so it lifts little.
+        trot=Gait(
+            name="trot", duty=0.52, phases=DIAGONAL, cycle_range_s=(0.34, 0.38), lift_m=0.012, body_shift=1.0
+        ),
         spread_m=0.005,
-        envelope=Envelope(forward_m_s=0.16, sideways_m_s=0.09, turn_rad_s=0.7),
+        envelope=Envelope(forward_m_s=0.12, sideways_m_s=0.06, turn_rad_s=0.5),
         supply_v=6.0,
     )

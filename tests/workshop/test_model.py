@@ -165,5 +165,5 @@ class TestDisturbances:
             Disturbances(**{name: value})  # type: ignore[arg-type]
 
     def test_an_unknown_joint_is_told_with_the_names(self) -> None:
-        with pytest.raises(CommandError, match="left-front.roll"):
+        with pytest.raises(CommandError, match=r"left-front\.roll"):
             Disturbances(weak_servo=0.5, weak_joint="tail").applied_to(burdock())
