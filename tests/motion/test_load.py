@@ -77,3 +77,10 @@ def test_an_unknown_stiffness_is_not_compensated() -> None:
 def test_half_a_dead_band_is_half_its_pulse_width_on_the_map() -> None:
     joint = burdock().joints[0]  # 5 us wide, 2000 us for half a turn
     assert half_dead_band_rad(joint) == pytest.approx(math.pi * 2.5 / 2000)
+
+
+def test_slack_is_half_of_dead_band_and_backlash() -> None:
+    leg = thistle().legs[0]
+    roll, hip, knee = (replace(joint, servo=replace(joint.servo, backlash_rad=0.01)) for joint in leg.joints)
+    slack = correction(replace(leg, joints=(roll, hip, knee))).slack_rad
+    assert slack == pytest.approx([half_dead_band_rad(roll) + 0.005] * 3)

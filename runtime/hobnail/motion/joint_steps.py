@@ -35,7 +35,7 @@ def clamp_steps(
 
 class ServoLead:
     """What the servos are sent: each joint ahead by what its servo trails behind at the
-    present speed, and across its dead band to the side on which it bears its torque, as
+    present speed, and across its slack to the side on which it bears its torque, as
     far as the joint's step allows."""
 
     __slots__ = ("_feet", "_speeds", "commanded_rad")

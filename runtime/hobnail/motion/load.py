@@ -8,8 +8,8 @@ the weights of the leg's links, which a foot in the air has as well).
 Trailing: a motor that turns at w gives less torque by w times stall torque over
 no-load speed, the slope of its torque-speed line; its position loop trails by
 that over k, a fixed time, by which the command goes ahead.
-Dead band: a servo that bears a torque stands off by half its dead band more, towards
-the side on which it is pushed.
+Slack: a servo that bears a torque stands off by half its dead band and half its
+backlash more, towards the side on which it is pushed.
 Rolling: a foot of radius r rolls as its shank turns, and its centre moves by r
 times the angle; the leg is sent there.
 
@@ -62,7 +62,8 @@ class LegCorrection:
         )
         self.trail_s = (a, b, c)  # by which each servo trails a steady motion
         a, b, c = (
-            half_dead_band_rad(joint) if k else 0.0 for joint, k in zip(leg.joints, stiffness, strict=True)
+            half_dead_band_rad(joint) + joint.servo.backlash_rad / 2 if k else 0.0
+            for joint, k in zip(leg.joints, stiffness, strict=True)
         )
         self.slack_rad = (a, b, c)
         a, b, c = (SURE_SHARE * joint.servo.torque_nm for joint in leg.joints)
