@@ -27,6 +27,8 @@ from hobnail.robot import Joint, Leg, Vec3
 # Share of the stall torque from which on the side is sure to which a torque pushes a servo:
 # about the friction of its gears (common practice).
 SURE_SHARE = 0.03
+# Sine of the knee angle down to which rolling is made up for in full.
+LEAST_FOLD = 0.2
 
 
 class LegCorrection:
@@ -102,11 +104,13 @@ class LegCorrection:
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
             forward = radius * (shank - self._neutral[1])
+            # Knee and hip that move the foot along x alone, in the plane of the leg.  A leg
+            # nearly straight cannot, and is left to roll a little farther.
             folded = self._upper_m * self._lower_m * math.sin(knee)
-            if abs(folded) > 1e-6:
-                # Knee and hip that move the foot along x alone, in the plane of the leg.
-                hip_by += forward * shank_x / folded
-                knee_by -= forward * foot_x / folded
+            least = self._upper_m * self._lower_m * LEAST_FOLD
+            folded = math.copysign(max(abs(folded), least), folded)
+            hip_by += forward * shank_x / folded
+            knee_by -= forward * foot_x / folded
             roll_by += radius * (roll - self._neutral[0]) / z
         return (roll + roll_by, hip + hip_by, knee + knee_by), torques
 

@@ -180,14 +180,15 @@ class Walker:
                 excess_step(loaded, body.loaded_rad, steps_rad),
                 excess_step(joints, body.joints_rad, steps_rad),
             )
-            if excess <= 1.0:
+            if excess <= 1.0 or attempt == RETRIES - 1:
                 break
             self._restore(saved)
             # Nearly linear in time: one more try is the rule, and it leaves the slow-down a
             # smooth function of the path.  What is not linear, such as a load that is given
-            # over at its own rate, must still go on: halve, and only the last try stands still.
+            # over at its own rate, is met by halving; what is a step in however short a
+            # time, by the clamp, so that the robot does not stand still for good.
             share = RETRY_SHARE / excess
-            time_s *= share if attempt < 2 else min(share, 0.5) if attempt < RETRIES - 2 else 0.0
+            time_s *= share if attempt < 2 else min(share, 0.5)
         self.clamped = 0
         if excess > 1.0:
             body.loaded_rad, self.clamped = clamp_steps(loaded, body.loaded_rad, steps_rad)
