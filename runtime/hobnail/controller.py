@@ -20,6 +20,7 @@ from hobnail.robot import Robot, Vec3
 from hobnail.servo import JointMap
 
 LONGEST_TICK_S = 1.0
+GREATEST = 1e6  # of what a command to walk may name, in any unit
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,8 +85,8 @@ class Controller:
         keeps its shape.  Raises CommandError for what is not a finite number."""
         values = {"vx": vx, "vy": vy, "yaw_rate": yaw_rate, "pivot x": pivot[0], "pivot y": pivot[1]}
         for name, value in values.items():
-            if not math.isfinite(value):
-                raise CommandError(f"{name} is {value}; allowed: a finite number")
+            if not -GREATEST <= value <= GREATEST:
+                raise CommandError(f"{name} is {value}; allowed: a finite number, {GREATEST:g} at most")
         self._walker.walk(to_origin(vx, vy, yaw_rate, pivot))
 
     def stand(self) -> None:
@@ -132,12 +133,15 @@ class Controller:
         self._walker.set_posture(target)
 
     def rise(self, within_s: float | None = None) -> None:
-        """Raise the body, level, to stance height."""
+        """Raise the body, level, to stance height (within that time, as far as the servos can).
+        Raises CommandError for a time that is none."""
+        _check_time(within_s)
         self._walker.set_posture([self.robot.stance.height_m, 0.0, 0.0, 0.0, 0.0, 0.0], within_s)
 
     def lower(self, within_s: float | None = None) -> None:
         """Plant the feet, then lower the body, level, to rest height (within that time, as
-        far as the servos can)."""
+        far as the servos can).  Raises CommandError for a time that is none."""
+        _check_time(within_s)
         self._walker.lower(within_s)
 
     def tick(self, dt_s: float) -> Tick:
@@ -175,3 +179,8 @@ class Controller:
             clamped,
             body.out_of_reach,
         )
+
+
+def _check_time(within_s: float | None) -> None:
+    if within_s is not None and not 0.0 < within_s < math.inf:
+        raise CommandError(f"within_s is {within_s} s; allowed: more than 0 s")
