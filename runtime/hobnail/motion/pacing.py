@@ -248,7 +248,8 @@ def fit_steady(twist: Twist, cycle_s: float, strides: Vec3) -> Twist:
     """A twist scaled as a whole so that its stride keeps a slow gait's balance: what it
     takes ahead, sideways and in turning may together use up no more than the margin
     that each alone would (`hobnail.motion.steadiness`)."""
-    size = sum(abs(v) * cycle_s / most for v, most in zip(twist, strides, strict=True))
+    # A robot without room for any stride has been brought to a stand before.
+    size = sum(abs(v) * cycle_s / most for v, most in zip(twist, strides, strict=True) if v)
     return twist if size <= 1.0 else (twist[0] / size, twist[1] / size, twist[2] / size)
 
 
