@@ -14,14 +14,26 @@ from hobnail.controller import Controller
 from hobnail.errors import CommandError
 from hobnail.robot import Robot
 from robots import anvil, bramble, examples, juniper, made_up, stilt
-from walks import Command, Walk, fewest_feet, gaits, perform, record, sequences, stands, supplies, walks
+from walks import (
+    Array,
+    Command,
+    Walk,
+    fewest_feet,
+    gaits,
+    perform,
+    record,
+    sequences,
+    stands,
+    supplies,
+    walks,
+)
 
 ROBOTS = pytest.mark.parametrize(
     "robot", [juniper(), bramble(), stilt(), anvil()], ids=lambda robot: robot.name
 )
 
 
-def neutral_feet(robot: Robot) -> np.ndarray:  # type: ignore[type-arg]
+def neutral_feet(robot: Robot) -> Array:
     """Feet of the neutral stance (body frame, m)."""
     return record(Walk(robot).go(1)).feet_m[0]
 
