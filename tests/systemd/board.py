@@ -6,11 +6,11 @@ The PWM chips are a model in a file, one a unit, which outlives the service.
 from __future__ import annotations
 
 import json
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from contextlib import contextmanager
 from typing import Any
 
-from hobnail_drivers.chip_file import open_chip_file
+from hobnail_drivers.chip_file import Entry, open_chip_file
 from systemd import guide
 from systemd.container import Container, wait_until
 
@@ -24,6 +24,15 @@ WALK = ("hobnail", "walk", "--vx", "0.1")
 LED0_OFF_H = 0x09
 FULL_OFF = 0x10
 CHANNELS = 16
+
+
+def pulsing(chips: Iterable[Entry]) -> int:
+    """How many channels of these chips are not full off."""
+    return sum(
+        not chip.registers[LED0_OFF_H + 4 * channel] & FULL_OFF
+        for chip in chips
+        for channel in range(CHANNELS)
+    )
 
 
 class Board:
@@ -69,14 +78,13 @@ class Board:
             walker.terminate()
             walker.communicate()
 
+    def chips(self, unit: str = UNIT) -> list[Entry]:
+        """The unit's PWM chips; what is got stays readable when the container is gone."""
+        return open_chip_file(str(self.file(f"/run/{unit}/chips.bin")))
+
     def pulsing(self, unit: str = UNIT) -> int:
         """How many channels of the unit's chips are not full off."""
-        chips = open_chip_file(str(self.file(f"/run/{unit}/chips.bin")))
-        return sum(
-            not chip.registers[LED0_OFF_H + 4 * channel] & FULL_OFF
-            for chip in chips
-            for channel in range(CHANNELS)
-        )
+        return pulsing(self.chips(unit))
 
     def follow(self, section: str) -> None:
         """Do what a section of the guide says, as it says it."""
