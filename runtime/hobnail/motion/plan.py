@@ -18,9 +18,9 @@ from hobnail.motion.pacing import (
     room_between_feet,
 )
 from hobnail.motion.planar import Twist
+from hobnail.motion.reach import fit_sway
 from hobnail.motion.steadiness import steady_strides
 from hobnail.motion.support import support_centre
-from hobnail.motion.sway import PeriodicSway
 from hobnail.robot import Gait, Robot, Vec2, Vec3
 
 # Share of a cycle over which a foot takes up and gives off its load: the time in
@@ -50,14 +50,14 @@ class GaitPlan:
         self.gait = gait
         self.path = FootPath(gait.swing)
         self._neutral: list[Vec2] = [foot.neutral for foot in feet]
-        self.sway = PeriodicSway(self._neutral, gait, robot.stance.height_m)
         self.load_ramp = max(min(gait.duty - 0.5, LOAD_RAMP[1]), LOAD_RAMP[0])
         neutrals = [foot.from_hip for foot in feet]
         room = room_between_feet(self._neutral, [foot.radius_m for foot in feet])
-        self.reach_m = [
+        reach_m = [
             min(reach_radius(foot.kinematics, foot.limits, neutral, gait.lift_m), space)
             for foot, neutral, space in zip(feet, neutrals, room, strict=True)
         ]
+        shifting, self.sway, self.reach_m = fit_sway(feet, gait, self.path, robot.stance.height_m, reach_m)
         # Mean square distance of the feet from the body: a turning moment over it is the
         # force over arm of each.
         self.arm2_m2 = sum(x * x + y * y for x, y in self._neutral) / len(feet)
@@ -66,7 +66,7 @@ class GaitPlan:
             longest = 2.0 * max(self.reach_m)
             arm = math.sqrt(self.arm2_m2)
             centre = support_centre(self._neutral, robot.gaits[0].duty, robot.gaits[0].phases)
-            self._strides = steady_strides(self._neutral, gait, centre, (longest, longest, longest / arm))
+            self._strides = steady_strides(self._neutral, shifting, centre, (longest, longest, longest / arm))
         self._table: CycleTable | None = None
         if gait.cycle_s is None:
             self._table = CycleTable(
