@@ -35,7 +35,8 @@ ROBOTS = pytest.mark.parametrize(
 
 def neutral_feet(robot: Robot) -> Array:
     """Feet of the neutral stance (body frame, m)."""
-    return record(Walk(robot).go(1)).feet_m[0]
+    feet: Array = record(Walk(robot).go(1)).feet_m[0]
+    return feet
 
 
 # ---- at the start
