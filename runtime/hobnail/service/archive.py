@@ -9,7 +9,6 @@ from __future__ import annotations
 import json
 import math
 import os
-import shutil
 from collections.abc import Sequence
 from datetime import UTC, datetime
 from pathlib import Path
@@ -52,7 +51,7 @@ def keep_recording(ring: Path, directory: Path, name: str, wall_s: float) -> Pat
     folder.mkdir(mode=0o750, exist_ok=True)
     stamp = datetime.fromtimestamp(wall_s, UTC).strftime("%Y%m%dT%H%M%S.%f")[:-3]
     kept = folder / f"{stamp}-{name}.ring"
-    shutil.copyfile(ring, kept)
+    kept.write_bytes(ring.read_bytes())
     for old in sorted(folder.glob("*.ring"))[:-KEPT]:
         old.unlink(missing_ok=True)
     return kept

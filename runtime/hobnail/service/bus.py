@@ -20,6 +20,8 @@ from hobnail_drivers.errors import BusError, DriverError
 
 if TYPE_CHECKING:
     from hobnail_drivers.supply import SupplyMonitor
+BUS_THREAD = "hobnail-bus"
+
 
 class Event(NamedTuple):
     """Something the state machine has to know: a fault by name, and its detail."""
@@ -68,18 +70,13 @@ class Bus:
         self._check = False
         self._close = False
         self._working = False
-        self._thread = threading.Thread(target=self._run, name="hobnail-bus", daemon=True)
+        self._thread = threading.Thread(target=self._run, name=BUS_THREAD, daemon=True)
 
     # From the loop
 
     def start(self) -> None:
         """Start the thread; the boards are not touched yet."""
         self._thread.start()
-
-    @property
-    def thread_id(self) -> int:
-        """The system's number of the thread, for its scheduling; 0 before `start`."""
-        return self._thread.native_id or 0
 
     def submit(self, pulses_us: Pulses) -> None:
         """Send this frame, instead of one that is still waiting."""

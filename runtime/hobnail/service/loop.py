@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import gc
 import time
-import traceback
 from collections.abc import Callable, Sequence
 from typing import Protocol
 
@@ -138,6 +137,8 @@ class Loop:
                 raise
             machine.report("internal", now_s, repr(error))
             if self._log is not None and self._errors == 1:
+                import traceback  # seldom needed
+
                 self._log.event("error", traceback.format_exc(), now_s)
         self.ticks += 1
 

@@ -9,6 +9,9 @@ import gc
 import os
 import resource
 import sys
+import threading
+
+from hobnail.service.bus import BUS_THREAD
 
 FIFO_PRIORITY = 40  # above every ordinary process, below the kernel's interrupt threads at 50
 SWITCH_S = 0.0005  # how long another thread may compute before the loop gets its turn
@@ -29,15 +32,21 @@ def usual_collector() -> None:
     gc.unfreeze()
 
 
-def go_realtime(bus_thread_id: int) -> list[str]:
-    """Real-time scheduling for this thread and the bus thread, and locked memory; what came
-    of it, in words."""
+def go_realtime() -> list[str]:
+    """Real-time scheduling for the threads there are, and locked memory; what came of it, in words.
+
+    Every thread takes part, the slow ones one step below this one and the bus
+    thread: an ordinary thread that is put aside while it holds the interpreter
+    would hold up the loop.
+    """
     told = []
+    swift = (threading.current_thread().name, BUS_THREAD)
     try:
-        for thread_id in (0, bus_thread_id):
-            # Children, if there were any, must not inherit it.
+        for thread in threading.enumerate():
+            priority = FIFO_PRIORITY if thread.name in swift else FIFO_PRIORITY - 1
+            # Processes started from here, if there were any, must not inherit it.
             os.sched_setscheduler(
-                thread_id, os.SCHED_FIFO | os.SCHED_RESET_ON_FORK, os.sched_param(FIFO_PRIORITY)
+                thread.native_id or 0, os.SCHED_FIFO | os.SCHED_RESET_ON_FORK, os.sched_param(priority)
             )
         told.append(f"real-time scheduling: on, SCHED_FIFO {FIFO_PRIORITY}")
     except OSError as error:

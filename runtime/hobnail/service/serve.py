@@ -19,7 +19,7 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Self
 
-from hobnail.calibration import calibration_path
+from hobnail.config.calibration import calibration_path
 from hobnail.errors import DriverUnavailableError
 from hobnail.robot import Robot
 from hobnail.service.archive import load_posture
@@ -259,7 +259,7 @@ class Running:
         self._closers.append(attendant.catch_signals())
         now_s = time.monotonic()
         if realtime:
-            for line in go_realtime(self.bus.thread_id):
+            for line in go_realtime():
                 self.log.event("start", line, now_s)
         quiet_collector()
         self._closers.append(usual_collector)
