@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import argparse
 import os
+import signal
 import sys
 import time
 import traceback
@@ -22,6 +23,7 @@ from campaign.hazards import HAZARDS, Hazard
 from campaign.world import STATES
 
 PASS, FAIL, NOT = "pass", "FAIL", "n/a"
+LONGEST_S = 120  # real time for one cell: whoever waits for what never comes fails, too
 
 
 class Cell(NamedTuple):
@@ -37,6 +39,8 @@ def try_out(hazard: Hazard, state: str) -> Cell:
     """Run one cell; whatever it raises is a fail."""
     if state in hazard.not_in:
         return Cell(hazard.name, state, NOT, hazard.not_in[state])
+    signal.signal(signal.SIGALRM, _too_long)
+    signal.alarm(LONGEST_S)
     try:
         return Cell(hazard.name, state, PASS, hazard.scenario(state))
     except AssertionError as error:
@@ -46,6 +50,12 @@ def try_out(hazard: Hazard, state: str) -> Cell:
         return Cell(
             hazard.name, state, FAIL, f"{error!r} at {os.path.basename(where.filename)}:{where.lineno}"
         )
+    finally:
+        signal.alarm(0)
+
+
+def _too_long(*_: object) -> None:
+    raise TimeoutError(f"not done within {LONGEST_S} s")
 
 
 def campaign(hazards: Sequence[Hazard], states: Sequence[str], jobs: int) -> Iterator[Cell]:
