@@ -170,28 +170,25 @@ class Walker:
         """Move on by `dt_s`, no joint by more than its step (rad, leg by leg)."""
         self._decide()
         body = self.body
-        joints, loaded = body.joints_rad, body.loaded_rad
+        joints = body.joints_rad
         saved = self._save()
         time_s = dt_s
         for attempt in range(RETRIES):
             self._advance(time_s)
             self._solve()
-            excess = max(
-                excess_step(loaded, body.loaded_rad, steps_rad),
-                excess_step(joints, body.joints_rad, steps_rad),
-            )
+            excess = excess_step(joints, body.joints_rad, steps_rad)
             if excess <= 1.0 or attempt == RETRIES - 1:
                 break
             self._restore(saved)
             # Nearly linear in time: one more try is the rule, and it leaves the slow-down a
-            # smooth function of the path.  What is not linear, such as a load that is given
-            # over at its own rate, is met by halving; what is a step in however short a
-            # time, by the clamp, so that the robot does not stand still for good.
+            # smooth function of the path.  What is not linear is met by halving; what is a
+            # step in however short a time, by the clamp, so that the robot does not stand
+            # still for good.  The feed-forward has no say: it follows as the servos can.
             share = RETRY_SHARE / excess
             time_s *= share if attempt < 2 else min(share, 0.5)
         self.clamped = 0
         if excess > 1.0:
-            body.loaded_rad, self.clamped = clamp_steps(loaded, body.loaded_rad, steps_rad)
+            body.joints_rad, self.clamped = clamp_steps(joints, body.joints_rad, steps_rad)
         self.lead.advance(joints, body, time_s, steps_rad)
         share = self.slowdown = time_s / dt_s
         pace = self._pace.value
