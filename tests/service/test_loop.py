@@ -252,6 +252,35 @@ def test_a_short_hang_moves_nothing_on_and_does_not_snap() -> None:
     assert stage.machine.body.tick.pose[0] > before[0]
 
 
+def test_a_bus_that_takes_longer_than_a_tick_is_told_and_nothing_is_lost() -> None:
+    stage = Stage()
+    stage.walk()
+    assert stage.loop.waited == 0
+    advanced, odd = stage.bus.frames, [False]
+
+    def every_other(_: float) -> None:
+        odd[0] = not odd[0]
+        (stage.bus.hang if odd[0] else stage.bus.let_go)()
+
+    stage.loop._after_tick = (every_other,)
+    stage.run(1.0)
+    assert stage.loop.waited == pytest.approx(50, abs=1)
+    assert stage.bus.frames - advanced == pytest.approx(50, abs=1)
+    assert stage.machine.faults.is_latched("bus-behind")
+    stage.expect(State.WALKING)
+
+
+def test_a_tick_that_waits_now_and_then_is_no_fault() -> None:
+    stage = Stage()
+    stage.walk()
+    stage.loop._after_tick = (
+        lambda _: stage.bus.hang() if stage.loop.ticks % 50 == 0 else stage.bus.let_go(),
+    )
+    stage.run(20.0)
+    assert stage.loop.waited >= 39
+    assert stage.machine.faults.total("bus-behind") == 0
+
+
 def test_a_stop_is_carried_out_at_once_and_not_at_the_next_tick() -> None:
     stage = Stage()
     stage.walk()
@@ -481,7 +510,7 @@ def test_timing_is_published() -> None:
     stage.run(1.0)
     told = stage.machine.snapshot(stage.now_s)["timing"]
     assert told == {
-        "period_s": 0.01, "ticks": 100, "skipped": 0,
+        "period_s": 0.01, "ticks": 100, "skipped": 0, "waited": 0,
         "lateness_us": {"p50": 0.0, "p99": 0.0, "p999": 0.0, "max": 0.0},
     }  # fmt: skip
 

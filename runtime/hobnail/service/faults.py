@@ -59,6 +59,13 @@ KINDS: dict[str, Kind] = {
             "check cable length, pull-ups and the bus clock before it gets worse",
         ),
         Kind(
+            "bus-behind",
+            Severity.WARN,
+            Clears.QUIET,
+            "frames take longer to send than a tick lasts; motion waits and is slower than commanded",
+            "raise the bus clock, split the servos over two buses, or lengthen the period",
+        ),
+        Kind(
             "bus-error",
             Severity.CUT,
             Clears.RESET,

@@ -26,6 +26,7 @@ LONGEST_STEP = 2  # periods that one tick may stand for
 CHECK_EVERY_S = 0.4  # read-back of settings and supply: a brown-out shows within a second
 SET_UP_LIMIT_S = 5.0  # a set-up may take longer than a transfer before it counts as stalled
 YOUNG_EVERY_S, OLD_EVERY_S = 1.0, 60.0  # garbage collections, in idle time
+BEHIND = 5.0  # so many ticks more than one in ten had to wait for the bus: that is told
 ERRORS_IN_A_ROW = 10  # so many failed ticks, one after the other, end the service
 
 
@@ -45,7 +46,8 @@ class Server(Protocol):
 class Loop:
     """Calls the machine on time and carries its frames to the bus.
 
-    `lateness`, `ticks` and `skipped` are what `state` publishes as timing.
+    `lateness`, `ticks`, `skipped` and `waited` (ticks in which the last frame was
+    still on its way, so that nothing moved) are what `state` publishes as timing.
     """
 
     def __init__(
@@ -70,6 +72,8 @@ class Loop:
         self.lateness = Lateness()
         self.ticks = 0
         self.skipped = 0
+        self.waited = 0
+        self._behind = 0.0
         self._server = server
         self._clock = clock
         self._sleep = sleep
@@ -90,11 +94,12 @@ class Loop:
         machine.instruments["timing"] = self.timing
 
     def timing(self) -> dict[str, object]:
-        """Period, ticks done and skipped, and the lateness of those done."""
+        """Period, ticks done, skipped and waited, and the lateness of those done."""
         return {
             "period_s": self._period_s,
             "ticks": self.ticks,
             "skipped": self.skipped,
+            "waited": self.waited,
             "lateness_us": self.lateness.describe(),
         }
 
@@ -162,7 +167,17 @@ class Loop:
                 bus.release()
         elif not pending:
             bus.submit(frame.pulses_us)
+            self._behind = max(0.0, self._behind - 0.1)
+        else:
+            self._wait(now_s)
         return frame
+
+    def _wait(self, now_s: float) -> None:
+        self.waited += 1
+        self._behind += 1.0
+        if self._behind > BEHIND:
+            self._behind = 0.0
+            self.machine.report("bus-behind", now_s, f"{self.waited} ticks so far")
 
     def _judge_bus(self, now_s: float) -> None:
         machine, bus = self.machine, self.bus
