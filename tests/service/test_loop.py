@@ -393,13 +393,14 @@ def test_the_watchdog_is_fed_at_half_its_time_or_sooner_in_every_state() -> None
     assert stage.now_s - fed.times[-1] <= 1.0
 
 
-@pytest.mark.parametrize("state", ["off", "walking"])
+@pytest.mark.parametrize("state", ["off", "walking", "stopped"])
 def test_the_watchdog_is_not_fed_while_the_bus_hangs(state: str) -> None:
     stage, fed = watched()
-    if state == "walking":
+    if state != "off":
         stage.walk()
-    else:
-        stage.run(1.0)
+    if state == "stopped":
+        stage.ask("stop", category=0)
+    stage.run(1.0)
     stage.bus.hang()
     hung_s = stage.now_s
     stage.run(5.0)
