@@ -214,6 +214,18 @@ def test_each_stop_action_is_guarded_by_itself(monkeypatch: pytest.MonkeyPatch) 
     assert rig.machine.faults.is_latched("internal")
 
 
+def test_pulses_are_cut_even_when_telling_the_bus_fails() -> None:
+    rig = in_state("walking")
+
+    def broken() -> None:
+        raise OSError("planted")
+
+    rig.machine.on_cut = broken
+    rig.ask("stop", category=0)
+    assert rig.tick().release
+    assert rig.machine.faults.is_latched("internal")
+
+
 def test_zero_speed_within_the_time_to_live_plus_one_step() -> None:
     robot = juniper()
     rig = Rig(robot)

@@ -185,16 +185,10 @@ class Machine:
         elif category < self.stop_record.category:
             self.stop_record = self.stop_record.graver(category)
         self.goal = State.OFF
-        errors = run_each((self._halt, self.commander.drop, lambda: self._requests.streams.hold_all(now_s)))
-        if category == 1 and self.state in CARRYING:
-            lowered = run_each((lambda: self._crouch(now_s),))
-            errors += lowered
-            if not lowered:
-                self._enter(State.STOPPING, now_s)
-        elif category == 1 and self.state is State.WAKING and self.body.all_awake:
-            self._enter(State.STOPPING, now_s)  # goes on to the rest posture
-        if category == 0 or self.state is not State.STOPPING:
-            self._cut(now_s)
+        errors = self._cut(now_s) if category == 0 else []
+        errors += run_each((self._halt, self.commander.drop, lambda: self._requests.streams.hold_all(now_s)))
+        if category == 1:
+            errors += self._stop_in_control(now_s)
         for error in errors:
             self.faults.report("internal", now_s, f"while stopping: {error!r}")
 
@@ -342,17 +336,30 @@ class Machine:
         if self.state in ON_FEET:
             self.controller.stand()
 
+    def _stop_in_control(self, now_s: float) -> list[Exception]:
+        """Begin to lie down where there is something to lower; else, or failing that, cut."""
+        if self.state is State.STOPPING:
+            return []
+        errors: list[Exception] = []
+        if self.state in CARRYING:
+            errors = run_each((lambda: self._crouch(now_s),))
+        if not errors and (self.state in CARRYING or (self.state is State.WAKING and self.body.all_awake)):
+            self._enter(State.STOPPING, now_s)  # joints that are awake go on to the rest posture
+            return []
+        return errors + self._cut(now_s)
+
     def _crouch(self, now_s: float) -> None:
         """Plant the feet and be down just before the pulses are cut."""
         assert self.stop_record is not None
         spare_s = 3.0 * self.robot.period_s
         self.controller.lower(within_s=max(spare_s, self.stop_record.until_s - now_s - spare_s))
 
-    def _cut(self, now_s: float) -> None:
-        if self.on_cut is not None:
-            self.on_cut()
+    def _cut(self, now_s: float) -> list[Exception]:
+        """No pulse any more, and latched."""
+        errors = run_each((self.on_cut,)) if self.on_cut is not None else []
         self._enter(State.STOPPED, now_s)
         self.body.sleep()
+        return errors
 
     def _enter(self, state: State, now_s: float) -> None:
         if state not in TRANSITIONS[self.state]:
