@@ -39,7 +39,7 @@ def configure(parser: Parser) -> None:
         "--state-dir",
         metavar="DIR",
         default=_first(os.environ.get("STATE_DIRECTORY")),
-        help="keep the last minute and the last posture here (default: $STATE_DIRECTORY, else the socket's)",
+        help="keep the last posture and recordings of stops here, over a reboot (default: $STATE_DIRECTORY)",
     )
     parser.add_argument(
         "--log-dir",
