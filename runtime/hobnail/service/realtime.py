@@ -15,6 +15,7 @@ from hobnail.service.bus import BUS_THREAD
 
 FIFO_PRIORITY = 40  # above every ordinary process, below the kernel's interrupt threads at 50
 SWITCH_S = 0.0005  # how long another thread may compute before the loop gets its turn
+USUAL_SWITCH_S = 0.005  # Python's own
 _MCL_CURRENT, _MCL_FUTURE = 1, 2
 
 
@@ -28,6 +29,7 @@ def quiet_collector() -> None:
 
 def usual_collector() -> None:
     """Undo `quiet_collector`."""
+    sys.setswitchinterval(USUAL_SWITCH_S)
     gc.enable()
     gc.unfreeze()
 

@@ -121,8 +121,7 @@ class Attendant:
         """Let the display show the end."""
         if self._show is not None and self._display is not None:
             show, last = self._show, self.machine.snapshot(self._now_s)
-            self._display.put(lambda: show(last))
-            self._display.close(CLOSE_S)
+            self._display.close(CLOSE_S, lambda: show(last))
 
 
 def run(

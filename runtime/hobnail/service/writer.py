@@ -41,8 +41,11 @@ class Writer:
         self._jobs.put(job)
         return True
 
-    def close(self, timeout_s: float) -> bool:
-        """Run what is left and end the thread; False when a job hangs."""
+    def close(self, timeout_s: float, last: Job | None = None) -> bool:
+        """Run what is left, and `last` however full the queue is; end the thread.  False when
+        a job hangs."""
+        if last is not None:
+            self._jobs.put(last)
         self._jobs.put(None)
         self._thread.join(timeout_s)
         return not self._thread.is_alive()
