@@ -28,7 +28,7 @@ def drawn(
 ) -> Recording:
     """A perfect trot of 0.4 s with the velocity `done`, recorded where `asked` was commanded."""
     robot = burdock()
-    t = np.arange(ticks) * DT
+    t = np.arange(ticks, dtype=np.float64) * DT
     pose = np.zeros((ticks, 3))
     for k in range(ticks):
         moved = expm(t[k] * np.array([[0, -done[2], done[0]], [done[2], 0, done[1]], [0, 0, 0]], dtype=float))
@@ -128,6 +128,12 @@ def test_a_veering_walk_drifts_by_the_metre() -> None:
     result = measure(drawn((0.2, 0.0, 0.0), (0.2, 0.0, 0.007)))
     assert result.drift_rad_m == pytest.approx(0.007 / 0.2)
     assert [failure for failure in result.failures() if "drift" in failure]
+
+
+def test_drift_over_less_than_a_metre_is_chance() -> None:
+    short = measure(drawn((0.1, 0.0, 0.0), (0.1, 0.0, 0.01)))
+    assert short.drift_rad_m == pytest.approx(0.1)
+    assert short.failures() == []
 
 
 def test_straightness_is_asked_of_straight_walks_only() -> None:

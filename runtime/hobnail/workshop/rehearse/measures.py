@@ -52,6 +52,11 @@ class Stretch:
     sideways_m_m: float
 
     @property
+    def way_m(self) -> float:
+        """Way at the commanded speed."""
+        return math.hypot(*self.commanded[:2]) * (self.end_s - self.start_s)
+
+    @property
     def speed_error_m_s(self) -> float:
         """Length of the difference of the velocity vectors."""
         return math.hypot(self.true[0] - self.commanded[0], self.true[1] - self.commanded[1])
@@ -147,7 +152,7 @@ class Result:
                     f"turn rate is {s.true[2]:.3f} rad/s for a command of {s.commanded[2]:.3f} rad/s; "
                     f"allowed: off by {allowed:.3f} rad/s"
                 )
-            if abs(s.drift_rad_m) > limits.drift_rad_m:
+            if abs(s.drift_rad_m) > limits.drift_rad_m and s.way_m >= limits.drift_way_m:
                 told.append(
                     f"heading drifts {math.degrees(s.drift_rad_m):.2f} deg a metre; "
                     f"allowed: {math.degrees(limits.drift_rad_m):.2f}"

@@ -24,6 +24,8 @@ from hobnail.workshop.rehearse.limits import Limits
 
 SETTLE_S = 0.5  # stands before the first command
 LEAST_WALK_S = 5.0
+LONGEST_WALK_S = 15.0
+LEAST_WAY_M = 1.5  # of a straight walk, so that its drift a metre can be told from chance
 LEAST_CYCLES = 5  # of the slowest cycle that a gait allows: what a measured stretch holds at least
 LIMITS = Limits()
 # What is asked of gaits that a robot was not tuned for.
@@ -117,7 +119,11 @@ def walking(
     about: str = "one velocity, then stand",
 ) -> Scenario:
     """Stand, walk with one velocity for `duration_s` (None: long enough to measure), stand."""
-    long_s = _walk_s(robot, gait) if duration_s is None else duration_s
+    long_s = duration_s
+    if long_s is None:
+        long_s = _walk_s(robot, gait)
+        if vx and not (vy or yaw_rate):
+            long_s = max(long_s, min(2.0 + LEAST_WAY_M / abs(vx), LONGEST_WALK_S))
     return Scenario(
         name=name,
         about=about,

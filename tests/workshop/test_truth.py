@@ -1,0 +1,149 @@
+"""How truly robots walk in physics, over their certified envelopes; each prints its table.
+
+juniper is asked for what a technician may ask: speed and turn rate within 5 % of the
+command (or 5 mm/s and 0.02 rad/s, where those are larger), straight within 1 degree
+a metre, tilt at most 3 degrees for 95 % of the time, no fall.  The made-up robots
+are asked for nearly that.
+"""
+
+from __future__ import annotations
+
+import math
+from pathlib import Path
+
+import pytest
+
+from hobnail import load_robot
+from hobnail.robot import Robot, Vec3
+from hobnail.workshop.rehearse import Limits, Result, rehearse, walking
+from workshop.machines import burdock, thistle
+
+CONFIG = Path(__file__).parents[2] / "config"
+LIMITS = Limits()
+
+# Shares of the envelope's axes.
+AXES: tuple[Vec3, ...] = (
+    (0.08, 0.0, 0.0),
+    (0.5, 0.0, 0.0),
+    (1.0, 0.0, 0.0),
+    (-0.5, 0.0, 0.0),
+    (-1.0, 0.0, 0.0),
+    (0.0, 0.5, 0.0),
+    (0.0, 1.0, 0.0),
+    (0.0, -1.0, 0.0),
+    (0.0, 0.0, 0.5),
+    (0.0, 0.0, 1.0),
+    (0.0, 0.0, -1.0),
+)
+MIXED: tuple[Vec3, ...] = (
+    (0.7, 0.7, 0.0),
+    (0.7, 0.0, 0.7),
+    (-0.7, 0.0, 0.7),
+    (0.0, 0.7, 0.7),
+    (0.57, 0.57, 0.57),
+    (0.57, -0.57, 0.57),
+)
+
+
+def command_of(robot: Robot, share: Vec3) -> Vec3:
+    envelope = robot.envelope
+    return (
+        share[0] * envelope.forward_m_s,
+        share[1] * envelope.sideways_m_s,
+        share[2] * envelope.turn_rad_s,
+    )
+
+
+def misses(result: Result) -> dict[str, float]:
+    """Each measure as a multiple of what is allowed."""
+    (stretch,) = result.stretches
+    speed = math.hypot(*stretch.commanded[:2])
+    return {
+        "speed": stretch.speed_error_m_s / max(LIMITS.error_share * speed, LIMITS.speed_error_m_s),
+        "turn": abs(stretch.turn_error_rad_s)
+        / max(LIMITS.error_share * abs(stretch.commanded[2]), LIMITS.turn_error_rad_s),
+        "drift": abs(stretch.drift_rad_m) / LIMITS.drift_rad_m
+        if stretch.way_m >= LIMITS.drift_way_m
+        else 0.0,
+        "tilt": result.tilt_95_rad / LIMITS.tilt_rad,
+    }
+
+
+def walked(robot: Robot, share: Vec3) -> dict[str, float]:
+    vx, vy, yaw_rate = command_of(robot, share)
+    result = rehearse(robot, walking(robot, vx, vy, yaw_rate))
+    assert not result.fell, result.why_fell
+    assert result.clamped == 0
+    found = misses(result)
+    told = "  ".join(f"{name} {value:.2f}" for name, value in found.items())
+    print(
+        f"truth: {robot.name} ({vx:+.3f}, {vy:+.3f} m/s, {yaw_rate:+.2f} rad/s), of what is allowed: {told}"
+    )
+    return found
+
+
+@pytest.mark.parametrize("share", AXES, ids=str)
+def test_juniper_is_true_along_the_axes(share: Vec3) -> None:
+    found = walked(load_robot(CONFIG / "juniper.yaml"), share)
+    assert max(found.values()) <= 1.0, found
+
+
+# Known to be less true than it should: walking diagonally juniper turns by up to 0.03 rad/s
+# without being asked to, and that adds to the turn when it does both.
+DIAGONAL_TURN = 2.0
+
+
+@pytest.mark.parametrize("share", MIXED, ids=str)
+def test_juniper_is_true_where_axes_mix(share: Vec3) -> None:
+    found = walked(load_robot(CONFIG / "juniper.yaml"), share)
+    turn = found.pop("turn")
+    assert max(found.values()) <= 1.1, found
+    assert turn <= (DIAGONAL_TURN if share[0] and share[1] else 1.0)
+
+
+@pytest.mark.parametrize("robot", [thistle(), burdock()], ids=lambda robot: robot.name)
+def test_made_up_robots_are_nearly_as_true(robot: Robot) -> None:
+    """Tilt and fall as for juniper; speed and turn within twice of what juniper is allowed, on
+    average well within it."""
+    found = [walked(robot, share) for share in AXES + MIXED]
+    for name in ("speed", "turn"):
+        values = [each[name] for each in found]
+        assert max(values) <= 2.1, name
+        assert sum(values) / len(values) <= 0.75, name
+    assert max(each["tilt"] for each in found) <= 1.0
+    assert sum(each["drift"] for each in found[:5]) / 5 <= 1.5
+
+
+def test_bramble_is_true_and_level() -> None:
+    robot = load_robot(CONFIG / "bramble.yaml")
+    for share in (AXES[1], AXES[4], AXES[6], AXES[9], MIXED[4]):
+        found = walked(robot, share)
+        assert max(found.values()) <= 1.1, found
+
+
+@pytest.mark.parametrize(
+    "errors",
+    [
+        {"zero_error_rad": math.radians(1.5), "seed": 1},
+        {"length_error_m": 0.002, "seed": 1},
+        {"battery_shift_m": (0.01, 0.005, 0.0)},
+        {"slope_rad": math.radians(3.0)},
+        {"slope_rad": math.radians(-3.0)},
+        {"friction": 0.3},
+        {"roughness_m": 0.006, "seed": 1},
+        {"weak_servo": 0.8},
+        {"lost_frames": 0.05, "seed": 1},
+        {"push_ns": (0.0, 1.0), "push_at_s": 2.0},
+        {"supply_v": 5.4},
+        {"supply_ohm": 0.2},
+    ],
+    ids=lambda errors: next(iter(errors)),
+)
+def test_juniper_takes_each_error_without_a_fall_and_within_ten_per_cent(errors: dict[str, object]) -> None:
+    """How much more it takes is printed by tests/benchmarks/rehearse_robustness.py."""
+    robot = load_robot(CONFIG / "juniper.yaml")
+    result = rehearse(robot, walking(robot, 0.15), **errors)
+    assert not result.fell, result.why_fell
+    assert result.faults == ()
+    assert result.speed_error <= 0.10
+    assert result.turn_error <= 0.20
