@@ -90,6 +90,24 @@ def hangs(state: str) -> str:
         return f"told after {took_s:.2f} s, stopped; no pulse once the bus let go"
 
 
+def slow(state: str) -> str:
+    """Every transfer takes longer than a tick."""
+    with robot_in(state) as world:
+        world.plan.call_next(lambda: world.clock.sleep(1.3 * world.robot.period_s), count=None)
+        took_s = _until_told(world, "bus-behind")
+        expect_fault(world, "bus-behind", cause=False)
+        world.run(0.5)  # frames are late, but each within the limits of one tick
+        if state != "stopping":
+            assert world.state != "stopped", "a slow bus must not stop the robot"
+        world.ask("stop", category=0)
+        world.run(5 * world.robot.period_s)  # the transfer under way, and the one that ends the pulses
+        silent(world, 0.2)
+        world.plan.clear()
+        prove_latched(world)
+        end(world)
+        return f"told after {took_s:.2f} s; slower, within limits; a stop within two transfers"
+
+
 def hung(state: str) -> str:
     """A transfer never comes back: the watchdog must not be fed any more."""
     with robot_in(state) as world:

@@ -24,6 +24,7 @@ from hobnail.service.faults import KINDS
 EFFECTS = {
     "commander-lost": "hold",
     "bus-retried": "warn",
+    "bus-behind": "warn",
     "bus-error": "cut",
     "bus-stalled": "cut",
     "settings-lost": "cut",

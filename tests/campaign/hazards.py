@@ -63,6 +63,7 @@ HAZARDS = (
     ),
     Hazard("bus-wedged", "the bus is wedged (errno 110)", partial(bus_hazards.gone, errno.ETIMEDOUT)),
     Hazard("bus-flaky", "a transfer fails now and then and ends the run", bus_hazards.flaky),
+    Hazard("bus-slow", "frames take longer to send than a tick lasts", bus_hazards.slow, NO_PULSES),
     Hazard("bus-hangs", "a transfer hangs for a second", bus_hazards.hangs),
     Hazard("brown-out", "the board loses its settings as the supply sags", bus_hazards.brown_out),
     Hazard("supply-low", "the battery runs low", motion_hazards.supply_low),

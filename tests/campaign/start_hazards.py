@@ -164,8 +164,8 @@ def program_killed(state: str) -> str:
         try:
             with Client(directory / "h.sock") as client:
                 _lead(client, state)
-                if state == "stopped":  # told at once; the pulses end within the next transfer
-                    _until(lambda: _pulses(directory) == 0, "pulses end")
+                # The state is told at once; pulses follow it within the next transfer.
+                _until(lambda: (_pulses(directory) > 0) == (state in PULSING), "pulses as they should be")
                 service.kill()
                 service.wait(PATIENCE_S)
             left = _pulses(directory)
