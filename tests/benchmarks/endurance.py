@@ -1,13 +1,14 @@
-"""A long walk of the whole service in real time: memory must stay flat, and no tick be lost that the
-machine did not take.
+"""A long walk of the whole service: memory must stay flat, and no tick be lost that the machine did not take.
 
-Prints a line each tenth of the time.  Ticks lost are compared with those that an idle
-process of the same policy loses beside it: a sleeper of the same period.
-Run: python tests/benchmarks/endurance.py [SECONDS] [DRIVER]
+In real time: a line each tenth of the time; beside it runs an idle sleeper of the
+same period and policy, whose lost ticks are those that the machine took.
+With `simulated`: machine, loop and recorder on a clock that does not wait.
+Run: python tests/benchmarks/endurance.py SECONDS [other|fifo|simulated] [DRIVER]
 """
 
 from __future__ import annotations
 
+import os
 import signal
 import subprocess
 import sys
@@ -15,7 +16,11 @@ import tempfile
 import time
 from pathlib import Path
 
-from hobnail import Client
+from hobnail import Client, load_robot
+from hobnail.service.machine import Machine
+from hobnail.service.realtime import FIFO_PRIORITY
+from hobnail.service.recorder import Recorder
+from hobnail.service.states import ON_FEET
 
 CONFIG = Path(__file__).parents[2] / "config" / "juniper.yaml"
 
@@ -42,14 +47,15 @@ def resident_kb(pid: int) -> int:
     return int(status.split("VmRSS:")[1].split()[0])
 
 
-def main() -> None:
+def in_real_time(seconds: float, policy: str, driver: str) -> None:
     """Walk, turn and change gait in turns; print memory and ticks."""
-    seconds = float(sys.argv[1]) if len(sys.argv) > 1 else 600.0
-    driver = sys.argv[2] if len(sys.argv) > 2 else "chip-model"
     with tempfile.TemporaryDirectory(dir="/dev/shm") as folder:
         path = Path(folder) / "hobnail.sock"
         command = [sys.executable, "-m", "hobnail.cli.main", "run", str(CONFIG), "--plain"]
         command += ["--driver", driver, "--socket", str(path), "--log-dir", f"{folder}/log"]
+        command += ["--realtime"] if policy == "fifo" else []
+        before = ["chrt", "-f", str(FIFO_PRIORITY)] if policy == "fifo" else []
+        sleeper = [*before, sys.executable, "-c", SLEEPER, "0.01", str(seconds)]
         with subprocess.Popen(command, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL) as process:
             while not path.exists():
                 time.sleep(0.05)
@@ -59,26 +65,65 @@ def main() -> None:
                     time.sleep(0.1)
                 gaits = client.describe()["gaits"]
                 assert isinstance(gaits, list)
-                sleeper = subprocess.Popen(
-                    [sys.executable, "-c", SLEEPER, "0.01", str(seconds)], stdout=subprocess.PIPE, text=True
-                )
-                began_s = time.monotonic()
-                shown = 0
-                print("      s   resident kB   ticks   skipped   waited   p99.9 us")
-                while (now_s := time.monotonic() - began_s) < seconds:
-                    if now_s >= shown * seconds / 10:
-                        shown += 1
-                        show(client, process.pid, now_s)
-                    if int(now_s) % 20 == 0:
-                        gait = gaits[int(now_s / 20) % len(gaits)]
-                        client.gait(gait if isinstance(gait, str) else gait["name"])
-                    client.walk(0.15 if int(now_s / 10) % 2 else -0.1, 0.0, 0.3, ttl_s=1.0)
-                    time.sleep(0.05)
-                show(client, process.pid, seconds)
-                lost, _ = sleeper.communicate()
-                print(f"an idle sleeper of the same period lost {lost.strip()} ticks meanwhile")
+                with subprocess.Popen(sleeper, stdout=subprocess.PIPE, text=True) as beside:
+                    walk_about(client, process.pid, seconds, [str(gait) for gait in gaits])
+                    lost, _ = beside.communicate()
+                print(f"an idle sleeper of the same period and policy lost {lost.strip()} ticks meanwhile")
             process.send_signal(signal.SIGTERM)
         print(f"exit code {process.returncode}")
+
+
+def walk_about(client: Client, pid: int, seconds: float, gaits: list[str]) -> None:
+    """Forward and back in curves, another gait every 20 s."""
+    began_s, shown = time.monotonic(), 0
+    print("      s   resident kB   ticks   skipped   waited   p99.9 us")
+    while (now_s := time.monotonic() - began_s) < seconds:
+        if now_s >= shown * seconds / 10:
+            shown += 1
+            show(client, pid, now_s)
+        if int(now_s) % 20 == 0:
+            client.gait(gaits[int(now_s / 20) % len(gaits)])
+        client.walk(0.15 if int(now_s / 10) % 2 else -0.1, 0.0, 0.3, ttl_s=1.0)
+        time.sleep(0.05)
+    show(client, pid, seconds)
+
+
+def simulated(seconds: float) -> None:
+    """The machine and its recorder, tick by tick, as fast as it goes."""
+    robot = load_robot(CONFIG)
+    dt_s, now_s = robot.period_s, 0.0
+    machine = Machine(robot, now_s=now_s)
+    machine.request("stand", {}, 1, now_s)
+    ticks, began_s = round(seconds / dt_s), time.perf_counter()
+    print("      s   resident kB   states")
+    with tempfile.TemporaryDirectory(dir="/dev/shm") as folder:
+        recorder = Recorder(Path(folder), robot)
+        for k in range(ticks + 1):
+            if k % max(1, ticks // 10) == 0:
+                print(f"{now_s:7.0f} {resident_kb(os.getpid()):13d}   {machine.state}", flush=True)
+            now_s += dt_s
+            if k % 10 == 0 and machine.state in ON_FEET:
+                vx = 0.15 if k // 1000 % 2 else -0.1
+                machine.request("walk", {"vx": vx, "yaw_rate": 0.3}, 1, now_s)
+            if k % 2000 == 0 and machine.state in ON_FEET:
+                machine.request("gait", {"name": robot.gaits[k // 2000 % len(robot.gaits)].name}, 1, now_s)
+            frame = machine.tick(now_s, dt_s)
+            if not frame.release:
+                faults = machine.faults.names()
+                recorder.row(frame, now_s, dt_s, 0.0, machine.command, machine.body.supply_v, faults)
+            machine.faults.drain()
+        recorder.close()
+    took_s = time.perf_counter() - began_s
+    print(f"{seconds / took_s:.0f} times real time; clamped {machine.counters['clamped']}")
+
+
+def main() -> None:
+    """Choose by the arguments."""
+    words = [*sys.argv[1:], *["600", "other", "chip-model"][len(sys.argv) - 1 :]]
+    if words[1] == "simulated":
+        simulated(float(words[0]))
+    else:
+        in_real_time(float(words[0]), words[1], words[2])
 
 
 def show(client: Client, pid: int, now_s: float) -> None:

@@ -360,6 +360,25 @@ def test_an_error_in_every_tick_ends_the_run(monkeypatch: pytest.MonkeyPatch) ->
     stage.expect_no_pulses()
 
 
+def test_an_error_of_the_socket_cuts_and_one_that_stays_ends_the_run() -> None:
+    stage = Stage()
+    stage.walk()
+
+    def broken() -> None:
+        raise ZeroDivisionError("planted")
+
+    stage.at(stage.now_s - stage.start_s + 0.1, broken)
+    stage.run(0.5)
+    stage.expect(State.STOPPED)
+    stage.expect_no_pulses()
+    ticks = stage.loop.ticks
+    for k in range(100):
+        stage.at(stage.now_s - stage.start_s + 0.01 * k, broken)
+    with pytest.raises(ZeroDivisionError):
+        stage.run(1.0)
+    assert stage.loop.ticks - ticks < 30
+
+
 class Fed(Notifier):
     """Keeps when the watchdog was fed."""
 

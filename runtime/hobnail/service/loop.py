@@ -27,7 +27,7 @@ CHECK_EVERY_S = 0.4  # read-back of settings and supply: a brown-out shows withi
 SET_UP_LIMIT_S = 5.0  # a set-up may take longer than a transfer before it counts as stalled
 YOUNG_EVERY_S, OLD_EVERY_S = 1.0, 60.0  # garbage collections, in idle time
 BEHIND = 5.0  # so many ticks more than one in ten had to wait for the bus: that is told
-ERRORS_IN_A_ROW = 10  # so many failed ticks, one after the other, end the service
+ERRORS_AT_ONCE = 10.0  # so many errors, each tick without one taking half of one back, end the service
 
 
 class Server(Protocol):
@@ -87,7 +87,7 @@ class Loop:
         self._period_s = machine.robot.period_s
         self._setups = machine.setups
         self._state = machine.state
-        self._errors = 0
+        self._errors = 0.0
         self._checked_s = self._young_s = self._old_s = clock()
         self._fed_s = -1e9
         machine.on_cut = bus.release
@@ -110,7 +110,10 @@ class Loop:
         k = 1
         while True:
             deadline_s = start_s + k * period_s
-            self._server.serve(deadline_s - SPARE_S)
+            try:
+                self._server.serve(deadline_s - SPARE_S)
+            except Exception as error:  # noqa: BLE001 -- told, and counted: see below
+                self._failed(error, clock())
             left_s = deadline_s - clock()
             if left_s > 0.0:
                 self._sleep(left_s)
@@ -134,18 +137,22 @@ class Loop:
             frame = self._carry(now_s, dt_s)
             self._keep(frame, now_s, dt_s, late_s)
             self._housekeep(frame, now_s)
-            self._errors = 0
-        except Exception as error:
-            self._errors += 1
-            self.bus.release()
-            if self._errors >= ERRORS_IN_A_ROW:
-                raise
-            machine.report("internal", now_s, repr(error))
-            if self._log is not None and self._errors == 1:
-                import traceback  # seldom needed
-
-                self._log.event("error", traceback.format_exc(), now_s)
+            self._errors = max(0.0, self._errors - 0.5)
+        except Exception as error:  # noqa: BLE001 -- told, and counted: see below
+            self._failed(error, now_s)
         self.ticks += 1
+
+    def _failed(self, error: Exception, now_s: float) -> None:
+        """An error of our own: cut the pulses and tell; raise it when there are too many."""
+        self.bus.release()
+        self._errors += 1.0
+        if self._errors >= ERRORS_AT_ONCE:
+            raise error
+        self.machine.report("internal", now_s, repr(error))
+        if self._log is not None and self._errors <= 1.0:
+            import traceback  # seldom needed
+
+            self._log.event("error", "".join(traceback.format_exception(error)), now_s)
 
     def _carry(self, now_s: float, dt_s: float) -> Frame:
         """Faults in, frame out."""
