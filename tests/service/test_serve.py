@@ -217,6 +217,23 @@ def test_inputs_of_a_model_are_not_looked_for_and_that_is_said(
     assert "not watched" in capsys.readouterr().err
 
 
+@pytest.mark.usefixtures("plan")
+def test_a_client_that_sends_garbage_all_day_does_not_fill_the_log(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    with serve.Running(
+        quick(juniper()), "simulated", tmp_path / "s", None, tmp_path / "log", None
+    ) as running:
+        for _ in range(10_000):
+            running._client_event("garbage", 1)
+        running._client_event("dropped", 1)
+    lines = [line for line in (tmp_path / "log" / LOG_NAME).read_text().splitlines() if "client 1" in line]
+    assert 2 <= len(lines) <= 20
+    assert "dropped" in lines[-1]
+    assert "repeated 10000 times" in lines[-2]
+    assert "client 1: garbage" in capsys.readouterr().err
+
+
 # A process of its own
 
 PROGRAM = """

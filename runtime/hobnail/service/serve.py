@@ -26,7 +26,7 @@ from hobnail.service.archive import load_posture
 from hobnail.service.bus import Bus
 from hobnail.service.drivers import open_contact, open_driver, open_monitor
 from hobnail.service.errand import Errand
-from hobnail.service.faults import run_each
+from hobnail.service.faults import Thinner, run_each
 from hobnail.service.keeper import Keeper
 from hobnail.service.loop import Loop
 from hobnail.service.machine import Machine
@@ -173,6 +173,7 @@ class Running:
         self._state_dir = state_dir
         self._log_dir = log_dir
         self._group = group
+        self._thinner = Thinner()
         self._closers: list[Callable[[], object]] = []
         self._end_pulses: Callable[[], object] = lambda: None
 
@@ -224,7 +225,7 @@ class Running:
             group=self._group,
             on_event=self._client_event,
             on_gone=lambda client: self.machine.client_gone(client, time.monotonic()),
-            on_error=lambda where, error: self.log.event("error", f"{where}: {error!r}", time.monotonic()),
+            on_error=lambda where, error: self._tell("error", where, f"{where}: {error!r}"),
         )
         self.server.open()
         self._closers.append(self.server.close)
@@ -293,12 +294,18 @@ class Running:
             "frames": self.bus.frames,
         }
 
-    def _client_event(self, name: str, client_id: int) -> None:
+    def _tell(self, kind: str, key: str, text: str) -> None:
+        """A log line, unless there were many of that key: clients can make as many as they like."""
         now_s = time.monotonic()
+        line = self._thinner.line(key, text, now_s)
+        if line is not None:
+            self.log.event(kind, line, now_s)
+
+    def _client_event(self, name: str, client_id: int) -> None:
         if name == "flood":
-            self.machine.report("client-flood", now_s, f"client {client_id}")
+            self.machine.report("client-flood", time.monotonic(), f"client {client_id}")
         else:
-            self.log.event("client", f"client {client_id}: {name}", now_s)
+            self._tell("client", name, f"client {client_id}: {name}")
 
     def _close_bus(self) -> None:
         if not self.bus.close(CLOSE_S):
