@@ -94,14 +94,14 @@ def _rested(world: World, state: str, name: str) -> None:
 def _stopped(world: World, state: str, name: str) -> None:
     world.loop.run(lambda: world.state == "stopped" or world.clock.now_s > 1100.0)
     expect_stopped(world, state, name)
-    prove_latched(world)
 
 
 def _cut(world: World, state: str, name: str) -> None:
     world.run(world.robot.period_s)
     assert world.witness.all_full_off(), f"pulses go on after {name}"
     expect_stopped(world, state, name)
-    prove_latched(world)
+    if name == "internal":  # the others have rows of their own, with their true causes
+        prove_latched(world)
 
 
 _JUDGES = {"hold": _held, "rest": _rested, "stop": _stopped, "cut": _cut}
