@@ -103,25 +103,41 @@ def _integrals(k: int, start: float, length: float) -> tuple[complex, complex]:
     return still, (still - length * last) / turn
 
 
-SwayState = tuple[Vec2, Vec2, Vec2, tuple[Motion, Motion], float]
+Ease = tuple[Motion, Motion]
+SwayState = tuple[Vec2, Vec2, Vec2, Ease, float, Ease, float]
 
 
 class BodyShift:
     """The shift that the body has: that of its plan, eased over when the plan changes.
 
     `plan` None is standing: no shift.  `value` is the shift (m), `acceleration` its
-    second derivative (m/s^2), along the body's x and y.
+    second derivative (m/s^2), along the body's x and y.  The way to the new plan takes the
+    time given; the old speed is taken off in the time of the old plan, so that the body
+    cannot run far in a gait that is slower than the one before.
     """
 
-    __slots__ = ("_ease", "_left_s", "_speed", "acceleration", "plan", "value")
+    __slots__ = (
+        "_ease",
+        "_left_s",
+        "_old",
+        "_old_left_s",
+        "_speed",
+        "_within_s",
+        "acceleration",
+        "plan",
+        "value",
+    )
 
     def __init__(self) -> None:
         self.plan: PeriodicSway | None = None
         self.value = NONE
         self.acceleration = NONE
         self._speed = NONE
-        self._ease: tuple[Motion, Motion] = (AT_REST, AT_REST)
+        self._ease: Ease = (AT_REST, AT_REST)
         self._left_s = 0.0
+        self._old: Ease = (AT_REST, AT_REST)
+        self._old_left_s = 0.0
+        self._within_s = math.inf
 
     @property
     def moving(self) -> bool:
@@ -134,22 +150,26 @@ class BodyShift:
         now = self._planned(clock, pace)
         soon = self._planned(clock + pace[3] * INSTANT_S, pace)
         (x, y), (vx, vy) = self.value, self._speed
-        self._ease = (
-            (x - now[0], vx - (soon[0] - now[0]) / INSTANT_S, 0.0),
-            (y - now[1], vy - (soon[1] - now[1]) / INSTANT_S, 0.0),
+        self._ease = ((x - now[0], 0.0, 0.0), (y - now[1], 0.0, 0.0))
+        self._old = (
+            (0.0, vx - (soon[0] - now[0]) / INSTANT_S, 0.0),
+            (0.0, vy - (soon[1] - now[1]) / INSTANT_S, 0.0),
         )
-        self._left_s = within_s if self._ease != (AT_REST, AT_REST) else 0.0
+        self._left_s = within_s if self._ease + self._old != (AT_REST,) * 4 else 0.0
+        self._old_left_s = min(self._left_s, self._within_s)
+        self._within_s = within_s
 
     def advance(self, time_s: float, clock: float, pace: Sequence[float]) -> None:
         """Move on by `time_s`, at the end of which the gait clock is at `clock`."""
         x, y, ax, ay = self._planned(clock, pace)
         left = self._left_s
         if left > 0.0:
-            ease_x, ease_y = self._ease
-            self._ease = (settle(ease_x, time_s, left), settle(ease_y, time_s, left))
+            self._ease = _settled(self._ease, time_s, left)
+            self._old = _settled(self._old, time_s, self._old_left_s)
             self._left_s = max(left - time_s, 0.0)
-            (off_x, _, bend_x), (off_y, _, bend_y) = self._ease
-            x, y, ax, ay = x + off_x, y + off_y, ax + bend_x, ay + bend_y
+            self._old_left_s -= time_s
+            for (off_x, _, bend_x), (off_y, _, bend_y) in (self._ease, self._old):
+                x, y, ax, ay = x + off_x, y + off_y, ax + bend_x, ay + bend_y
         if time_s > 0.0:
             self._speed = ((x - self.value[0]) / time_s, (y - self.value[1]) / time_s)
         self.value = (x, y)
@@ -160,8 +180,28 @@ class BodyShift:
 
     def state(self) -> SwayState:
         """A snapshot for `restore`; the plan is not part of it."""
-        return self.value, self.acceleration, self._speed, self._ease, self._left_s
+        return (
+            self.value,
+            self.acceleration,
+            self._speed,
+            self._ease,
+            self._left_s,
+            self._old,
+            self._old_left_s,
+        )
 
     def restore(self, state: SwayState) -> None:
         """Go back to a snapshot."""
-        self.value, self.acceleration, self._speed, self._ease, self._left_s = state
+        (
+            self.value,
+            self.acceleration,
+            self._speed,
+            self._ease,
+            self._left_s,
+            self._old,
+            self._old_left_s,
+        ) = state
+
+
+def _settled(ease: Ease, time_s: float, left_s: float) -> Ease:
+    return settle(ease[0], time_s, left_s), settle(ease[1], time_s, left_s)
