@@ -1,11 +1,11 @@
 """Wake-up lateness of the running loop beside `cyclictest` (Debian's rt-tests), in turns, in one run.
 
-The robot walks, on the simulated driver.  Cases: alone; while one client sends
+The robot walks.  Cases: alone; while one client sends
 2000 requests a second and another never reads its watch.  Policy `other` needs no
 rights; `fifo` does.  Target: p99.9 at most 3 times that of cyclictest at the same rate and
 policy.  Both are measured in slices that take turns, so that what else the machine
 does falls on both alike.
-Run: python tests/benchmarks/loop_lateness.py [SECONDS] [other|fifo]
+Run: python tests/benchmarks/loop_lateness.py [SECONDS] [other|fifo] [simulated|chip-model]
 """
 
 from __future__ import annotations
@@ -42,7 +42,8 @@ late = []
 add = timing.Lateness.add
 timing.Lateness.add = lambda self, late_s: (late.append(late_s), add(self, late_s))[1]
 from hobnail.service.serve import run
-code = run(load_robot(sys.argv[1]), socket_path=Path(sys.argv[2]), realtime=sys.argv[3] == "fifo")
+robot, path, realtime = load_robot(sys.argv[1]), Path(sys.argv[2]), sys.argv[3] == "fifo"
+code = run(robot, driver=sys.argv[5], socket_path=path, realtime=realtime)
 Path(sys.argv[4]).write_text(json.dumps(late))
 sys.exit(code)
 """
@@ -107,11 +108,13 @@ def disturbed(path: Path, disturbing: bool) -> Iterator[None]:
             thread.join()
 
 
-def service(seconds: float, policy: str, disturbing: bool) -> tuple[list[float], dict[str, object]]:
+def service(
+    seconds: float, policy: str, driver: str, disturbing: bool
+) -> tuple[list[float], dict[str, object]]:
     """Lateness of every tick while the robot walked, us; and what `state` told at the end."""
     with tempfile.TemporaryDirectory(dir="/dev/shm") as folder:
         path, out = Path(folder) / "hobnail.sock", Path(folder) / "late.json"
-        command = [sys.executable, "-c", PROGRAM, str(CONFIG), str(path), policy, str(out)]
+        command = [sys.executable, "-c", PROGRAM, str(CONFIG), str(path), policy, str(out), driver]
         with subprocess.Popen(command, stderr=subprocess.DEVNULL) as process:
             while not path.exists():
                 time.sleep(0.05)
@@ -148,6 +151,7 @@ def main() -> None:
     """Measure in turns, print a table."""
     seconds = float(sys.argv[1]) if len(sys.argv) > 1 else 60.0
     policy = sys.argv[2] if len(sys.argv) > 2 else "other"
+    driver = sys.argv[3] if len(sys.argv) > 3 else "simulated"
     period_us = round(load_robot(CONFIG).period_s * 1e6)
     skipped = {"alone": 0, "disturbed": 0}
     measures: dict[str, Callable[[], list[float]]] = {
@@ -156,7 +160,7 @@ def main() -> None:
     for name in skipped:
 
         def measure(name: str = name) -> list[float]:
-            late_us, told = service(seconds / SLICES, policy, name == "disturbed")
+            late_us, told = service(seconds / SLICES, policy, driver, name == "disturbed")
             timing = told["timing"]
             assert isinstance(timing, dict)
             skipped[name] += int(timing["skipped"])
@@ -168,7 +172,7 @@ def main() -> None:
         for name, measure_slice in measures.items():
             values[name] += measure_slice()
     load = os.getloadavg()[0]
-    print(f"period {period_us} us, policy {policy}, {seconds:g} s each, load {load:.1f}; us")
+    print(f"period {period_us} us, policy {policy}, driver {driver}, {seconds:g} s each, load {load:.1f}; us")
     print(f"{'':12s}   ticks      p50      p99    p99.9      max  p99.9 ratio skipped")
     base = percentile(values["cyclictest"], 0.999)
     for name, late_us in values.items():
