@@ -232,6 +232,24 @@ def test_a_slope_holds_below_the_friction_angle_and_slides_above(share: float) -
         assert gained == pytest.approx(expected, rel=0.05)
 
 
+def test_a_rolling_foot_does_not_slip() -> None:
+    """The body leans ahead over its feet: the foot balls roll, their centres move, nothing slides."""
+    robot = burdock()
+    plant = Plant(robot, Disturbances(friction=3.0))
+    plant.place(crouch(robot))
+    plant.advance(800)
+    start = plant.probe()
+    slid = np.zeros(4)
+    for step in range(200):
+        lean = 0.15 * (step + 1) / 200
+        plant.command([a + (lean if k % 3 == 1 else 0.0) for k, a in enumerate(crouch(robot))])
+        plant.advance(5)
+        slid += plant.probe().foot_slip_m_s * 0.005
+    rolled = np.linalg.norm((plant.probe().feet_m - start.feet_m)[:, :2], axis=1)
+    assert np.all(rolled > 0.001)
+    assert np.all(slid < 0.25 * rolled)
+
+
 def test_a_push_gives_its_impulse() -> None:
     robot = thistle()
     plant = Plant(robot, Disturbances(push_ns=(0.3, -0.6), push_at_s=0.1))

@@ -12,7 +12,7 @@ import pytest
 from hobnail import load_robot
 from hobnail.errors import CommandError, ConfigError, StateError
 from hobnail.robot import Robot
-from hobnail.workshop.rehearse import SCENARIOS, Scenario, rehearse, run, scenario, walking
+from hobnail.workshop.rehearse import SCENARIOS, Disturbances, Scenario, rehearse, run, scenario, walking
 from hobnail.workshop.rehearse.scenarios import stand, stop, walk
 from hobnail.workshop.rehearse.script import load_script
 from workshop.machines import burdock, thistle
@@ -54,6 +54,13 @@ def test_a_category_1_stop_plants_crouches_and_cuts() -> None:
     assert cut_s - 2.5 <= robot.safety.crouch_s + 2 * robot.period_s
     # Soft: the trunk is at rest height before the pulses end.
     assert recording.true_position_m[np.argmax(~recording.powered), 2] < lying + 0.01
+
+
+def test_a_dead_bus_ends_in_the_service_s_own_fault() -> None:
+    recording = run(burdock(), walking(burdock(), 0.05, duration_s=1.0), Disturbances(lost_frames=1.0))
+    assert recording.faults == ("bus-error",)
+    assert recording.state[-1] == "stopped"
+    assert recording.lost_frames >= 1 + burdock().safety.bus_retries
 
 
 def test_life_begins_and_ends_lying_without_pulses() -> None:
