@@ -56,7 +56,8 @@ def in_real_time(seconds: float, policy: str, driver: str) -> None:
         command += ["--realtime"] if policy == "fifo" else []
         before = ["chrt", "-f", str(FIFO_PRIORITY)] if policy == "fifo" else []
         sleeper = [*before, sys.executable, "-c", SLEEPER, "0.01", str(seconds)]
-        with subprocess.Popen(command, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL) as process:
+        process = subprocess.Popen(command, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
+        try:
             while not path.exists():
                 time.sleep(0.05)
             with Client(path, timeout_s=10.0) as client:
@@ -69,8 +70,9 @@ def in_real_time(seconds: float, policy: str, driver: str) -> None:
                     walk_about(client, process.pid, seconds, [str(gait) for gait in gaits])
                     lost, _ = beside.communicate()
                 print(f"an idle sleeper of the same period and policy lost {lost.strip()} ticks meanwhile")
+        finally:
             process.send_signal(signal.SIGTERM)
-        print(f"exit code {process.returncode}")
+            print(f"exit code {process.wait()}")
 
 
 def walk_about(client: Client, pid: int, seconds: float, gaits: list[str]) -> None:

@@ -238,6 +238,31 @@ def test_a_bus_that_hangs_stops_the_robot_and_not_the_loop() -> None:
     stage.expect_no_pulses()
 
 
+def test_a_process_that_was_held_up_as_a_whole_does_not_blame_the_bus() -> None:
+    stage = Stage()
+    stage.walk()
+    stage.bus.hang()
+    stage.at(stage.now_s - stage.start_s + 0.05, lambda: stage.sleep(3.0))
+    stage.run(3.08)
+    stage.bus.let_go()
+    stage.run(0.1)
+    assert not stage.machine.faults.is_latched("bus-stalled")
+    stage.expect(State.WALKING)
+
+
+def test_many_short_jobs_are_no_stall() -> None:
+    stage = Stage()
+    stage.walk()
+
+    def busy(_: float) -> None:
+        stage.bus.let_go()
+        stage.bus.hang()
+
+    stage.loop._after_tick = (busy,)
+    stage.run(2.0)
+    assert not stage.machine.faults.is_latched("bus-stalled")
+
+
 def test_a_short_hang_moves_nothing_on_and_does_not_snap() -> None:
     stage = Stage()
     stage.walk()

@@ -111,11 +111,6 @@ class Bus:
         """The last frame, release or set-up has not been done yet."""
         return self._frame is not None or self._release or self._set_up or self._working
 
-    def busy_s(self, now_s: float) -> float:
-        """How long the job under way has taken so far, 0 when there is none."""
-        since_s = self.busy_since_s
-        return 0.0 if since_s is None else now_s - since_s
-
     def events(self) -> list[Event]:
         """What happened since the last call."""
         events = []

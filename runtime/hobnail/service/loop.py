@@ -74,6 +74,8 @@ class Loop:
         self.skipped = 0
         self.waited = 0
         self._behind = 0.0
+        self._job_since_s: float | None = None
+        self._job_s = 0.0
         self._server = server
         self._clock = clock
         self._sleep = sleep
@@ -159,7 +161,7 @@ class Loop:
         machine, bus = self.machine, self.bus
         for event in bus.events():
             machine.report(event.fault, now_s, event.detail)
-        self._judge_bus(now_s)
+        self._judge_bus(now_s, dt_s)
         self._watch_inputs(now_s)
         if self._before_tick is not None:
             self._before_tick(now_s)
@@ -186,13 +188,18 @@ class Loop:
             self._behind = 0.0
             self.machine.report("bus-behind", now_s, f"{self.waited} ticks so far")
 
-    def _judge_bus(self, now_s: float) -> None:
-        machine, bus = self.machine, self.bus
-        limit_s = machine.robot.safety.bus_stall_s if bus.is_set_up else SET_UP_LIMIT_S
-        busy_s = bus.busy_s(now_s)
-        if busy_s > limit_s:
+    def _judge_bus(self, now_s: float, dt_s: float) -> None:
+        """Stalled: one job has been under way for too long, in the loop's own time.  Where the
+        whole process was held up, the bus is not to blame."""
+        machine, since_s = self.machine, self.bus.busy_since_s
+        if since_s is None or since_s != self._job_since_s:
+            self._job_since_s, self._job_s = since_s, 0.0
+        else:
+            self._job_s += dt_s
+        limit_s = machine.robot.safety.bus_stall_s if self.bus.is_set_up else SET_UP_LIMIT_S
+        if self._job_s >= limit_s:
             if not machine.faults.is_latched("bus-stalled"):
-                machine.report("bus-stalled", now_s, f"for {busy_s:.2f} s so far", lasting=True)
+                machine.report("bus-stalled", now_s, f"for {self._job_s:.2f} s so far", lasting=True)
         else:
             machine.faults.over("bus-stalled", now_s)
 
@@ -260,7 +267,7 @@ class Loop:
     def reaches_boards(self, frame: Frame, now_s: float) -> bool:
         """The boards do what the frame says, so far as the bus thread knows."""
         stall_s = self.machine.robot.safety.bus_stall_s
-        if self.bus.busy_s(now_s) > stall_s:
+        if self._job_s >= stall_s:
             return False
         if frame.release:
             return self.bus.released
