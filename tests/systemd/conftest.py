@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import shutil
 import subprocess
-import tempfile
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -18,10 +17,11 @@ SOURCES = ("pyproject.toml", "README.md", "LICENSE", "runtime", "drivers", "conf
 
 
 @pytest.fixture(scope="session")
-def debian() -> Path:
+def debian() -> Iterator[Path]:
     """A small Debian in a folder, with nothing of hobnail."""
     container.require()
-    return container.debian()
+    with container.alone():
+        yield container.debian()
 
 
 @pytest.fixture(scope="session")
@@ -31,8 +31,9 @@ def installed(debian: Path) -> Iterator[Path]:
     Two things are not the guide's: the login that it takes for granted, and a
     drop-in that puts a chip model in the place of the board.
     """
-    with tempfile.TemporaryDirectory(dir=container.cache(), prefix="installed-") as folder:
-        tree = Path(folder) / "root"
+    tree = container.cache() / "installed"
+    shutil.rmtree(tree, ignore_errors=True)  # left by a run that was killed
+    try:
         subprocess.run(["cp", "-a", "--reflink=auto", debian, tree], check=True)
         for name in SOURCES:
             _copy(guide.REPOSITORY / name, tree / SOURCE[1:] / name)
@@ -45,6 +46,8 @@ def installed(debian: Path) -> Iterator[Path]:
             assert done.returncode == 0, done.stdout + done.stderr + Board(fresh).journal()
             fresh.power_off()
         yield tree
+    finally:
+        shutil.rmtree(tree, ignore_errors=True)
 
 
 @pytest.fixture

@@ -1,8 +1,8 @@
 """A Debian system in a folder, and a container that boots it with its own systemd; times in s.
 
-The folder is made once by debootstrap and kept in the user's cache.  A booted
-container takes about a second, runs beside others never (they would share
-control groups), and dies with this process, however that ends.  Needs root.
+The folder is made once by debootstrap and kept in the user's cache.  A container
+boots in about a second, and dies with this process, however that ends.  Needs
+root.
 """
 
 from __future__ import annotations
@@ -11,9 +11,11 @@ import fcntl
 import hashlib
 import os
 import shutil
+import signal
 import subprocess
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from types import TracebackType
 from typing import Self
@@ -28,6 +30,7 @@ TOOLS = {
     "debootstrap": "debootstrap",
     "nsenter": "util-linux",
     "setpriv": "util-linux",
+    "unshare": "util-linux",
 }
 CERTIFICATES = Path("/etc/ssl/certs/ca-certificates.crt")
 ENVIRONMENT = ("PATH=/usr/local/sbin:/usr/local/bin:/usr/sbin:/usr/bin", "LANG=C.UTF-8", "HOME=/root")
@@ -67,13 +70,22 @@ def cache() -> Path:
     return folder
 
 
+@contextmanager
+def alone() -> Iterator[None]:
+    """Waits for other runs of these tests: two containers at once would share control groups."""
+    with (cache() / "lock").open("w") as lock:
+        fcntl.flock(lock, fcntl.LOCK_EX)
+        yield
+
+
 def debian() -> Path:
     """The tree of a small Debian, made if it is not there yet; it is never changed."""
     key = hashlib.sha256(" ".join((SUITE, *PACKAGES)).encode()).hexdigest()[:12]
     tree = cache() / f"debian-{SUITE}-{key}"
     if tree.is_dir():
         return tree
-    part = tree.with_suffix(f".{os.getpid()}.part")
+    part = tree.with_suffix(".part")
+    shutil.rmtree(part, ignore_errors=True)  # left by a run that was killed
     try:
         done = subprocess.run(
             ["debootstrap", "--variant=minbase", f"--include={','.join(PACKAGES)}", SUITE, part],
@@ -96,14 +108,12 @@ class Container:
     def __init__(self, tree: Path, *, throw_away: bool) -> None:
         self._tree = tree
         self._throw_away = throw_away
-        self._lock = -1
         self._log = cache() / "boot.log"
         self._spawn: subprocess.Popen[bytes] | None = None
-        self._leader = 0
+        self._nspawn = 0  # its process, seen from here
+        self._leader = 0  # the first process inside, seen from here
 
     def __enter__(self) -> Self:
-        self._lock = os.open(cache() / "lock", os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o600)
-        fcntl.flock(self._lock, fcntl.LOCK_EX)
         try:
             self._boot()
         except BaseException:
@@ -147,7 +157,7 @@ class Container:
     def power_off(self) -> None:
         """As the power button does; returns when the container is down."""
         assert self._spawn is not None
-        self._spawn.terminate()
+        os.kill(self._nspawn, signal.SIGTERM)
         self._spawn.wait(BOOT_S)
 
     def _boot(self) -> None:
@@ -170,8 +180,14 @@ class Container:
         if CERTIFICATES.is_file():
             options.append(f"--bind-ro={CERTIFICATES}")  # whom this machine trusts, for pip
         with self._log.open("wb") as log:
+            # When this process dies, so does unshare, and the kernel ends all that lives in its
+            # process namespace; systemd-nspawn alone would leave its container behind.
             self._spawn = subprocess.Popen(
-                ["setpriv", "--pdeathsig=KILL", "systemd-nspawn", *options],
+                [
+                    *("setpriv", "--pdeathsig=KILL"),
+                    *("unshare", "--pid", "--mount-proc", "--fork", "--kill-child=KILL"),
+                    *("systemd-nspawn", *options),
+                ],
                 stdin=subprocess.DEVNULL,
                 stdout=log,
                 stderr=subprocess.STDOUT,
@@ -183,11 +199,11 @@ class Container:
         if self._spawn.poll() is not None:
             pytest.fail(f"systemd-nspawn: exit code {self._spawn.returncode}\n{self._log.read_text()}")
         if not self._leader:
-            children = Path(f"/proc/{self._spawn.pid}/task/{self._spawn.pid}/children").read_text().split()
-            leaders = [pid for pid in children if _name(pid) == "systemd"]
+            spawns = _children(self._spawn.pid, "systemd-nspawn")
+            leaders = [leader for spawn in spawns for leader in _children(spawn, "systemd")]
             if not leaders:
                 return False
-            self._leader = int(leaders[0])
+            (self._nspawn,), (self._leader,) = spawns, leaders
         state = self.run("systemctl is-system-running || true").stdout.strip()
         return state in ("running", "degraded")
 
@@ -203,16 +219,17 @@ class Container:
         if self._spawn is not None:
             if self._leader and self._spawn.poll() is None:
                 # Its first process takes all others with it, and leaves systemd-nspawn to tidy up.
-                os.kill(self._leader, 9)
+                os.kill(self._leader, signal.SIGKILL)
             else:
                 self._spawn.kill()
             self._spawn.wait(BOOT_S)
             self._spawn = None
-        os.close(self._lock)
 
 
-def _name(pid: str) -> str:
+def _children(pid: int, name: str) -> list[int]:
+    """The children of a process that run this program."""
     try:
-        return Path(f"/proc/{pid}/comm").read_text().strip()
-    except FileNotFoundError:
-        return ""
+        children = Path(f"/proc/{pid}/task/{pid}/children").read_text().split()
+        return [int(child) for child in children if Path(f"/proc/{child}/comm").read_text().strip() == name]
+    except FileNotFoundError:  # gone meanwhile
+        return []
