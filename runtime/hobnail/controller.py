@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 from bisect import bisect_right
 from dataclasses import dataclass
+from itertools import chain
 
 from hobnail.errors import CommandError
 from hobnail.motion.joint_steps import STEP_SHARE
@@ -154,18 +155,18 @@ class Controller:
             self._steps = [(a * share, b * share, c * share) for a, b, c in self._speeds]
         walker = self._walker
         walker.tick(dt_s, self._steps)
-        clamped = walker.clamped
+        body, commanded = walker.body, walker.feed_forward.commanded_rad
         pulses = []
-        body = walker.body
-        angles = (angle for leg in walker.lead.commanded_rad for angle in leg)
-        for angle, (knots, pieces, low, high) in zip(angles, self._pieces, strict=True):
+        for angle, (knots, pieces, low, high) in zip(
+            chain.from_iterable(commanded), self._pieces, strict=True
+        ):
             offset, slope = pieces[bisect_right(knots, angle)] if knots else pieces[0]
             pulse = offset + slope * angle
             # The joint's limits are those of its pulses: beyond is rounding only.
             pulses.append(low if pulse < low else high if pulse > high else pulse)
         return Tick(
             body.joints_rad,
-            walker.lead.commanded_rad,
+            commanded,
             body.feet_m,
             walker.stance,
             tuple(pulses),
@@ -176,7 +177,7 @@ class Controller:
             walker.walking,
             walker.settled,
             walker.height_m,
-            clamped,
+            walker.clamped,
             body.out_of_reach,
         )
 

@@ -5,6 +5,7 @@ The allowed steps are leg by leg (roll, hip pitch, knee pitch), all above zero.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 
 from hobnail.motion.foot import Foot
@@ -33,49 +34,51 @@ def clamp_steps(
     return held, count
 
 
-class ServoLead:
-    """What the servos are sent: each joint ahead by what its servo trails behind at the
-    present speed, and across its slack to the side on which it bears its torque, as
-    far as the joint's step allows."""
+# What the ground does through all feet together: force ahead, left and up (N), and the
+# turning about the body, as force over arm for a foot that carries everything (N/m).
+Drive = tuple[float, float, float, float]
+
+
+class FeedForward:
+    """What the servos are sent, leg by leg: the geometric angles with the corrections of
+    `hobnail.motion.load`, as far as each joint's step allows."""
 
     __slots__ = ("_feet", "_speeds", "commanded_rad")
 
-    def __init__(self, feet: Sequence[Foot], body: WholeBody) -> None:
+    def __init__(self, feet: Sequence[Foot], body: WholeBody, drive: Drive) -> None:
         self._feet = feet
-        self._speeds = [(0.0, 0.0, 0.0)] * len(feet)  # of the joints along their path, rad/s
-        self.commanded_rad = body.loaded_rad
+        self._speeds: list[Vec3] = [(0.0, 0.0, 0.0)] * len(feet)  # of the joints along their path, rad/s
+        anywhere = [(math.inf, math.inf, math.inf)] * len(feet)
+        self.commanded_rad = body.joints_rad
+        self.advance(body.joints_rad, body, drive, 0.0, anywhere)
 
-    def advance(self, before: Sequence[Vec3], body: WholeBody, time_s: float, steps: Sequence[Vec3]) -> None:
-        """Go on with the body, which went from `before` in `time_s` along its path."""
+    def advance(
+        self,
+        before: Sequence[Vec3],
+        body: WholeBody,
+        drive: Drive,
+        time_s: float,
+        steps: Sequence[Vec3],
+    ) -> None:
+        """Go on with the body, which went from `before` in `time_s` along its path while the
+        ground did `drive` to it."""
         if time_s > 0.0:
             self._speeds = [
                 ((a1 - a0) / time_s, (b1 - b0) / time_s, (c1 - c0) / time_s)
                 for (a0, b0, c0), (a1, b1, c1) in zip(before, body.joints_rad, strict=True)
             ]
+        ahead, left, up, spin = drive
         commanded = []
-        for foot, last, (a, b, c), (va, vb, vc), (la, lb, lc), most in zip(
-            self._feet,
-            self.commanded_rad,
-            body.loaded_rad,
-            self._speeds,
-            body.torques_nm,
-            steps,
-            strict=True,
+        for foot, (x, y, z), angles, speeds, last, most in zip(
+            self._feet, body.feet_m, body.joints_rad, self._speeds, self.commanded_rad, steps, strict=True
         ):
-            correction = foot.correction
-            ta, tb, tc = correction.trail_s
-            sa, sb, sc = correction.slope_nm_s
-            da, db, dc = correction.slack_rad
-            ua, ub, uc = correction.sure_nm
-            la += sa * va
-            lb += sb * vb
-            lc += sc * vc
-            ahead = (
-                a + ta * va + da * la / (abs(la) + ua),
-                b + tb * vb + db * lb / (abs(lb) + ub),
-                c + tc * vc + dc * lc / (abs(lc) + uc),
-            )
-            commanded.append(hold(_near(last, ahead, most), foot.limits))
+            if foot.correction.active:
+                load = foot.load
+                push = (load * (ahead - spin * y), load * (left + spin * x), load * up)
+                _, hip_y, hip_z = foot.hip
+                angles = foot.correction.command(angles, speeds, y - hip_y, z - hip_z, push)
+                angles = hold(angles, foot.limits)
+            commanded.append(_near(last, angles, most))
         self.commanded_rad = tuple(commanded)
 
 

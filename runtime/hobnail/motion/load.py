@@ -18,7 +18,7 @@ The load is what the schedule says each foot should carry, not a measurement.
 
 from __future__ import annotations
 
-import math
+from math import copysign, cos, sin
 
 from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.leg import LegKinematics
@@ -55,7 +55,8 @@ class LegCorrection:
         self._radius_m = leg.foot_radius_m
         self._neutral = (neutral_rad[0], neutral_rad[1] + neutral_rad[2])
         stiffness = [joint.servo.stiffness_nm_rad for joint in leg.joints]
-        self._give = tuple(1.0 / k if k else 0.0 for k in stiffness)
+        a, b, c = (1.0 / k if k else 0.0 for k in stiffness)
+        self._give = (a, b, c)
         a, b, c = (joint.servo.torque_nm / joint.servo.speed_rad_s for joint in leg.joints)
         self.slope_nm_s = (a, b, c)  # of the torque-speed line, N m s/rad
         a, b, c = (
@@ -76,20 +77,38 @@ class LegCorrection:
             GRAVITY_M_S2 * 0.5 * leg.lower_kg,
         )
         self._side_nm = GRAVITY_M_S2 * (leg.hip_kg + leg.upper_kg + leg.lower_kg) * leg.abduction_m
-        self.active = self._radius_m > 0.0 or any(self._give)
+        self.active = self._radius_m > 0.0 or any(self._give) or any(self.trail_s)
 
-    def apply(
+    def command(self, angles: Vec3, speeds: Vec3, y: float, z: float, force_n: Vec3) -> Vec3:
+        """What the servos must be sent for geometric angles (rad) that move at `speeds`
+        (rad/s): `loaded` angles, ahead by what the servos trail, and across their slack
+        to the side on which they bear their torque."""
+        (roll, hip, knee), torques = self.loaded(*angles, y, z, force_n)
+        va, vb, vc = speeds
+        ta, tb, tc = self.trail_s
+        sa, sb, sc = self.slope_nm_s
+        a, b, c = torques[0] + sa * va, torques[1] + sb * vb, torques[2] + sc * vc
+        ua, ub, uc = self.sure_nm
+        da, db, dc = self.slack_rad
+        return (
+            roll + ta * va + da * a / (abs(a) + ua),
+            hip + tb * vb + db * b / (abs(b) + ub),
+            knee + tc * vc + dc * c / (abs(c) + uc),
+        )
+
+    def loaded(
         self, roll: float, hip: float, knee: float, y: float, z: float, force_n: Vec3
     ) -> tuple[Vec3, Vec3]:
-        """Angles to command for the geometric angles (rad), the foot's y and z relative to
-        the hip (m) and the force of the ground on it (body frame, N); and the torques
-        (N m) by which the servos hold that load."""
+        """Angles that make up for sag and rolling at the geometric angles (rad), the foot's
+        y and z relative to the hip (m) and the force of the ground on it (body frame, N);
+        and the torques (N m) by which the servos hold that load."""
         shank = hip + knee
-        upper_x, shank_x = -self._upper_m * math.sin(hip), -self._lower_m * math.sin(shank)
-        upper_z, shank_z = -self._upper_m * math.cos(hip), -self._lower_m * math.cos(shank)
+        upper, lower = self._upper_m, self._lower_m
+        upper_x, shank_x = -upper * sin(hip), -lower * sin(shank)
+        upper_z, shank_z = -upper * cos(hip), -lower * cos(shank)
         foot_x, foot_z = upper_x + shank_x, upper_z + shank_z
         ahead, left, up = force_n
-        cos_roll, sin_roll = math.cos(roll), math.sin(roll)
+        cos_roll, sin_roll = cos(roll), sin(roll)
         push = up * cos_roll - left * sin_roll
         # Minus f . dp/dq, for the ground's push and for the weights of the links.
         at_knee, at_foot = self._weights_n
@@ -98,17 +117,18 @@ class LegCorrection:
             push * foot_x - ahead * foot_z - cos_roll * (at_knee * upper_x + at_foot * shank_x),
             push * shank_x - ahead * shank_z - cos_roll * at_foot * shank_x,
         )
-        give = self._give
-        roll_by, hip_by, knee_by = torques[0] * give[0], torques[1] * give[1], torques[2] * give[2]
+        give_roll, give_hip, give_knee = self._give
+        roll_by, hip_by, knee_by = torques[0] * give_roll, torques[1] * give_hip, torques[2] * give_knee
         radius = self._radius_m
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
             forward = radius * (shank - self._neutral[1])
             # Knee and hip that move the foot along x alone, in the plane of the leg.  A leg
             # nearly straight cannot, and is left to roll a little farther.
-            folded = self._upper_m * self._lower_m * math.sin(knee)
-            least = self._upper_m * self._lower_m * LEAST_FOLD
-            folded = math.copysign(max(abs(folded), least), folded)
+            bend = sin(knee)
+            if abs(bend) < LEAST_FOLD:
+                bend = copysign(LEAST_FOLD, bend)
+            folded = upper * lower * bend
             hip_by += forward * shank_x / folded
             knee_by -= forward * foot_x / folded
             roll_by += radius * (roll - self._neutral[0]) / z

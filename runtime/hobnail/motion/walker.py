@@ -19,7 +19,7 @@ from collections.abc import Sequence
 from hobnail.motion.balance import GRAVITY_M_S2, neutral_feet
 from hobnail.motion.foot import LAST_AIM, Foot, FootState, Swing
 from hobnail.motion.glide import AT_REST, Glide, GlideState, Slew, SlewState, minimum_jerk
-from hobnail.motion.joint_steps import ServoLead, clamp_steps, excess_step
+from hobnail.motion.joint_steps import Drive, FeedForward, clamp_steps, excess_step
 from hobnail.motion.plan import GaitPlan
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist
 from hobnail.motion.sway import NONE, BodyShift, SwayState
@@ -51,8 +51,8 @@ _Saved = tuple[tuple[Pose, float, float], SwayState, SlewState, GlideState, list
 class Walker:
     """The robot's motion.  A new one stands at its neutral stance, or lies at rest height.
 
-    `body` holds the angles and feet of the latest tick, `lead` what the servos are to be
-    sent for them.
+    `body` holds the angles and feet of the latest tick, `feed_forward` what the servos
+    are to be sent for them.
     """
 
     def __init__(
@@ -91,7 +91,7 @@ class Walker:
         self.clamped = 0
         self.body = WholeBody()
         self._solve()
-        self.lead = ServoLead(self._feet, self.body)
+        self.feed_forward = FeedForward(self._feet, self.body, self._drive())
 
     # -- what is asked of it -------------------------------------------------
 
@@ -189,7 +189,7 @@ class Walker:
         self.clamped = 0
         if excess > 1.0:
             body.joints_rad, self.clamped = clamp_steps(joints, body.joints_rad, steps_rad)
-        self.lead.advance(joints, body, time_s, steps_rad)
+        self.feed_forward.advance(joints, body, self._drive(), time_s, steps_rad)
         share = self.slowdown = time_s / dt_s
         pace = self._pace.value
         self.velocity = (pace[0] * share, pace[1] * share, pace[2] * share)
@@ -298,7 +298,9 @@ class Walker:
         most = LOAD_RATE_HZ * time_s
         total = sum(weights) or 1.0
         for foot, weight in zip(self._feet, weights, strict=True):
-            foot.load += max(-most, min(most, weight / total - foot.load))
+            change = weight / total - foot.load
+            if change:
+                foot.load += max(-most, min(most, change))
 
     def _foothold(self, foot: Foot, until_touch_down_s: float) -> Vec2:
         """Where on the ground the foot must land: under its neutral place at the body's
@@ -422,19 +424,21 @@ class Walker:
     # -- angles --------------------------------------------------------------
 
     def _solve(self) -> None:
+        self.body.solve(self._feet, self._pose, self._shift.value, self._posture.value)
+
+    def _drive(self) -> Drive:
+        """What carries the body and drives it and the legs in the air along."""
         raised = (self._posture.value[0] - self._robot.stance.rest_height_m) / LOADING_M
         mass = self._mass_kg * min(max(raised, 0.0), 1.0)
-        shift = self._shift
-        (ahead, left), slope = shift.acceleration, self._pace.slope
+        (ahead, left), slope = self._shift.acceleration, self._pace.slope
         c, s = math.cos(self._pose[2]), math.sin(self._pose[2])
         x, y, spin = self._swing_drive
-        drive = (
+        return (
             mass * (ahead + slope[0]) + c * x + s * y,
             mass * (left + slope[1]) + c * y - s * x,
             mass * GRAVITY_M_S2,
             spin / self._plan.arm2_m2,
         )
-        self.body.solve(self._feet, self._pose, shift.value, self._posture.value, drive)
 
     # -- trying a tick again -------------------------------------------------
 

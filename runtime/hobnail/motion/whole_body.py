@@ -1,4 +1,4 @@
-"""All leg angles for a body over its feet: posture, reach and joint limits; m, rad, N.
+"""All leg angles for a body over its feet: posture, reach and joint limits; m, rad.
 
 Feet are in the ground frame, the answer in the body frame and in joint angles.
 No time and no gait here.
@@ -6,33 +6,24 @@ No time and no gait here.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
+from math import cos, sin
 
 from hobnail.motion.foot import Foot
 from hobnail.motion.planar import Pose
 from hobnail.robot import Span, Vec2, Vec3
 
-# What the ground does through all feet together: force ahead, left and up (N), and the
-# turning about the body, as force over arm for a foot that carries everything (N/m).
-Drive = tuple[float, float, float, float]
-NO_TORQUE: Vec3 = (0.0, 0.0, 0.0)
-
 
 class WholeBody:
     """The latest solution: `pose` of the body on the ground (x, y, yaw), `feet_m` in the
-    body frame, `joints_rad` geometric, `loaded_rad` with the corrections for load and
-    round feet, `torques_nm` by which the servos hold that load, and the count of feet
-    that were `out_of_reach`."""
+    body frame, `joints_rad`, and the count of feet that were `out_of_reach`."""
 
-    __slots__ = ("feet_m", "joints_rad", "loaded_rad", "out_of_reach", "pose", "torques_nm")
+    __slots__ = ("feet_m", "joints_rad", "out_of_reach", "pose")
 
     def __init__(self) -> None:
         self.pose: Pose = (0.0, 0.0, 0.0)
         self.feet_m: tuple[Vec3, ...] = ()
         self.joints_rad: tuple[Vec3, ...] = ()
-        self.loaded_rad: tuple[Vec3, ...] = ()
-        self.torques_nm: tuple[Vec3, ...] = ()
         self.out_of_reach = 0
 
     def solve(
@@ -41,28 +32,24 @@ class WholeBody:
         pose: Pose,
         shift_m: Vec2,
         posture: Sequence[float],
-        drive: Drive,
     ) -> None:
-        """Solve for the walk's `pose`, the body's `shift_m` over its supports, the
-        `posture` (height, roll, pitch, yaw, lean x, lean y) and what the ground does to the
-        robot through its feet.
-        """
+        """Solve for the walk's `pose`, the body's `shift_m` over its supports and the
+        `posture` (height, roll, pitch, yaw, lean x, lean y)."""
         height, roll, pitch, yaw, lean_x, lean_y = posture
         x0, y0, heading = pose
-        c, s = math.cos(heading), math.sin(heading)
+        c, s = cos(heading), sin(heading)
         shift_x, shift_y = shift_m[0] + lean_x, shift_m[1] + lean_y
         x0 += c * shift_x - s * shift_y
         y0 += s * shift_x + c * shift_y
         if yaw != 0.0:
             heading += yaw
-            c, s = math.cos(heading), math.sin(heading)
+            c, s = cos(heading), sin(heading)
         self.pose = (x0, y0, heading)
         tilted = roll != 0.0 or pitch != 0.0
         if tilted:
-            cr, sr, cp, sp = math.cos(roll), math.sin(roll), math.cos(pitch), math.sin(pitch)
-        feet_m, joints, loaded, torques = [], [], [], []
+            cr, sr, cp, sp = cos(roll), sin(roll), cos(pitch), sin(pitch)
+        feet_m, joints = [], []
         self.out_of_reach = 0
-        ahead, left, up, spin = drive
         for foot in feet:
             dx, dy = foot.x - x0, foot.y - y0
             x, y, z = c * dx + s * dy, c * dy - s * dx, foot.radius_m + foot.lift_m - height
@@ -83,19 +70,8 @@ class WholeBody:
                 self.out_of_reach += 1
             feet_m.append((x, y, z))
             joints.append(angles)
-            if foot.correction.active:
-                load = foot.load
-                push = (load * (ahead - spin * y), load * (left + spin * x), load * up)
-                angles, torque = foot.correction.apply(*angles, at_y, at_z, push)
-                angles = hold(angles, foot.limits)
-                torques.append(torque)
-            else:
-                torques.append(NO_TORQUE)
-            loaded.append(angles)
         self.feet_m = tuple(feet_m)
         self.joints_rad = tuple(joints)
-        self.loaded_rad = tuple(loaded)
-        self.torques_nm = tuple(torques)
 
 
 def hold(angles: Vec3, limits: tuple[Span, ...]) -> Vec3:
