@@ -12,6 +12,7 @@ from threading import Event
 
 import pytest
 
+from hobnail.errors import FaultError
 from hobnail.robot import Robot, StopInput, Supply
 from hobnail.service.bus import Bus
 from hobnail.service.drivers import make_driver
@@ -478,6 +479,39 @@ def test_low_supply_leads_to_rest_then_off_and_a_dip_does_not() -> None:
     stage.loop.run(lambda: stage.machine.state is State.OFF)
     assert stage.machine.faults.is_latched("supply-low")
     assert stage.machine.body.supply_v == pytest.approx(5.0, abs=0.2)
+
+
+def test_a_supply_that_is_low_again_before_it_was_good_for_long_lets_nobody_wake() -> None:
+    robot = replace(juniper(), supply=Supply(nominal_v=6.0, low_v=5.2))
+    stage = Stage(robot, supply=SupplyWatch(robot.supply))
+    stage.bus.volts = 4.9
+    stage.run(10.0)
+    stage.bus.volts = 6.0
+    stage.run(4.0)
+    stage.bus.volts = 4.9
+
+    def try_to_stand() -> None:
+        with pytest.raises(FaultError):
+            stage.ask("stand")
+
+    for k in range(400):
+        stage.at(stage.now_s - stage.start_s + 4.0 + 0.05 * k, try_to_stand)
+    stage.run(30.0)
+    assert stage.script == []
+    stage.expect(State.OFF)
+
+
+def test_a_bus_that_hangs_again_cannot_be_reset_meanwhile() -> None:
+    stage = Stage()
+    stage.walk()
+    for _ in range(2):
+        stage.bus.hang()
+        stage.run(1.0)
+        with pytest.raises(FaultError, match="bus"):
+            stage.ask("reset")
+        stage.bus.let_go()
+        stage.run(1.0)
+    stage.ask("reset")
 
 
 def test_the_stop_input_stops_and_a_release_moves_nothing() -> None:

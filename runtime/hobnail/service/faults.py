@@ -290,6 +290,11 @@ class Faults:
         """That fault is latched now."""
         return name in self._latched
 
+    def is_lasting(self, name: str) -> bool:
+        """That fault is latched, and its cause is still there."""
+        fault = self._latched.get(name)
+        return fault is not None and fault.lasting
+
     def names(self) -> tuple[str, ...]:
         """All that are latched now."""
         return tuple(self._latched)

@@ -59,10 +59,7 @@ class Keeper:
         if now_s - self._looked_s >= LOOK_EVERY_S:
             self._looked_s = now_s
             writer.put(self._look)
-        if self._found != self._seen and not machine.faults.is_latched("configuration-changed"):
-            machine.report("configuration-changed", now_s, lasting=True)
-        elif self._found == self._seen:
-            machine.faults.over("configuration-changed", now_s)
+        machine.watch("configuration-changed", self._found != self._seen, now_s)
 
     def _look(self) -> None:
         self._found = signature(self._sources)

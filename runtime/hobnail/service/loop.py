@@ -197,29 +197,16 @@ class Loop:
         else:
             self._job_s += dt_s
         limit_s = machine.robot.safety.bus_stall_s if self.bus.is_set_up else SET_UP_LIMIT_S
-        if self._job_s >= limit_s:
-            if not machine.faults.is_latched("bus-stalled"):
-                machine.report("bus-stalled", now_s, f"for {self._job_s:.2f} s so far", lasting=True)
-        else:
-            machine.faults.over("bus-stalled", now_s)
+        machine.watch("bus-stalled", self._job_s >= limit_s, now_s, f"for {self._job_s:.2f} s so far")
 
     def _watch_inputs(self, now_s: float) -> None:
-        machine = self.machine
-        if self._stop_input is not None:
-            was_open = self._stop_input.is_open
-            self._stop_input.update(now_s)
-            if self._stop_input.is_open:
-                if not was_open or not machine.faults.is_latched("stop-input"):
-                    machine.report("stop-input", now_s, self._stop_input.detail, lasting=True)
-            else:
-                machine.faults.over("stop-input", now_s)
-        if self._supply is not None and self._supply.update(self.bus.volts, now_s):
-            machine.body.supply_v = self._supply.volts
-            if self._supply.is_low:
-                if not machine.faults.is_latched("supply-low"):
-                    machine.report("supply-low", now_s, self._supply.detail, lasting=True)
-            else:
-                machine.faults.over("supply-low", now_s)
+        machine, contact, supply = self.machine, self._stop_input, self._supply
+        if contact is not None:
+            contact.update(now_s)
+            machine.watch("stop-input", contact.is_open, now_s, contact.detail)
+        if supply is not None and supply.update(self.bus.volts, now_s):
+            machine.body.supply_v = supply.volts
+            machine.watch("supply-low", supply.is_low, now_s, supply.detail)
 
     def _keep(self, frame: Frame, now_s: float, dt_s: float, late_s: float) -> None:
         machine = self.machine

@@ -126,6 +126,13 @@ class Machine:
                 self._lost_s = now_s
             self._halt()
 
+    def watch(self, name: str, is_there: bool, now_s: float, detail: str = "") -> None:
+        """A fault whose cause is looked at every tick: reported when it comes, over when it goes."""
+        if not is_there:
+            self.faults.over(name, now_s)
+        elif not self.faults.is_lasting(name):
+            self.report(name, now_s, detail, lasting=True)
+
     def snapshot(self, now_s: float) -> dict[str, object]:
         """Everything that `state` and `watch` tell; JSON-able."""
         return snapshot(self, now_s)

@@ -38,7 +38,7 @@ class SupplyWatch:
     @property
     def detail(self) -> str:
         """The voltage beside its limit."""
-        return f"{self.volts:.2f} V, allowed at least {self._low_v:.2f} V"
+        return f"{self.volts:.2f} V, allowed at least {self._low_v or 0.0:.2f} V"
 
 
 class StopInputWatch:
