@@ -1,6 +1,6 @@
 """The fault campaign: every hazard, in every state of the robot; a table of what happened, pass or fail.
 
-    cd tests && python -m campaign [--hazard NAME]... [--state NAME]... [--jobs N]
+    cd tests && python -m campaign [--robot NAME] [--hazard NAME]... [--state NAME]... [--jobs N]
 
 Exit code 1 when a cell fails.  `hazards` is the table of hazards; `world` is
 the robot that they happen to, `witness` what judges it by its chips' pins.
@@ -20,7 +20,7 @@ from concurrent.futures import ProcessPoolExecutor
 from typing import NamedTuple
 
 from campaign.hazards import HAZARDS, Hazard
-from campaign.world import STATES
+from campaign.world import CONFIG, ROBOT, STATES
 
 PASS, FAIL, NOT = "pass", "FAIL", "n/a"
 LONGEST_S = 120  # real time for one cell: whoever waits for what never comes fails, too
@@ -81,9 +81,12 @@ def main(argv: Sequence[str] | None = None) -> int:
     names = [hazard.name for hazard in HAZARDS]
     parser.add_argument("--hazard", action="append", choices=names, metavar="NAME", help=", ".join(names))
     parser.add_argument("--state", action="append", choices=STATES, metavar="NAME", help=", ".join(STATES))
+    robots = sorted(path.stem for path in CONFIG.glob("*.yaml"))
+    parser.add_argument("--robot", default="juniper", choices=robots, help="from config/ (%(default)s)")
     # One more than there are cores: some cells wait for a process of their own.
     parser.add_argument("--jobs", type=int, default=(os.cpu_count() or 1) + 1, help="processes (%(default)s)")
     asked = parser.parse_args(argv)
+    os.environ[ROBOT] = asked.robot
     hazards = [hazard for hazard in HAZARDS if not asked.hazard or hazard.name in asked.hazard]
     states = [state for state in STATES if not asked.state or state in asked.state]
     began_s = time.monotonic()

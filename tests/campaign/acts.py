@@ -10,7 +10,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from typing import Any
 
-from campaign.world import World, brisk, juniper
+from campaign.world import World, brisk, demo
 from hobnail.errors import HobnailError
 from hobnail.robot import Robot
 
@@ -20,7 +20,7 @@ MOVING: dict[str, dict[str, object]] = {
     "stand": {},
     "rest": {},
     "posture": {"roll_rad": 0.05},
-    "gait": {"name": "crawl"},
+    "gait": {"name": "any"},
     "route": {"steps": [{"forward_mm": 50}]},
 }
 PULSING = frozenset({"waking", "resting", "rising", "standing", "walking", "lowering", "stopping"})
@@ -91,7 +91,7 @@ def robot_in(
     state: str, robot: Robot | None = None, *, may_cut: bool = False, **parts: Any
 ) -> Iterator[World]:
     """A robot brought into a state by requests alone; at the end, the witness's word."""
-    world = World(robot or brisk(juniper()), **parts)
+    world = World(robot or brisk(demo()), **parts)
     world.witness.may_cut = may_cut
     try:
         WAYS_IN[state](world)

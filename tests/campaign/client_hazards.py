@@ -16,7 +16,7 @@ from pathlib import Path
 from typing import Any
 
 from campaign.acts import LATCHED, end, expect_fault, heed, prove_latched, robot_in, silent, still
-from campaign.world import World, brisk, juniper
+from campaign.world import World, brisk, demo
 from hobnail.service.server import SocketServer
 
 GLIDE_S = 2.5  # from the certified top speed to a stand, with every foot put down
@@ -95,7 +95,7 @@ def commander_gone(state: str) -> str:
 
 
 def _lost(state: str, *, leaves: bool) -> str:
-    robot = brisk(juniper(), lost_rest_s=2.0, idle_rest_s=4.0)
+    robot = brisk(demo(), lost_rest_s=2.0, idle_rest_s=4.0)
     with robot_in(state, robot) as world, sockets_in(world) as sockets:
         world.witness.may_be_late_s = 2 * CALL_S
         commander = sockets.client()  # the first one is client 1, who led the robot here

@@ -18,7 +18,7 @@ from pathlib import Path
 
 from campaign.acts import PULSING, WAYS_IN, end, heed, moves, refused, robot_in, silent, still
 from campaign.stepping import PATIENCE_S
-from campaign.world import CONFIG, World, juniper
+from campaign.world import CONFIG, World, demo
 from command_line import subprocess_environment
 from hobnail.errors import EX_CONFIG
 from hobnail.service.client import Client
@@ -26,12 +26,10 @@ from hobnail.service.recorder import Recorder, last_posture
 from hobnail_drivers.chip_file import open_chip_file
 from hobnail_drivers.simulated import SimulatedDriver
 
-JOINTS = 12
-
 
 def twitch_at_start(state: str) -> str:
     """The service ends in that state, its pulses are released, and it is started and woken anew."""
-    robot = juniper()  # with its own, unhurried wake
+    robot = demo()  # with its own, unhurried wake
     with (
         tempfile.TemporaryDirectory() as directory,
         robot_in(state, robot, recorder=Recorder(Path(directory), robot)) as world,
@@ -46,7 +44,9 @@ def twitch_at_start(state: str) -> str:
         _wakes_one_by_one(world, from_rest=not began)
         end(world)
     where = "where they were" if began else "at rest"
-    return f"no pulse until asked; {JOINTS} joints woken {where}, one an interval, then within their steps"
+    return (
+        f"no pulse until asked; {len(robot.joints)} joints woken {where}, one by one, then within their steps"
+    )
 
 
 def _wakes_one_by_one(world: World, *, from_rest: bool) -> None:
@@ -56,7 +56,7 @@ def _wakes_one_by_one(world: World, *, from_rest: bool) -> None:
     world.ask("stand")
     world.until("resting", 20.0)
     began_s = [at_s for at_s, _ in world.witness.started]
-    assert sum(len(outputs) for _, outputs in world.witness.started) == JOINTS
+    assert sum(len(outputs) for _, outputs in world.witness.started) == len(world.robot.joints)
     gaps_s = [b - a for a, b in pairwise(began_s)]
     assert min(gaps_s) >= safety.wake_interval_s - 1e-6, f"woken {min(gaps_s):.3f} s apart"
     if from_rest:
@@ -148,10 +148,10 @@ def _run(*words: str) -> subprocess.CompletedProcess[str]:
 SERVICE = """
 import sys
 from pathlib import Path
-from campaign.world import brisk, juniper
+from campaign.world import brisk, demo
 from hobnail.service.serve import run
 directory = Path(sys.argv[1])
-sys.exit(run(brisk(juniper()), driver=f"chip-model:{directory}/chips", socket_path=directory / "h.sock"))
+sys.exit(run(brisk(demo()), driver=f"chip-model:{directory}/chips", socket_path=directory / "h.sock"))
 """
 ASKS = {"waking": "stand", "resting": "rest", "rising": "stand"}  # what leads there from off
 

@@ -16,7 +16,7 @@ from campaign.acts import (
     robot_in,
     silent,
 )
-from campaign.world import brisk, juniper
+from campaign.world import brisk, demo
 from hobnail.errors import HobnailError
 from hobnail.robot import StopInput
 from hobnail.service.power import StopInputWatch
@@ -102,7 +102,7 @@ def switched_off(state: str) -> str:
         silent(world, 0.1)
         assert world.witness.all_full_off(), "full off it has to be, on every channel"
         end(world)
-    robot = brisk(juniper())
+    robot = brisk(demo())
     wired = tuple(replace(board, output_enable=("gpiochip0", 17)) for board in robot.boards)
     # The line cuts at once: that is what it is for.
     with robot_in(state, replace(robot, boards=wired), may_cut=True) as world:

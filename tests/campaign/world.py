@@ -9,8 +9,10 @@ Times in s, pulses in us.  Judges nothing: `witness` does.
 from __future__ import annotations
 
 import math
+import os
 from collections.abc import Callable
 from dataclasses import replace
+from functools import cache
 from pathlib import Path
 from typing import Any, cast
 from unittest import mock
@@ -34,12 +36,19 @@ from hobnail_drivers.pca9685 import Pca9685Driver
 from hobnail_drivers.pca9685_chip import Chip
 
 CONFIG = Path(__file__).parents[2] / "config"
+ROBOT = "CAMPAIGN_ROBOT"  # in the environment, so that processes of their own have it too
 STATES = tuple(str(state) for state in State)
 
 
-def juniper() -> Robot:
-    """The demo robot as configured."""
-    return load_robot(CONFIG / "juniper.yaml")
+@cache
+def demo() -> Robot:
+    """The demo robot that the campaign is on, as configured."""
+    return load_robot(CONFIG / f"{os.environ.get(ROBOT, 'juniper')}.yaml")
+
+
+def slowest_gait(robot: Robot) -> str:
+    """The gait that keeps most feet down."""
+    return max(robot.gaits, key=lambda gait: gait.duty).name
 
 
 def brisk(robot: Robot, **safety: Any) -> Robot:
