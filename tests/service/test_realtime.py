@@ -75,8 +75,8 @@ def test_what_is_refused_is_told_with_what_allows_it(monkeypatch: pytest.MonkeyP
 
 @pytest.mark.usefixtures("asked")
 def test_future_memory_is_locked_only_where_locking_is_unlimited(monkeypatch: pytest.MonkeyPatch) -> None:
-    # mlockall(2): MCL_CURRENT is 1, MCL_FUTURE 2.
-    for limit, flags in ((-1, 3), (8 << 20, 1)):
+    # mlockall(2): MCL_CURRENT is 1, MCL_FUTURE 2, MCL_ONFAULT 4.
+    for limit, flags in ((-1, 7), (8 << 20, 5)):
         fake = libc(monkeypatch, 0)
         monkeypatch.setattr("resource.getrlimit", lambda _, limit=limit: (limit, limit))
         go_realtime()

@@ -16,7 +16,8 @@ from hobnail.service.bus import BUS_THREAD
 FIFO_PRIORITY = 40  # above every ordinary process, below the kernel's interrupt threads at 50
 SWITCH_S = 0.0005  # how long another thread may compute before the loop gets its turn
 USUAL_SWITCH_S = 0.005  # Python's own
-_MCL_CURRENT, _MCL_FUTURE = 1, 2
+# mlockall(2).  ONFAULT: only what is used is locked, not stacks and buffers at their full size.
+_MCL_CURRENT, _MCL_FUTURE, _MCL_ONFAULT = 1, 2, 4
 
 
 def quiet_collector() -> None:
@@ -58,7 +59,8 @@ def go_realtime() -> list[str]:
     # To lock what is yet to come as well would make an allocation fail where locking is limited.
     unlimited = resource.getrlimit(resource.RLIMIT_MEMLOCK)[0] == resource.RLIM_INFINITY
     libc = ctypes.CDLL(None, use_errno=True)
-    if libc.mlockall(_MCL_CURRENT | _MCL_FUTURE if unlimited else _MCL_CURRENT) == 0:
+    flags = _MCL_CURRENT | _MCL_FUTURE | _MCL_ONFAULT if unlimited else _MCL_CURRENT | _MCL_ONFAULT
+    if libc.mlockall(flags) == 0:
         told.append("memory: locked" if unlimited else "memory: what is there now is locked")
     else:
         told.append(
