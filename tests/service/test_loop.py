@@ -335,6 +335,21 @@ def test_a_bus_error_that_lasts_cuts_and_needs_a_reset(number: int) -> None:
     stage.stand()
 
 
+def test_a_wake_asked_for_with_the_reset_waits_until_the_boards_are_set_up() -> None:
+    stage = Stage()
+    stage.walk()
+    stage.ask("stop", category=0)
+    stage.run(0.1)
+    stage.bus.hang()
+    stage.ask("reset")
+    stage.ask("stand")
+    stage.run(1.0)
+    stage.expect(State.OFF)
+    stage.bus.let_go()
+    stage.run(0.1)
+    stage.expect(State.WAKING)
+
+
 def test_reset_sets_up_again_and_a_failing_set_up_stops_again() -> None:
     stage = Stage()
     stage.walk()

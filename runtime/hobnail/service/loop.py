@@ -165,7 +165,8 @@ class Loop:
         self._watch_inputs(now_s)
         if self._before_tick is not None:
             self._before_tick(now_s)
-        machine.wake_blocked = "" if bus.is_set_up else "the boards are being set up"
+        ready = bus.is_set_up and machine.setups == self._setups  # else a reset has asked for a set-up
+        machine.wake_blocked = "" if ready else "the boards are being set up"
         pending = bus.pending
         frame = machine.tick(now_s, dt_s, advance=not pending)
         if frame.setup != self._setups:
