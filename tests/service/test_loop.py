@@ -340,7 +340,7 @@ def test_a_wake_asked_for_with_the_reset_waits_until_the_boards_are_set_up() -> 
     stage.walk()
     stage.ask("stop", category=0)
     stage.run(0.1)
-    stage.bus.hang()
+    stage.bus.holds = True  # the set-up takes its time
     stage.ask("reset")
     stage.ask("stand")
     stage.run(1.0)
