@@ -17,7 +17,7 @@ from hobnail.service.machine import Machine
 from hobnail.service.notify import Notifier
 from hobnail.service.power import StopInputWatch, SupplyWatch
 from hobnail.service.recorder import Recorder
-from hobnail.service.states import Frame, State
+from hobnail.service.states import Frame
 from hobnail.service.timing import Lateness
 from hobnail.service.writer import EventLog
 
@@ -25,7 +25,9 @@ SPARE_S = 0.0005  # before the deadline, the socket is left and the exact sleep 
 LONGEST_STEP = 2  # periods that one tick may stand for
 CHECK_EVERY_S = 0.4  # read-back of settings and supply: a brown-out shows within a second
 SET_UP_LIMIT_S = 5.0  # a set-up may take longer than a transfer before it counts as stalled
-YOUNG_EVERY_S, OLD_EVERY_S = 1.0, 60.0  # garbage collections, in idle time
+# Garbage collections, in idle time; what was there at the start is frozen, so that a full
+# one takes a tenth of a millisecond.
+YOUNG_EVERY_S, OLD_EVERY_S = 1.0, 10.0
 BEHIND = 5.0  # so many ticks more than one in ten had to wait for the bus: that is told
 ERRORS_AT_ONCE = 10.0  # so many errors, each tick without one taking half of one back, end the service
 
@@ -236,7 +238,7 @@ class Loop:
         self._feed(frame, now_s)
         for call in self._after_tick:
             call(now_s)
-        if now_s - self._old_s >= OLD_EVERY_S and frame.state is not State.WALKING:
+        if now_s - self._old_s >= OLD_EVERY_S:
             self._old_s = self._young_s = now_s
             gc.collect()
         elif now_s - self._young_s >= YOUNG_EVERY_S:
