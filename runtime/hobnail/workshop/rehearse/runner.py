@@ -118,7 +118,7 @@ def _wake(machine: Machine) -> tuple[float, Tick]:
         frame = machine.tick(now_s, dt_s)
         if frame.state is State.STANDING and frame.tick is not None and frame.tick.settled:
             return now_s, frame.tick
-    raise HobnailError(
+    raise StateError(
         f"{machine.robot.name} does not come to a stand within {WAKING_TAKES_AT_MOST_S:.0f} s: it is "
         f"{machine.state}; faults: {', '.join(machine.faults.names()) or 'none'}"
     )
