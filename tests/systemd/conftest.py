@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import shutil
-import subprocess
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -11,7 +10,7 @@ import pytest
 
 from systemd import container, guide
 from systemd.board import SOURCE, USER, Board
-from systemd.container import Container
+from systemd.container import Container, Layer
 
 SOURCES = ("pyproject.toml", "README.md", "LICENSE", "runtime", "drivers", "config", "systemd")
 
@@ -25,19 +24,17 @@ def debian() -> Iterator[Path]:
 
 
 @pytest.fixture(scope="session")
-def installed(debian: Path) -> Iterator[Path]:
+def installed(debian: Path) -> Iterator[Layer]:
     """The same with hobnail installed and enabled, by the very lines of the guide.
 
     Two things are not the guide's: the login that it takes for granted, and a
     drop-in that puts a chip model in the place of the board.
     """
-    tree = container.cache() / "installed"
-    shutil.rmtree(tree, ignore_errors=True)  # left by a run that was killed
+    layer = Layer(debian)
     try:
-        subprocess.run(["cp", "-a", "--reflink=auto", debian, tree], check=True)
         for name in SOURCES:
-            _copy(guide.REPOSITORY / name, tree / SOURCE[1:] / name)
-        with Container(tree, throw_away=False) as fresh:
+            _copy(guide.REPOSITORY / name, layer.file(f"{SOURCE}/{name}"))
+        with Container(layer, throw_away=False) as fresh:
             fresh.run(f"useradd -m {USER}")
             Board(fresh).follow("Install")
             _put_model_in_place(Board(fresh))
@@ -45,13 +42,13 @@ def installed(debian: Path) -> Iterator[Path]:
             done = fresh.run(enable.script, check=False)
             assert done.returncode == 0, done.stdout + done.stderr + Board(fresh).journal()
             fresh.power_off()
-        yield tree
+        yield layer
     finally:
-        shutil.rmtree(tree, ignore_errors=True)
+        layer.close()
 
 
 @pytest.fixture
-def board(installed: Path) -> Iterator[Board]:
+def board(installed: Layer) -> Iterator[Board]:
     """A board that was just switched on; the service has come up with it.  Nothing done to it stays."""
     with Container(installed, throw_away=True) as booted:
         fresh = Board(booted)

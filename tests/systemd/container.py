@@ -102,11 +102,50 @@ def debian() -> Path:
     return tree
 
 
+class Layer:
+    """A tree that can be changed over one that is not: the changes are in memory, in a mount
+    namespace of their own, so that they are gone with this process."""
+
+    def __init__(self, below: Path) -> None:
+        self.place = cache() / "layer"
+        self.place.mkdir(exist_ok=True)
+        script = (
+            'mount -t tmpfs -o mode=755 hobnail "$1"; cd "$1"; mkdir upper work root; '
+            'mount -t overlay -o "lowerdir=$2,upperdir=upper,workdir=work" hobnail root; '
+            "echo ready; exec sleep infinity"
+        )
+        self._holder = subprocess.Popen(
+            [
+                *("setpriv", "--pdeathsig=KILL", "unshare", "--mount"),
+                *("bash", "-euc", script, "bash", self.place, below),
+            ],
+            stdin=subprocess.DEVNULL,
+            stdout=subprocess.PIPE,
+            stderr=subprocess.STDOUT,
+            text=True,
+        )
+        assert self._holder.stdout is not None
+        said = self._holder.stdout.readline()
+        if said != "ready\n":
+            pytest.fail(f"an overlay cannot be mounted here: {said}")
+        self.root = self.place / "root"
+        self.entry = ["nsenter", f"--mount=/proc/{self._holder.pid}/ns/mnt"]
+
+    def file(self, path: str) -> Path:
+        """A path in the tree, seen from outside."""
+        return Path(f"/proc/{self._holder.pid}/root{self.root}{path}")
+
+    def close(self) -> None:
+        """Forget the changes."""
+        self._holder.kill()
+        self._holder.communicate()
+
+
 class Container:
     """A booted tree; `with` boots it and ends it.  `throw_away`: the tree stays as it was."""
 
-    def __init__(self, tree: Path, *, throw_away: bool) -> None:
-        self._tree = tree
+    def __init__(self, layer: Layer, *, throw_away: bool) -> None:
+        self._layer = layer
         self._throw_away = throw_away
         self._log = cache() / "boot.log"
         self._spawn: subprocess.Popen[bytes] | None = None
@@ -162,7 +201,7 @@ class Container:
 
     def _boot(self) -> None:
         options = [
-            f"--directory={self._tree}",
+            f"--directory={self._layer.root}",
             f"--machine=hobnail-{os.getpid()}",
             "--hostname=juniper",
             "--quiet",
@@ -184,7 +223,7 @@ class Container:
             # process namespace; systemd-nspawn alone would leave its container behind.
             self._spawn = subprocess.Popen(
                 [
-                    *("setpriv", "--pdeathsig=KILL"),
+                    *("setpriv", "--pdeathsig=KILL", *self._layer.entry),
                     *("unshare", "--pid", "--mount-proc", "--fork", "--kill-child=KILL"),
                     *("systemd-nspawn", *options),
                 ],
