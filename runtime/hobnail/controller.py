@@ -22,6 +22,7 @@ from hobnail.servo import JointMap
 
 LONGEST_TICK_S = 1.0
 GREATEST = 1e6  # of what a command to walk may name, in any unit
+LEAST = 1e-9  # m/s, rad/s; a velocity below counts as none
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,7 +89,15 @@ class Controller:
         for name, value in values.items():
             if not -GREATEST <= value <= GREATEST:
                 raise CommandError(f"{name} is {value}; allowed: a finite number, {GREATEST:g} at most")
-        self._walker.walk(to_origin(vx, vy, yaw_rate, pivot))
+        vx, vy, yaw_rate = to_origin(vx, vy, yaw_rate, pivot)
+        # No robot moves so little, and squares of it would be rounded to nothing.
+        self._walker.walk(
+            (
+                vx if abs(vx) > LEAST else 0.0,
+                vy if abs(vy) > LEAST else 0.0,
+                yaw_rate if abs(yaw_rate) > LEAST else 0.0,
+            )
+        )
 
     def stand(self) -> None:
         """Stop walking: every foot steps to its neutral place, then stands."""
