@@ -321,6 +321,7 @@ CROSS_CHECKS = [
     ("duty: 0.6 ", "duty: 0.6\n    phases: [0, 0, 0]\n    #", "gaits[0].phases", "list of 4 to 16"),
     ("duty: 0.6 ", "duty: 0.6\n    phases: [0, 0, 0, 0, 0]\n    #", "gaits[0].phases", "one for each leg"),
     ("duty: 0.6 ", "duty: 0.6\n    phases: [0, 0, 0, 1]\n    #", "gaits[0].phases[3]", "from 0 to 0.999999"),
+    ("duty: 0.6 ", "phases: [0, 0.5, 0.5, 0]\n    #", "gaits[0].duty", "trot needs its own duty"),
     (
         "duty: 0.6 ",
         "duty: 0.7\n    phases: [0, 0, 0, 0.4]\n    #",
@@ -344,6 +345,13 @@ CROSS_CHECKS = [
     ("knee_bends: backward", "knee_bends: forward", "stance.height_mm", "there is none"),
     ("knee_bends: backward", "knee_bends: backwards", "leg_defaults.knee_bends", "Did you mean backward?"),
     ("lift_mm: 30", "lift_mm: 120", "gaits[0].lift_mm", "less lift"),
+    (
+        "lift_mm: 30",
+        "lift_mm: 80\n    swing: [{time: 0, travel: 0, lift: 0}, {time: 0.5, travel: 0.5, lift: 1.5}, "
+        "{time: 1, travel: 1, lift: 0}]",
+        "gaits[0].lift_mm",
+        "a lift of 120 mm",
+    ),
     ("spread_mm: 0 ", "spread_mm: -100 ", "stance.spread_mm", "own side"),
     ("com_mm: [0, 0, -15]", "com_mm: [300, 0, -15]", "stance.height_mm", "further ahead"),
     (

@@ -210,17 +210,13 @@ def _check_gait(gait: Section, legs: Sequence[Section], report: Report) -> None:
         else:
             phases = pattern.phases
             duty = pattern.duty if "duty" not in gait.node.entries else duty
-    elif name is not None and name not in BUILT_IN_GAITS:
+    elif name is not None and (name not in BUILT_IN_GAITS or "phases" in gait.node.entries):
         for key, allowed in (
             ("duty", "the share of the cycle that a foot stands"),
             ("phases", "one phase a leg"),
         ):
             if key not in gait.node.entries:
-                built_in = f"{', '.join(BUILT_IN_GAITS)} need none."
-                hint = " ".join(
-                    part for part in (nearest(name, dict.fromkeys(BUILT_IN_GAITS)), built_in) if part
-                )
-                report.add(gait.node, "nothing", allowed, f"{hint[:1].upper()}{hint[1:]}", key=key)
+                report.add(gait.node, "nothing", allowed, _own_numbers_hint(name), key=key)
     if duty is not None and phases is not None:
         fewest = fewest_feet_down(duty, phases)
         if fewest < FEWEST_FEET:
@@ -228,6 +224,14 @@ def _check_gait(gait: Section, legs: Sequence[Section], report: Report) -> None:
             hint = "Raise duty, or set phases further apart."
             report.add(gait.at("duty"), found, f"at least {FEWEST_FEET} feet down at any time", hint)
     _check_swing(gait, report)
+
+
+def _own_numbers_hint(name: str) -> str:
+    """Why a gait of that name must have all its numbers."""
+    if name in BUILT_IN_GAITS:
+        return f"With phases of its own, {name} needs its own duty; without them, neither."
+    hint = f"{nearest(name, dict.fromkeys(BUILT_IN_GAITS))} {', '.join(BUILT_IN_GAITS)} need none.".strip()
+    return f"{hint[:1].upper()}{hint[1:]}"
 
 
 def _check_swing(gait: Section, report: Report) -> None:

@@ -151,6 +151,8 @@ def _check_heights(section: Section, reach: Reach, hint: str, report: Report) ->
         if gait.values.get("name") in BUILT_IN_GAITS and "phases" not in gait.values:
             unsaid = LIFT_SHARE * standing
         lift = gait.values.get("lift_mm", unsaid)
+        if heights := [frame.values.get("lift", 0.0) for frame in gait.values.get("swing") or ()]:
+            lift *= max(heights)
         if obstacle := reach.obstacle(standing, lift):
             found = f"a lift of {lift * 1000.0:g} mm, where {obstacle}"
             report.add(gait.at("lift_mm"), found, "less lift, or more stance.height_mm", hint)
