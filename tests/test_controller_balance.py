@@ -85,4 +85,4 @@ def test_zero_moment_point_stays_over_the_feet(
             feet = [(float(x), float(y)) for x, y, _ in found.on_ground_m[row + 1][now]]
             margins.append(stability_margin(feet, (float(point[row][0]), float(point[row][1]))))
     print(f"{robot.name} {gait} {shares}: least margin in motion {min(margins) * 1e3:.1f} mm")
-    assert min(margins) > (0.005 if shares in FORWARD else -0.004)
+    assert min(margins) > (0.005 if shares in FORWARD else -0.007)

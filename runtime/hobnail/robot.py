@@ -138,6 +138,11 @@ class Gait:
     body_shift: float = 0.0
     swing: tuple[Keyframe, ...] = BUILT_IN_SWING
 
+    @property
+    def clearance_m(self) -> float:
+        """How high a foot gets: keyframes may go beyond `lift_m`, or stay below."""
+        return self.lift_m * max(frame.lift for frame in self.swing)
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Stance:

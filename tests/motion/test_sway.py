@@ -224,3 +224,15 @@ def test_a_quick_gait_does_not_throw_the_body_in_the_slow_one_after_it() -> None
             clock += 0.01 * slow_pace[3]
             shift.advance(0.01, clock, slow_pace)
             assert math.hypot(*shift.value) < 1.2 * greatest
+
+
+@examples(20)
+@given(robot=st.sampled_from(fixed_robots()) | made_up(), pace=paces)
+def test_many_times_at_once_are_the_times_one_by_one(robot: Robot, pace: Pace) -> None:
+    vx, vy, yaw_rate, rate_hz = pace
+    for gait in robot.gaits:
+        sway = PeriodicSway(neutral_feet(robot), gait, robot.stance.height_m)
+        x, y, dragged, turned_x, turned_y = sway.over_cycle(np.arange(7) / 7.0, rate_hz)
+        together = np.array([x + vx * dragged + yaw_rate * turned_x, y + vy * dragged + yaw_rate * turned_y])
+        singly = np.array([sway.at(k / 7.0, pace)[:2] for k in range(7)])
+        assert together.T == pytest.approx(singly, abs=1e-12)

@@ -18,9 +18,10 @@ from hobnail.motion.pacing import (
     room_between_feet,
 )
 from hobnail.motion.planar import Twist
-from hobnail.motion.reach import fit_sway
+from hobnail.motion.reach import CycleReach, fit_shift
 from hobnail.motion.steadiness import steady_strides
 from hobnail.motion.support import support_centre
+from hobnail.motion.sway import PeriodicSway
 from hobnail.robot import Gait, Robot, Vec2, Vec3
 
 # Share of a cycle over which a foot takes up and gives off its load: the time in
@@ -33,6 +34,7 @@ class GaitPlan:
     led from neutral, and how commands are fitted to all that."""
 
     __slots__ = (
+        "_cycle_reach",
         "_neutral",
         "_robot",
         "_strides",
@@ -53,11 +55,14 @@ class GaitPlan:
         self.load_ramp = max(min(gait.duty - 0.5, LOAD_RAMP[1]), LOAD_RAMP[0])
         neutrals = [foot.from_hip for foot in feet]
         room = room_between_feet(self._neutral, [foot.radius_m for foot in feet])
-        reach_m = [
-            min(reach_radius(foot.kinematics, foot.limits, neutral, gait.lift_m), space)
-            for foot, neutral, space in zip(feet, neutrals, room, strict=True)
+        discs = [
+            reach_radius(foot.kinematics, foot.limits, neutral, gait.clearance_m)
+            for foot, neutral in zip(feet, neutrals, strict=True)
         ]
-        shifting, self.sway, self.reach_m = fit_sway(feet, gait, self.path, robot.stance.height_m, reach_m)
+        self.reach_m = [min(disc, space) for disc, space in zip(discs, room, strict=True)]
+        shifting = fit_shift(gait, self._neutral, robot.stance.height_m, discs)
+        self.sway = PeriodicSway(self._neutral, shifting, robot.stance.height_m)
+        self._cycle_reach = CycleReach(gait, self.path, self.sway, self._neutral, discs)
         # Mean square distance of the feet from the body: a turning moment over it is the
         # force over arm of each.
         self.arm2_m2 = sum(x * x + y * y for x, y in self._neutral) / len(feet)
@@ -82,17 +87,25 @@ class GaitPlan:
         """The command that is walked for the one asked, and its cycle rate (1/s): scaled as
         a whole into the envelope and into what servos, reach and balance allow."""
         twist = fit_envelope(twist, self._robot.envelope)
-        cycle_s = self.gait.cycle_s
         if self._table:
             twist = fit_feet(twist, self._neutral, self._table.fastest_m_s)
-            vx, vy, yaw_rate = twist
-            velocities = [(vx - yaw_rate * y, vy + yaw_rate * x) for x, y in self._neutral]
-            cycle_s = self._table.cycle_s(velocities, slow_supply)
-        assert cycle_s is not None
-        twist = fit_stride(twist, cycle_s * self.gait.duty, self._neutral, self.reach_m)
+        cycle_s = self._cycle_s(twist, slow_supply)
+        within = fit_stride(twist, cycle_s * self.gait.duty, self._neutral, self.reach_m)
+        within = self._cycle_reach.fit(within, cycle_s)
+        if within is not twist:
+            cycle_s = self._cycle_s(within, slow_supply)  # slower steps may be quicker ones
         if self._strides:
-            twist = fit_steady(twist, cycle_s, self._strides)
-        return twist, 1.0 / cycle_s
+            within = fit_steady(within, cycle_s, self._strides)
+        return within, 1.0 / cycle_s
+
+    def _cycle_s(self, twist: Twist, slow_supply: float) -> float:
+        """Time of a cycle at that twist: the gait's own, or the shortest for the servos."""
+        if not self._table:
+            assert self.gait.cycle_s is not None
+            return self.gait.cycle_s
+        vx, vy, yaw_rate = twist
+        velocities = [(vx - yaw_rate * y, vy + yaw_rate * x) for x, y in self._neutral]
+        return self._table.cycle_s(velocities, slow_supply)
 
 
 def joint_speeds_rad_s(robot: Robot, supply_v: float) -> list[Vec3]:

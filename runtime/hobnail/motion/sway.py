@@ -10,6 +10,9 @@ import cmath
 import math
 from collections.abc import Sequence
 
+import numpy as np
+from numpy.typing import NDArray
+
 from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.glide import AT_REST, Motion, settle
 from hobnail.motion.schedule import intervals, leg_phase
@@ -91,6 +94,22 @@ class PeriodicSway:
             ax -= bend * k * k * along
             ay -= bend * k * k * across
         return x, y, ax, ay
+
+    def over_cycle(self, clocks: NDArray[np.float64], rate_hz: float) -> NDArray[np.float64]:
+        """The shift (m) at many times of the cycle, shape (5, times), which is linear in the
+        velocity: on the spot along x and y, then what is added for each m/s along the way
+        to go, then for each rad/s along x and y."""
+        if not self._terms:
+            return np.zeros((5, len(clocks)))
+        turns = np.array([term[0] for term in self._terms])
+        weights = np.where(turns, 2.0, 1.0) / (1.0 + self._height_term * (rate_hz * turns) ** 2)
+        waves = weights[:, None] * np.exp(2j * math.pi * np.outer(turns, clocks))
+        cycle_s = 1.0 / rate_hz
+        scale = np.array([1.0, 1.0, cycle_s, cycle_s, cycle_s])
+        shifts: NDArray[np.float64] = (
+            (scale[:, None] * np.array([term[1:] for term in self._terms]).T) @ waves
+        ).real
+        return shifts
 
 
 def _integrals(k: int, start: float, length: float) -> tuple[complex, complex]:
