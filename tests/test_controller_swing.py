@@ -65,7 +65,7 @@ def greatest_jumps(found: Record) -> list[float]:
 @ROBOTS
 def test_position_velocity_and_acceleration_are_continuous(robot: Robot) -> None:
     """Through lift-offs, re-aims, late changes and landings: with ticks of half the length the
-    greatest jumps of all three are half as great, which no real step would be."""
+    greatest jumps of all three are about half as great, which no real step would be."""
     robot = slow(robot)
     jumps = []
     for dt_s in (0.002, 0.001, 0.0005):
@@ -77,7 +77,7 @@ def test_position_velocity_and_acceleration_are_continuous(robot: Robot) -> None
         jumps.append(greatest_jumps(found))
     for coarse, fine in pairwise(jumps):
         for before, after in zip(coarse, fine, strict=True):
-            assert after <= 0.6 * before
+            assert after <= 0.65 * before
 
 
 @ROBOTS
