@@ -93,7 +93,7 @@ class GaitPlan:
         within = fit_stride(twist, cycle_s * self.gait.duty, self._neutral, self.reach_m)
         within = self._cycle_reach.fit(within, cycle_s)
         if within is not twist:
-            cycle_s = self._cycle_s(within, slow_supply)  # slower steps may be quicker ones
+            cycle_s = min(cycle_s, self._cycle_s(within, slow_supply))  # short steps may be quick ones
         if self._strides:
             within = fit_steady(within, cycle_s, self._strides)
         return within, 1.0 / cycle_s
