@@ -8,7 +8,6 @@ the pulses of the calibrated servos and checks what it is asked.
 from __future__ import annotations
 
 import math
-from bisect import bisect_right
 from dataclasses import dataclass
 from itertools import chain
 
@@ -59,7 +58,9 @@ class Controller:
     def __init__(self, robot: Robot, *, at_rest: bool = False) -> None:
         self.robot = robot
         self._maps = [JointMap(joint) for joint in robot.joints]
-        self._pieces = [(m.knots_rad, m.pieces, *m.pulse_limits_us) for m in self._maps]
+        # Most servos have a straight map, which needs no looking up.
+        straight = not any(m.knots_rad for m in self._maps)
+        self._lines = [m.pieces[0] for m in self._maps] if straight else None
         limits = [tuple(JointMap(joint).reachable_rad for joint in leg.joints) for leg in robot.legs]
         self._walker = Walker(robot, limits, at_rest=at_rest)
         self._supply_v = robot.supply.nominal_v
@@ -165,14 +166,13 @@ class Controller:
         walker = self._walker
         walker.tick(dt_s, self._steps)
         body, commanded = walker.body, walker.feed_forward.commanded_rad
-        pulses = []
-        for angle, (knots, pieces, low, high) in zip(
-            chain.from_iterable(commanded), self._pieces, strict=True
-        ):
-            offset, slope = pieces[bisect_right(knots, angle)] if knots else pieces[0]
-            pulse = offset + slope * angle
-            # The joint's limits are those of its pulses: beyond is rounding only.
-            pulses.append(low if pulse < low else high if pulse > high else pulse)
+        angles = chain.from_iterable(commanded)
+        if self._lines:
+            pulses = [
+                offset + slope * angle for angle, (offset, slope) in zip(angles, self._lines, strict=True)
+            ]
+        else:
+            pulses = [m.pulse_us(angle) for angle, m in zip(angles, self._maps, strict=True)]
         return Tick(
             body.joints_rad,
             commanded,

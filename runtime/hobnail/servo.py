@@ -13,6 +13,8 @@ from itertools import pairwise
 
 from hobnail.robot import Joint, Span
 
+ROUNDING_RAD = 1e-9
+
 
 class JointMap:
     """The way between one joint's angle and its servo's pulse, made ready for use.
@@ -35,9 +37,10 @@ class JointMap:
             self.pieces.append((pulse0 - slope * angle0, slope))
         self.pulse_limits_us = joint.pulse_limits_us
         ends = sorted(self.angle_rad(pulse) for pulse in joint.pulse_limits_us)
+        # A hair inside, so that rounding cannot carry a pulse past its limit.
         self.reachable_rad: Span = (
-            max(ends[0], joint.angle_limits_rad[0]),
-            min(ends[1], joint.angle_limits_rad[1]),
+            max(ends[0] + ROUNDING_RAD, joint.angle_limits_rad[0]),
+            min(ends[1] - ROUNDING_RAD, joint.angle_limits_rad[1]),
         )
 
     def pulse_us(self, angle_rad: float) -> float:

@@ -83,11 +83,13 @@ class LegCorrection:
         """What the servos must be sent for geometric angles (rad) that move at `speeds`
         (rad/s): `loaded` angles, ahead by what the servos trail, and across their slack
         to the side on which they bear their torque."""
-        (roll, hip, knee), torques = self.loaded(*angles, y, z, force_n)
+        (roll, hip, knee), (a, b, c) = self.loaded(*angles, y, z, force_n)
         va, vb, vc = speeds
         ta, tb, tc = self.trail_s
         sa, sb, sc = self.slope_nm_s
-        a, b, c = torques[0] + sa * va, torques[1] + sb * vb, torques[2] + sc * vc
+        a += sa * va
+        b += sb * vb
+        c += sc * vc
         ua, ub, uc = self.sure_nm
         da, db, dc = self.slack_rad
         return (
@@ -112,13 +114,11 @@ class LegCorrection:
         push = up * cos_roll - left * sin_roll
         # Minus f . dp/dq, for the ground's push and for the weights of the links.
         at_knee, at_foot = self._weights_n
-        torques = (
-            left * z - up * y + self._side_nm * cos_roll - sin_roll * (at_knee * upper_z + at_foot * shank_z),
-            push * foot_x - ahead * foot_z - cos_roll * (at_knee * upper_x + at_foot * shank_x),
-            push * shank_x - ahead * shank_z - cos_roll * at_foot * shank_x,
-        )
+        a = left * z - up * y + self._side_nm * cos_roll - sin_roll * (at_knee * upper_z + at_foot * shank_z)
+        b = push * foot_x - ahead * foot_z - cos_roll * (at_knee * upper_x + at_foot * shank_x)
+        c = push * shank_x - ahead * shank_z - cos_roll * at_foot * shank_x
         give_roll, give_hip, give_knee = self._give
-        roll_by, hip_by, knee_by = torques[0] * give_roll, torques[1] * give_hip, torques[2] * give_knee
+        roll_by, hip_by, knee_by = a * give_roll, b * give_hip, c * give_knee
         radius = self._radius_m
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
@@ -132,7 +132,7 @@ class LegCorrection:
             hip_by += forward * shank_x / folded
             knee_by -= forward * foot_x / folded
             roll_by += radius * (roll - self._neutral[0]) / z
-        return (roll + roll_by, hip + hip_by, knee + knee_by), torques
+        return (roll + roll_by, hip + hip_by, knee + knee_by), (a, b, c)
 
 
 def half_dead_band_rad(joint: Joint) -> float:
