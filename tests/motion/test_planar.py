@@ -42,7 +42,7 @@ def test_published_twists(twist: Pose, pose: Pose) -> None:
     assert exp_twist(*twist, 1.0) == pytest.approx(pose, rel=1e-8, abs=1e-12)
 
 
-@examples(300)
+@examples(100)
 @given(speeds, speeds, st.floats(-3.0, 3.0), times)
 def test_exponential_agrees_with_scipy(vx: float, vy: float, yaw_rate: float, time_s: float) -> None:
     generator = np.array([[0.0, -yaw_rate, vx], [yaw_rate, 0.0, vy], [0.0, 0.0, 0.0]])

@@ -61,7 +61,7 @@ def shifts(sway: PeriodicSway, pace: Pace) -> tuple[Array, Array]:
 paces = st.tuples(st.floats(-0.3, 0.3), st.floats(-0.2, 0.2), st.floats(-1.0, 1.0), st.floats(0.2, 2.5))
 
 
-@examples(40)
+@examples(15)
 @given(robot=st.sampled_from(fixed_robots()) | made_up(), pace=paces, share=st.floats(0.1, 1.0))
 def test_zero_moment_point_is_the_centroid_of_the_standing_feet(
     robot: Robot, pace: Pace, share: float
