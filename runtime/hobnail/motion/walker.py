@@ -43,6 +43,8 @@ LOAD_RATE_HZ = 40.0
 # Height above rest (m) over which the feet take the weight from the belly.
 LOADING_M = 0.01
 RETRIES = 8
+SHORTEST_LOWERING_S = 0.3  # left for lying down, however long planting the feet has taken
+HEIGHTS = 32  # tried on the way down, when lying down
 RETRY_SHARE = 0.9995
 
 _Saved = tuple[tuple[Pose, float, float], SwayState, SlewState, GlideState, list[FootState]]
@@ -145,7 +147,7 @@ class Walker:
     @property
     def stance(self) -> tuple[bool, ...]:
         """Which feet are on the ground."""
-        return tuple(foot.swing is None for foot in self._feet)
+        return tuple([foot.swing is None for foot in self._feet])
 
     @property
     def walking(self) -> bool:
@@ -169,6 +171,9 @@ class Walker:
     def tick(self, dt_s: float, steps_rad: Sequence[Vec3]) -> None:
         """Move on by `dt_s`, no joint by more than its step (rad, leg by leg)."""
         self._decide()
+        if self._lowering and self._lowering[0] is not None:
+            # Time is running while the feet are planted.
+            self._lowering = (max(self._lowering[0] - dt_s, SHORTEST_LOWERING_S),)
         body = self.body
         joints = body.joints_rad
         saved = self._save()
@@ -199,8 +204,7 @@ class Walker:
         if not self._walking:
             if self._wanted == STILL:
                 if self._lowering:
-                    rest = self._robot.stance.rest_height_m
-                    self._posture.aim([rest, 0.0, 0.0, 0.0, 0.0, 0.0], self._lowering[0])
+                    self._posture.aim([self._lowest_m(), 0.0, 0.0, 0.0, 0.0, 0.0], self._lowering[0])
                     self._lowering = None
                 return
             self._start()
@@ -360,6 +364,20 @@ class Walker:
             if gap > max(gaps) - 1e-9
         )
         return first
+
+    def _lowest_m(self) -> float:
+        """Height to lie down to: rest height, or as near to it as the legs fold over feet that
+        were planted in mid-stride."""
+        rest, height = self._robot.stance.rest_height_m, self._posture.value[0]
+        body = WholeBody()
+        lowest = height
+        for step in range(1, HEIGHTS + 1):
+            lower = height + (rest - height) * step / HEIGHTS
+            body.solve(self._feet, self._pose, NONE, (lower, 0.0, 0.0, 0.0, 0.0, 0.0))
+            if body.out_of_reach:
+                return lowest
+            lowest = lower
+        return rest
 
     def _retarget(self) -> None:
         """Bring the command within what may be asked, and start to slew towards it."""
