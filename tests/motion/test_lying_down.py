@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import pytest
-from robots import bramble, juniper
 
 from hobnail.controller import Controller
 from hobnail.robot import Robot
+from robots import bramble, juniper
 
 WITHIN_S = 1.5
 

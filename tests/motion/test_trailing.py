@@ -5,10 +5,10 @@ from __future__ import annotations
 from dataclasses import replace
 
 import pytest
-from robots import juniper
 
 from hobnail.controller import Controller
 from hobnail.robot import Robot
+from robots import juniper
 
 
 def with_trail(trail_s: float | None) -> Robot:
