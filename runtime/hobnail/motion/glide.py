@@ -22,76 +22,119 @@ def minimum_jerk(u: float) -> float:
     return u * u * u * (10.0 + u * (6.0 * u - 15.0))
 
 
-SlewState = tuple[list[float], list[float], list[float], float, bool]
+Line = tuple[float, float]  # offset from the target, its slope
+SlewState = tuple[list[float], list[float], list[float], list[Line], float, list[Line], float, bool]
+
+LEVEL: Line = (0.0, 0.0)
 
 
 class Slew:
     """Several numbers that move together to a target by cubic pieces.
 
+    A motion is a sum of two, as in `Glide`: the way to the target, which all components
+    go in the same time, and what it cannot use of the slope before it, taken off in EASE_S.
+    So no slope is carried on for the time of a long new motion, past target and range.
+
     The lists are replaced, never changed in place, so that `state` is a cheap
     snapshot which `restore` takes back.
     """
 
-    __slots__ = ("moving", "remaining_s", "slope", "target", "value")
+    __slots__ = ("_left_s", "_old", "_old_left_s", "_way", "moving", "slope", "target", "value")
 
     def __init__(self, value: Sequence[float]) -> None:
         self.value = list(value)
         self.target = list(value)
         self.slope = [0.0] * len(self.value)
-        self.remaining_s = 0.0
+        self._way: list[Line] = [LEVEL] * len(self.value)
+        self._left_s = 0.0
+        self._old: list[Line] = list(self._way)
+        self._old_left_s = 0.0
         self.moving = False
+
+    @property
+    def remaining_s(self) -> float:
+        """Time until all is at its target."""
+        return max(self._left_s, self._old_left_s) if self.moving else 0.0
 
     def aim(self, target: Sequence[float], rates: Sequence[float]) -> None:
         """Set a new target; no component's slope will pass its rate (per s)."""
         time = 0.0
         for value, slope, goal, rate in zip(self.value, self.slope, target, rates, strict=True):
             change = goal - value
-            # A cubic from rest peaks at 1.5 times its mean slope.  One that first has to
-            # turn round needs a longer time to stay under the same peak.
+            # A cubic from rest peaks at 1.5 times its mean slope.  One whose old slope first
+            # has to turn round, and then swings back by a third, needs a longer time.
             need = 1.5 * abs(change) / rate
-            if change * slope < 0.0:
-                need *= 1.4143
-            # An old slope beside a small change is taken off gently as well.
-            time = max(time, need, EASE_S * abs(slope) / rate)
+            time = max(time, need * 1.5 if change * slope < 0.0 else need)
+        ways, olds = [], []
+        for value, slope, goal in zip(self.value, self.slope, target, strict=True):
+            gap = value - goal
+            # A cubic stays between its ends when it starts towards the end at no more than
+            # three times its mean slope.
+            keep = slope if 0.0 < -slope * gap * time <= 3.0 * gap * gap else 0.0
+            ways.append((gap, keep))
+            olds.append((0.0, slope - keep))
         self.target = list(target)
-        self.remaining_s = time
-        self.moving = time > 0.0 or any(self.slope)
+        self._way, self._left_s = ways, time
+        self._old, self._old_left_s = olds, EASE_S if any(self.slope) else 0.0
+        self.moving = max(time, self._old_left_s) > 0.0
 
     def jump(self, index: int, value: float) -> None:
         """Set one component at once, when nothing that moves depends on it."""
         self.value = [*self.value[:index], value, *self.value[index + 1 :]]
         self.slope = [*self.slope[:index], 0.0, *self.slope[index + 1 :]]
+        self._way = [*self._way[:index], (value - self.target[index], 0.0), *self._way[index + 1 :]]
+        self._old = [*self._old[:index], LEVEL, *self._old[index + 1 :]]
 
     def advance(self, time_s: float) -> None:
         """Move on by `time_s`."""
-        left = self.remaining_s
-        if time_s >= left:
-            self.value = self.target
-            self.slope = [0.0] * len(self.target)
-            self.remaining_s = 0.0
-            self.moving = False
-            return
-        s = time_s / left
-        r = 1.0 - s
-        keep = r * r * (1.0 + 2.0 * s)
-        carry = time_s * r * r
-        fall = -6.0 * s * r / left
-        hold = r * (1.0 - 3.0 * s)
-        value, slope = [], []
-        for x, v, goal in zip(self.value, self.slope, self.target, strict=True):
-            gap = x - goal
-            value.append(goal + gap * keep + v * carry)
-            slope.append(gap * fall + v * hold)
-        self.value, self.slope = value, slope
-        self.remaining_s = left - time_s
+        self._way = [_level_out(line, time_s, self._left_s) for line in self._way]
+        self._old = [_level_out(line, time_s, self._old_left_s) for line in self._old]
+        self.moving = time_s < max(self._left_s, self._old_left_s)
+        self._left_s -= time_s
+        self._old_left_s -= time_s
+        self.value = [
+            goal + way[0] + old[0] for goal, way, old in zip(self.target, self._way, self._old, strict=True)
+        ]
+        self.slope = [way[1] + old[1] for way, old in zip(self._way, self._old, strict=True)]
 
     def state(self) -> SlewState:
         """A snapshot for `restore`."""
-        return self.value, self.slope, self.target, self.remaining_s, self.moving
+        return (
+            self.value,
+            self.slope,
+            self.target,
+            self._way,
+            self._left_s,
+            self._old,
+            self._old_left_s,
+            self.moving,
+        )
 
     def restore(self, state: SlewState) -> None:
         """Go back to a snapshot."""
-        self.value, self.slope, self.target, self.remaining_s, self.moving = state
+        (
+            self.value,
+            self.slope,
+            self.target,
+            self._way,
+            self._left_s,
+            self._old,
+            self._old_left_s,
+            self.moving,
+        ) = state
+
+
+def _level_out(line: Line, time_s: float, remaining_s: float) -> Line:
+    """A line after `time_s` of the cubic that brings it to zero and level in `remaining_s`."""
+    if time_s >= remaining_s:
+        return LEVEL
+    gap, v = line
+    s = time_s / remaining_s
+    r = 1.0 - s
+    return (
+        r * r * (gap * (1.0 + 2.0 * s) + v * time_s),
+        r * (v * (1.0 - 3.0 * s) - gap * 6.0 * s / remaining_s),
+    )
 
 
 Motion = tuple[float, float, float]  # offset from the target, its slope, its curvature
