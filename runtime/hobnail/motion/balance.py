@@ -56,7 +56,7 @@ def neutral_feet(robot: Robot) -> list[Vec2]:
     ]
     legs = [LegKinematics(leg) for leg in robot.legs]
     shift = (0.0, 0.0)
-    for _ in range(6):
+    for _ in range(12):
         feet = [(x + shift[0], y + shift[1]) for x, y in base]
         joints = []
         for leg, kinematics, (x, y) in zip(robot.legs, legs, feet, strict=True):

@@ -21,7 +21,7 @@ INSTANTS = 24  # of the cycle
 # Of the disc, what the shift on the spot may take: the rest is for strides.
 SHIFT_SHARE = 0.6
 # Of the disc, what may be planned with: instants lie between those that are looked at.
-PLANNED_SHARE = 0.98
+PLANNED_SHARE = 0.95
 
 
 def fit_shift(gait: Gait, feet: Sequence[Vec2], height_m: float, discs_m: Sequence[float]) -> Gait:
