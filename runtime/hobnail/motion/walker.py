@@ -24,6 +24,7 @@ from hobnail.motion.plan import GaitPlan
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist
 from hobnail.motion.sway import NONE, BodyShift, SwayState
 from hobnail.motion.whole_body import WholeBody
+from hobnail.motion.yielding import Yielding
 from hobnail.robot import Gait, Robot, Span, Vec2, Vec3
 
 STILL: Twist = (0.0, 0.0, 0.0)
@@ -47,7 +48,7 @@ SHORTEST_LOWERING_S = 0.3  # left for lying down, however long planting the feet
 HEIGHTS = 32  # tried on the way down, when lying down
 RETRY_SHARE = 0.9995
 
-_Saved = tuple[tuple[Pose, float, float], SwayState, SlewState, GlideState, list[FootState]]
+_Saved = tuple[tuple[Pose, float, float, float], SwayState, SlewState, GlideState, list[FootState]]
 
 
 class Walker:
@@ -92,7 +93,8 @@ class Walker:
         self.velocity: Twist = STILL
         self.clamped = 0
         self.body = WholeBody()
-        self._solve()
+        self._yielding = Yielding(robot.stance.height_m)
+        self._solve(0.0)
         self.feed_forward = FeedForward(self._feet, self.body, self._drive())
 
     # -- what is asked of it -------------------------------------------------
@@ -137,7 +139,7 @@ class Walker:
     @property
     def height_m(self) -> float:
         """Body origin above the ground."""
-        return self._posture.value[0]
+        return self._yielding.height_m
 
     @property
     def posture_target(self) -> list[float]:
@@ -161,6 +163,7 @@ class Walker:
             self._walking
             or self._posture.moving
             or self._shift.moving
+            or self._yielding.moving
             or self._wanted != STILL
             or self._next_plan
             or self._lowering
@@ -180,7 +183,7 @@ class Walker:
         time_s = dt_s
         for attempt in range(RETRIES):
             self._advance(time_s)
-            self._solve()
+            self._solve(time_s)
             excess = excess_step(joints, body.joints_rad, steps_rad)
             if excess <= 1.0 or attempt == RETRIES - 1:
                 break
@@ -441,14 +444,16 @@ class Walker:
 
     # -- angles --------------------------------------------------------------
 
-    def _solve(self) -> None:
-        self.body.solve(self._feet, self._pose, self._shift.value, self._posture.value)
+    def _solve(self, time_s: float) -> None:
+        shift, posture = self._shift.value, self._posture.value
+        self._yielding.solve(self.body, self._feet, self._pose, shift, posture, time_s)
 
     def _drive(self) -> Drive:
         """What carries the body and drives it and the legs in the air along."""
-        raised = (self._posture.value[0] - self._robot.stance.rest_height_m) / LOADING_M
+        raised = (self.height_m - self._robot.stance.rest_height_m) / LOADING_M
         mass = self._mass_kg * min(max(raised, 0.0), 1.0)
         (ahead, left), slope = self._shift.acceleration, self._pace.slope
+        ahead, left = self._yielding.share * ahead, self._yielding.share * left
         c, s = math.cos(self._pose[2]), math.sin(self._pose[2])
         x, y, spin = self._swing_drive
         return (
@@ -462,7 +467,7 @@ class Walker:
 
     def _save(self) -> _Saved:
         return (
-            (self._pose, self._clock, self._hold),
+            (self._pose, self._clock, self._hold, self._yielding.share),
             self._shift.state(),
             self._pace.state(),
             self._posture.state(),
@@ -471,7 +476,7 @@ class Walker:
 
     def _restore(self, saved: _Saved) -> None:
         place, shift, pace, posture, feet = saved
-        self._pose, self._clock, self._hold = place
+        self._pose, self._clock, self._hold, self._yielding.share = place
         self._shift.restore(shift)
         self._pace.restore(pace)
         self._posture.restore(posture)
