@@ -33,7 +33,9 @@ STALL_S = 0.203
 GRAVITY_M_S2 = 9.81
 ON_FEET = frozenset({"standing", "walking"})
 SETTLED_S = 2.5  # after a change of command: the body over its new path
-BESIDE_S = 0.05
+# About the edge of its support; at about this tilt a lifted foot (30 mm of clearance, some
+# 180 mm from the edge) is on the ground again and ends the tipping.
+TILT_DEG = 9.0
 
 
 def late_ticks(state: str) -> str:
@@ -125,8 +127,9 @@ def feet_lift(state: str) -> str:
 
     Judged by the zero-moment point of the commanded motion: quicker gaits
     balance in motion, on few feet.  In steady walking it has to be inside the
-    support.  Right after a change of mind it may be outside for BESIDE_S, too
-    short for the body, an inverted pendulum, to begin to fall.
+    support.  Right after a change of mind it may be outside for a moment, as
+    long as the body, a rigid inverted pendulum, does not tip by more than
+    TILT_DEG; in the physics engine it tips by less than half of that.
     """
     with robot_in(state) as world:
         gait = slowest_gait(world.robot)
@@ -142,44 +145,42 @@ def feet_lift(state: str) -> str:
             changed_s = world.clock.now_s
             world.ask("walk", vx=vx, vy=vy, yaw_rate=yaw_rate, ttl_s=10.0)
             world.run(6.0, look)
-        steady_m, worst_m, beside_s = _margins(world.robot, gait, seen)
+        steady_m, tilt_deg = _balance(world.robot, gait, seen)
         assert len(steady_m) > 100, f"feet were in the air in {len(steady_m)} ticks only"
-        assert min(steady_m) > 0.0, (
-            f"in steady walking the body was {-1e3 * min(steady_m):.1f} mm beside its support"
-        )
-        assert beside_s <= BESIDE_S, (
-            f"the body was beside its support for {beside_s:.2f} s, {-1e3 * worst_m:.1f} mm"
-        )
+        assert min(steady_m) > 0.0, f"in steady walking {-1e3 * min(steady_m):.1f} mm beside its support"
+        assert tilt_deg <= TILT_DEG, f"it tips by {tilt_deg:.1f} degrees after a change of command"
         world.ask("stop", category=1)
         world.until("stopped", 2.0)
         prove_latched(world)
         end(world)
     return (
         f"5 m/s asked of the {gait}: slowed; {1e3 * min(steady_m):.0f} mm of support left in steady walking, "
-        f"{1e3 * worst_m:.0f} mm at worst after a change"
+        f"tips by {tilt_deg:.1f} degrees at worst after a change"
     )
 
 
-def _margins(robot: Robot, gait: str, seen: Sequence[tuple[float, Tick]]) -> tuple[list[float], float, float]:
-    """With feet in the air: what is left to the edge of the support (m) in steady walking, the
-    least of all, and for how long at a time (s) it was less than nothing."""
-    steady, worst, beside, longest = [], math.inf, 0, 0
+def _balance(robot: Robot, gait: str, seen: Sequence[tuple[float, Tick]]) -> tuple[list[float], float]:
+    """With feet in the air in steady walking, what is left to the edge of the support (m); and how
+    far the body tips about that edge at worst (degrees)."""
+    steady, tilt, rate, worst = [], 0.0, 0.0, 0.0
     places = [_mass_on_ground(robot, tick) for _, tick in seen]
-    per_s2 = 1.0 / robot.period_s**2
+    dt_s = robot.period_s
     for index in range(1, len(seen) - 1):
         since_s, tick = seen[index]
-        if tick.gait != gait or all(tick.stance):
+        if tick.gait != gait:
             continue
         (x0, y0, _), (x, y, height), (x1, y1, _) = places[index - 1 : index + 2]
-        lag = height / GRAVITY_M_S2 * per_s2  # of the zero-moment point behind the mass, a m/s^2
+        lag = height / GRAVITY_M_S2 / dt_s**2  # of the zero-moment point behind the mass, a m/s^2
         px, py = x - lag * (x1 - 2.0 * x + x0), y - lag * (y1 - 2.0 * y + y0)
         left_m = margin_m(_standing_on_ground(tick), (px, py))
-        worst = min(worst, left_m)
-        beside = beside + 1 if left_m <= 0.0 else 0
-        longest = max(longest, beside)
-        if since_s > SETTLED_S:
+        rate += dt_s * GRAVITY_M_S2 / height * (tilt - left_m / height)
+        tilt += dt_s * rate
+        if tilt <= 0.0:  # all feet that should stand do
+            tilt = rate = 0.0
+        worst = max(worst, tilt)
+        if since_s > SETTLED_S and not all(tick.stance):
             steady.append(left_m)
-    return steady, worst, longest * robot.period_s
+    return steady, math.degrees(worst)
 
 
 def _mass_on_ground(robot: Robot, tick: Tick) -> tuple[float, float, float]:
