@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import math
+import re
 import subprocess
 import sys
 from collections.abc import Callable
@@ -352,6 +353,10 @@ CROSS_CHECKS = [
         "gaits[0].lift_mm",
         "a lift of 120 mm",
     ),
+    ("roll_deg: 11", "roll_deg: 40", "posture.roll_deg", "allowed: at most "),
+    ("pitch_deg: 11", "pitch_deg: 44", "posture.pitch_deg", "allowed: at most "),
+    ("yaw_deg: 14", "yaw_deg: 60", "posture.yaw_deg", "allowed: at most "),
+    ("lean_mm: 30", "lean_mm: 200", "posture.lean_mm", "allowed: at most "),
     ("spread_mm: 0 ", "spread_mm: -100 ", "stance.spread_mm", "own side"),
     ("com_mm: [0, 0, -15]", "com_mm: [300, 0, -15]", "stance.height_mm", "further ahead"),
     (
@@ -370,6 +375,18 @@ def test_cross_check(told: Told, old: str, new: str, path: str, word: str) -> No
         assert problems == []
         return
     assert any(f": {path}: " in problem and word in problem for problem in problems), problems
+
+
+@pytest.mark.parametrize(
+    ("key", "old", "new", "more"),
+    [("roll_deg", 11, 40, 1), ("pitch_deg", 11, 44, 1), ("yaw_deg", 14, 60, 2), ("lean_mm", 30, 200, 5)],
+)
+def test_what_a_posture_is_allowed_is_taken(told: Told, key: str, old: int, new: int, more: int) -> None:
+    """The limit told in the problem is good; a little more is not."""
+    (problem,) = told((f"{key}: {old}", f"{key}: {new}"))
+    (limit,) = re.findall(r"at most ([0-9.]+) (?:deg|mm)\.", problem)
+    assert told((f"{key}: {old}", f"{key}: {limit}")) == []
+    assert told((f"{key}: {old}", f"{key}: {float(limit) + more}")) != []
 
 
 @pytest.mark.parametrize(

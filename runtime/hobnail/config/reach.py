@@ -1,7 +1,7 @@
 """Checks that the legs can put their feet where the configured heights ask for them; m and rad.
 
-Standing, lying, at either end of the posture's heights and at the top of each
-gait's lift, every joint must be within its limits with the feet in their
+Standing, lying, at either end of each of the posture's limits and at the top of
+each gait's lift, every joint must be within its limits with the feet in their
 neutral places.  Nothing here looks at walking: that is for `hobnail check`.
 """
 
@@ -15,11 +15,20 @@ from hobnail.config.fields import Section
 from hobnail.config.strict_yaml import Listing, Node, Report
 from hobnail.config.tables import JOINT_NAMES
 from hobnail.motion.balance import neutral_feet
+from hobnail.motion.foot import Foot
 from hobnail.motion.gaits import BUILT_IN_GAITS, LIFT_SHARE
 from hobnail.motion.leg import LegKinematics
+from hobnail.motion.whole_body import WholeBody
 from hobnail.robot import Gait, Leg, Robot, Vec2
 from hobnail.servo import reachable_rad
 
+# Key of a posture, its places in (height, roll, pitch, yaw, lean x, lean y), its unit and that in SI.
+_POSTURES = (
+    ("roll_deg", (1,), "deg", math.radians(1.0)),
+    ("pitch_deg", (2,), "deg", math.radians(1.0)),
+    ("yaw_deg", (3,), "deg", math.radians(1.0)),
+    ("lean_mm", (4, 5), "mm", 0.001),
+)
 CLEAR_M = 0.001  # feet no nearer to the middle, and to each other, than this
 
 
@@ -77,8 +86,10 @@ def check_reach(section: Section, report: Report) -> None:
 
 
 def check_balanced_reach(section: Section, robot: Robot, report: Report) -> None:
-    """The same for a whole robot, feet moved so that its centre of mass lies over them."""
+    """The same for a whole robot, feet moved so that its centre of mass lies over them; and
+    that it can take each of the postures that it may be told, one by one."""
     feet = neutral_feet(robot)
+    _check_postures(section, robot, feet, report)
     shift_x = (feet[0][0] - robot.legs[0].hip_m[0] - robot.stance.forward_m) * 1000.0
     hint = f"To bring the centre of mass over them, the feet stand {abs(shift_x):.0f} mm "
     hint += "further ahead." if shift_x > 0.0 else "further back."
@@ -126,6 +137,41 @@ def _check_apart(legs: Sequence[Leg], feet: Sequence[Vec2], stance: Section, rep
                 report.add(
                     stance.at("spread_mm"), found, f"at least {nearest * 1000.0:g} mm", "See their hip_mm."
                 )
+                return False
+    return True
+
+
+def _check_postures(section: Section, robot: Robot, places: Sequence[Vec2], report: Report) -> None:
+    """Each tilt and lean that is written, by itself, either way, standing at stance height."""
+    height_m = robot.stance.height_m
+    feet = []
+    for leg, place in zip(robot.legs, places, strict=True):
+        spans = tuple(reachable_rad(joint) for joint in leg.joints)
+        feet.append(Foot(leg, place, height_m, spans, 1.0 / len(robot.legs)))
+    if not _takes(feet, height_m, (1,), 0.0):
+        return  # told at the height itself
+    posture = section.values["posture"]
+    for key, indices, unit, size in _POSTURES:
+        most = posture.values.get(key, 0.0)
+        if _takes(feet, height_m, indices, most):
+            continue
+        good = 0.0
+        while _takes(feet, height_m, indices, good + 0.01 * most):
+            good += 0.01 * most
+        allowed = f"at most {math.floor(10.0 * good / size) / 10.0:g} {unit}"
+        hint = "Beyond, standing at stance.height_mm, a leg is out of reach or a joint at its limit."
+        report.add(posture.at(key), f"{most / size:g} {unit}", allowed, hint)
+
+
+def _takes(feet: Sequence[Foot], height_m: float, indices: Sequence[int], value: float) -> bool:
+    """Whether all legs reach with each of these parts of the posture at that value, either way."""
+    body = WholeBody()
+    for index in indices:
+        for signed in (value, -value):
+            posture = [height_m, 0.0, 0.0, 0.0, 0.0, 0.0]
+            posture[index] = signed
+            body.solve(feet, (0.0, 0.0, 0.0), (0.0, 0.0), posture)
+            if body.out_of_reach:
                 return False
     return True
 
