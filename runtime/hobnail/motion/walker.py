@@ -189,11 +189,11 @@ class Walker:
                 break
             self._restore(saved)
             # Nearly linear in time: one more try is the rule, and it leaves the slow-down a
-            # smooth function of the path.  What is not linear is met by halving; what is a
+            # smooth function of the path.  What is not linear is met by quartering; what is a
             # step in however short a time, by the clamp, so that the robot does not stand
             # still for good.  The feed-forward has no say: it follows as the servos can.
             share = RETRY_SHARE / excess
-            time_s *= share if attempt < 2 else min(share, 0.5)
+            time_s *= share if attempt < 2 else min(share, 0.25)
         self.clamped = 0
         if excess > 1.0:
             body.joints_rad, self.clamped = clamp_steps(joints, body.joints_rad, steps_rad)
