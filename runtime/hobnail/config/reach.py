@@ -155,9 +155,9 @@ def _check_postures(section: Section, robot: Robot, places: Sequence[Vec2], repo
         most = posture.values.get(key, 0.0)
         if _takes(feet, height_m, indices, most):
             continue
-        good = 0.0
-        while _takes(feet, height_m, indices, good + 0.01 * most):
-            good += 0.01 * most
+        shares = (percent / 100.0 for percent in range(1, 101))
+        beyond = next(share for share in shares if not _takes(feet, height_m, indices, share * most))
+        good = most * (beyond - 0.01)
         allowed = f"at most {math.floor(10.0 * good / size) / 10.0:g} {unit}"
         hint = "Beyond, standing at stance.height_mm, a leg is out of reach or a joint at its limit."
         report.add(posture.at(key), f"{most / size:g} {unit}", allowed, hint)
