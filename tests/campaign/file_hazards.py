@@ -15,9 +15,9 @@ from unittest import mock
 
 from campaign.acts import end, expect_fault, robot_in
 from campaign.stepping import PATIENCE_S
-from campaign.world import CONFIG, World, brisk, demo
+from campaign.world import CONFIG, EX_CONFIG, World, brisk, demo
 from hobnail.config import load_robot
-from hobnail.errors import EX_CONFIG, ConfigError
+from hobnail.errors import ConfigError
 from hobnail.service.keeper import LOOK_EVERY_S, Keeper
 from hobnail.service.recorder import HEADER_BYTES, RING_NAME, Recorder, Row, last_state, read_ring
 from hobnail.service.writer import EventLog, Job, Writer
@@ -248,6 +248,11 @@ def evidence(state: str) -> str:
         for cut in range(HEADER_BYTES + (last - 1) * row_bytes, HEADER_BYTES + last * row_bytes + 1):
             whole = (cut - HEADER_BYTES) // row_bytes
             assert len(_rows(directory, data[:cut])) == whole, f"cut at byte {cut}"
+        damaged = bytearray(data)
+        damaged[HEADER_BYTES + last * row_bytes - row_bytes // 2] ^= 1
+        assert len(_rows(directory, bytes(damaged))) == last - 1, (
+            "a row with a wrong bit in it is taken for whole"
+        )
     return f"{last} rows up to {rows[-1].state}; cut at each of {row_bytes} bytes, every whole row is read"
 
 

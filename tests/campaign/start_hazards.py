@@ -18,9 +18,8 @@ from pathlib import Path
 
 from campaign.acts import PULSING, WAYS_IN, end, heed, moves, refused, robot_in, silent, still
 from campaign.stepping import PATIENCE_S
-from campaign.world import CONFIG, World, demo
+from campaign.world import CONFIG, EX_CONFIG, World, demo
 from command_line import subprocess_environment
-from hobnail.errors import EX_CONFIG
 from hobnail.service.client import Client
 from hobnail.service.recorder import Recorder, last_posture
 from hobnail_drivers.chip_file import open_chip_file

@@ -36,6 +36,7 @@ from hobnail_drivers.pca9685 import Pca9685Driver
 from hobnail_drivers.pca9685_chip import Chip
 
 CONFIG = Path(__file__).parents[2] / "config"
+EX_CONFIG = 78  # sysexits.h; the unit does not restart on it
 ROBOT = "CAMPAIGN_ROBOT"  # in the environment, so that processes of their own have it too
 STATES = tuple(str(state) for state in State)
 
