@@ -244,12 +244,12 @@ def test_parameters_by_position() -> None:
 
 def test_posture_and_gait_reach_the_controller() -> None:
     rig = in_state("standing")
-    rig.ask("posture", height_m=0.15)
+    rig.ask("posture", height_m=0.14)
     rig.ask("gait", name=juniper().gaits[1].name)
     rig.go(3.0)
     assert rig.frame is not None
     assert rig.frame.tick is not None
-    assert rig.frame.tick.height_m == pytest.approx(0.15, abs=1e-3)
+    assert rig.frame.tick.height_m == pytest.approx(0.14, abs=1e-3)
     assert rig.frame.tick.gait == juniper().gaits[1].name
 
 

@@ -190,7 +190,7 @@ def test_a_route_that_begins_in_mid_walk_waits_for_a_stand() -> None:
 def test_posture_and_lean_lead_a_route_nowhere() -> None:
     # The body leans and turns over its feet; the walk after it goes on in the old direction.
     robot = ROBOTS["juniper"]
-    lean_m, yaw_rad = 0.012, 0.13
+    lean_m, yaw_rad = 0.02, 0.2
     steps: list[Step] = [straight(0.2), Pose(lean_m=(lean_m, 0.0), yaw_rad=yaw_rad), straight(0.2), turn(90)]
     walk = Walk(steps, robot).to_the_end()
     assert walk.runner.failure == ""

@@ -107,7 +107,7 @@ def test_all_problems_at_once_each_with_its_place(tmp_path: Path) -> None:
             "Did you mean forward_mm?",
             "found turn_deg and wait_s; allowed: exactly one of forward_mm",
             "found no action",
-            "found height 400 mm; allowed: 145 to 185 mm, for juniper",
+            "found height 400 mm; allowed: 120 to 195 mm, for juniper",
             "found gait gallop; allowed: trot or crawl or pace or amble, for juniper",
             "found 0 %; allowed: a number from 5 to 100 %",
             "found nothing; allowed: a number from -3600 to 3600 deg",
