@@ -198,7 +198,7 @@ def anvil() -> Robot:
         foot_radius_m=0.015,
         servo=Servo(name="strong", speed_rad_s=6.0, torque_nm=4.0, rated_v=7.4, stiffness_nm_rad=25.0),
         height_m=0.12,
-        envelope=Envelope(forward_m_s=0.08, sideways_m_s=0.05, turn_rad_s=0.3),
+        envelope=Envelope(forward_m_s=0.12, sideways_m_s=0.08, turn_rad_s=0.5),
     )
 
 
