@@ -20,8 +20,9 @@ from hobnail.motion.balance import GRAVITY_M_S2, neutral_feet
 from hobnail.motion.foot import LAST_AIM, Foot, FootState, Swing
 from hobnail.motion.glide import AT_REST, Glide, GlideState, Slew, SlewState, minimum_jerk
 from hobnail.motion.joint_steps import Drive, FeedForward, clamp_steps, excess_step
+from hobnail.motion.pacing import fit_stride
 from hobnail.motion.plan import GaitPlan
-from hobnail.motion.planar import Pose, Twist, compose, exp_twist
+from hobnail.motion.planar import Pose, Twist, compose, exp_twist, point_speed
 from hobnail.motion.sway import NONE, BodyShift, SwayState
 from hobnail.motion.whole_body import WholeBody
 from hobnail.motion.yielding import Yielding
@@ -43,6 +44,8 @@ START_SHARE = 0.2
 LOAD_RATE_HZ = 40.0
 # Height above rest (m) over which the feet take the weight from the belly.
 LOADING_M = 0.01
+# A body that goes no faster stands, when its gait is to change.
+STANDING_M_S = 1e-4
 RETRIES = 8
 SHORTEST_LOWERING_S = 0.3  # left for lying down, however long planting the feet has taken
 HEIGHTS = 32  # tried on the way down, when lying down
@@ -86,6 +89,7 @@ class Walker:
         self._swing_drive: Vec3 = (0.0, 0.0, 0.0)
         self._walking = False  # the gait clock runs
         self._checking = False  # feet may be led out of reach: look ahead every tick
+        self._landing = False  # slow enough to change the gait: no foot may lift any more
         self._planting = False  # once the body is still no foot may lift any more
         self._lowering: tuple[float | None] | None = None  # lie down when still, within a time
         self.slow_supply = 1.0  # by how much the supply slows the servos, >= 1
@@ -109,13 +113,16 @@ class Walker:
                 self._retarget()
 
     def choose_gait(self, gait: Gait) -> None:
-        """Change the gait: feet in the air land first, then the new one starts."""
+        """Change the gait: the body slows down until feet may wait for their turn in the new
+        one, then feet in the air land, then the new one starts."""
         plan = self._plans[gait.name]
         if plan is self._plan or not self._walking:
             self._plan, self._next_plan = plan, None
         else:
             self._next_plan = plan
-            self._checking = True
+        self._landing = False
+        if self._walking:
+            self._retarget()
 
     def set_posture(self, target: Sequence[float], within_s: float | None = None) -> None:
         """Glide the posture to (height, roll, pitch, yaw, lean x, lean y), m and rad."""
@@ -330,7 +337,7 @@ class Walker:
     # -- starting, changing, stopping ----------------------------------------
 
     def _may_lift(self, foot: Foot) -> bool:
-        if self._hold > 0.0 or self._next_plan:
+        if self._hold > 0.0 or self._landing:
             return False
         if self._pace.moving or self._wanted != STILL:
             return True
@@ -342,6 +349,7 @@ class Walker:
         plan = self._plan
         shifts = plan.sway.leads or self._shift.value != NONE
         self._walking = True
+        self._landing = False
         self._hold = START_SHIFT if shifts else 0.0
         self._clock = (self._first_lift() - self._hold - 1e-9) % 1.0
         for foot, phase in zip(self._feet, plan.gait.phases, strict=True):
@@ -386,7 +394,27 @@ class Walker:
         """Bring the command within what may be asked, and start to slew towards it."""
         self._checking = True
         self._fitted, rate = self._plan.fit(self._wanted, self.slow_supply)
+        if self._next_plan:
+            self._fitted = self._slowed_for_change(self._next_plan, rate)
         self._aim_pace(self._fitted, rate)
+
+    def _slowed_for_change(self, plan: GaitPlan, rate_hz: float) -> Twist:
+        """As much of the command as leaves all feet in reach while those in the air land and
+        the others wait for their turn in the next gait."""
+        _, next_hz = plan.fit(self._wanted, self.slow_supply)
+        duty = self._plan.gait.duty
+        wait_s = (0.5 * duty + 1.0 - duty) / rate_hz + (1.0 + START_SHIFT) / next_hz
+        feet = [foot.neutral for foot in self._feet]
+        reach = [min(pair) for pair in zip(self._plan.reach_m, plan.reach_m, strict=True)]
+        return fit_stride(self._fitted, 2.0 * wait_s, feet, reach)
+
+    def _slow_enough(self) -> bool:
+        """Whether no foot goes faster over the ground than it is to."""
+        now = (self._pace.value[0], self._pace.value[1], self._pace.value[2])
+        return all(
+            point_speed(now, *foot.neutral) <= 1.02 * point_speed(self._fitted, *foot.neutral) + STANDING_M_S
+            for foot in self._feet
+        )
 
     def _aim_pace(self, twist: Twist, rate_hz: float) -> None:
         envelope = self._robot.envelope
@@ -408,7 +436,7 @@ class Walker:
             wait = (duty - foot.phase) % 1.0
             if wait < self._hold:
                 wait += 1.0
-            if self._next_plan:
+            if self._landing:
                 wait = 1.0  # feet wait for the new gait
             x, y = foot.neutral
             time = wait / rate
@@ -427,11 +455,14 @@ class Walker:
 
     def _change_or_stop(self) -> None:
         """With every foot down: go over to the gait that waits, or end the walk."""
+        if self._next_plan and self._slow_enough():
+            self._landing = True
         if any(foot.swing for foot in self._feet):
             return
         if self._next_plan:
-            self._plan, self._next_plan = self._next_plan, None
-            self._start()
+            if self._landing:
+                self._plan, self._next_plan = self._next_plan, None
+                self._start()
         elif self._wanted == STILL and not self._pace.moving and self._pace.value[:3] == [0.0] * 3:
             if not self._planting and any(
                 math.hypot(*self._excursion(foot)) > IN_PLACE_M for foot in self._feet
