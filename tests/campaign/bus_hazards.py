@@ -101,7 +101,7 @@ def slow(state: str) -> str:
         if state != "stopping":
             assert world.state != "stopped", "a slow bus must not stop the robot"
         world.ask("stop", category=0)
-        stopped_s = world.clock.now_s
+        stopped_s, took_off_s = world.clock.now_s, 0.0
         while not world.witness.all_full_off():  # after the job under way, a read-back at worst
             world.run(world.robot.period_s)
             took_off_s = world.clock.now_s - stopped_s
