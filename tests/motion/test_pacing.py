@@ -262,3 +262,26 @@ def test_joint_speeds_by_hand() -> None:
     expected = math.radians(60.0) / 0.13 * usable
     assert joint_speeds_rad_s(robot, 6.0)[0] == pytest.approx((expected,) * 3, rel=1e-12)
     assert joint_speeds_rad_s(robot, 5.0)[2] == pytest.approx((expected * 5 / 6,) * 3, rel=1e-12)
+
+
+@ROBOTS
+def test_a_robot_asked_for_far_too_much_still_walks(robot: Robot) -> None:
+    """With an envelope thirty times what its legs can do, and with servos too slow for the
+    gait even on the spot: a command is scaled down, not to nothing."""
+    envelope = robot.envelope
+    eager = replace(
+        robot,
+        envelope=replace(
+            envelope,
+            forward_m_s=30.0 * envelope.forward_m_s,
+            sideways_m_s=30.0 * envelope.sideways_m_s,
+            turn_rad_s=30.0 * envelope.turn_rad_s,
+        ),
+    )
+    gait = replace(robot.gaits[0], cycle_range_s=(0.1, 0.12))
+    plans = (
+        GaitPlan(eager, robot.gaits[0], feet_of(robot)).fit((eager.envelope.forward_m_s, 0.0, 0.0), 1.0),
+        GaitPlan(robot, gait, feet_of(robot)).fit((envelope.forward_m_s, 0.0, 0.0), 1.0),
+    )
+    for (vx, _, _), _ in plans:
+        assert vx > 0.1 * envelope.forward_m_s

@@ -27,7 +27,10 @@ SPEED_SHARE = 0.9
 
 # Load up to which a speed is offered: at the peak of its swing the robot slows for a moment.
 FASTEST_LOAD = 1.3
-LEVELS = 12  # speeds tried for that, from standing to the peak
+# Of a servo too slow for that even on the spot, more: the robot is to walk, however slowly.
+OVER_STANDING = 1.2
+# Shares of the peak speed that are tried, close where an envelope asks far too much.
+LEVELS = np.array([0.0, 1 / 96, 1 / 48, 1 / 24, *(k / 12 for k in range(1, 13))])
 
 Array = NDArray[np.float64]
 
@@ -103,7 +106,7 @@ class CycleTable:
         self.fastest_m_s: list[Vec2] = []
         self._tables: list[list[list[float]]] = []
         cycles = np.geomspace(*gait.cycle_range_s, CYCLES)
-        levels = np.linspace(-1.0, 1.0, 2 * LEVELS + 1)
+        levels = np.concatenate((-LEVELS[:0:-1], LEVELS))
         axis = np.linspace(-1.0, 1.0, GRID)
         nought = np.zeros(1)
         for leg, neutral, speeds, peaks, reach in zip(
@@ -176,14 +179,13 @@ class _StraightStep:
 
 def _fastest(load: Array) -> float:
     """The greatest share of the peak speed, the same both ways, up to which some cycle
-    will do; `load` is over -1..1 and the cycles."""
-    ok = load.min(axis=-1) <= FASTEST_LOAD
-    both = ok[LEVELS:] & ok[LEVELS::-1]
-    if not both[0]:
-        # Even stepping on the spot is too quick: the slow-down has to see to all of it.
-        return 1.0
+    will do; `load` is over the levels both ways and the cycles."""
+    least = load.min(axis=-1)
+    standing = len(LEVELS) - 1
+    ok = least <= max(FASTEST_LOAD, OVER_STANDING * float(least[standing]))
+    both = ok[standing:] & ok[standing::-1]
     beyond = np.flatnonzero(~both)
-    return float((beyond[0] - 1 if len(beyond) else LEVELS) / LEVELS)
+    return float(LEVELS[beyond[0] - 1 if len(beyond) else -1])
 
 
 def _place(share: float) -> tuple[int, float]:
