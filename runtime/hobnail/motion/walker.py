@@ -190,7 +190,8 @@ class Walker:
         time_s = dt_s
         for attempt in range(RETRIES):
             self._advance(time_s)
-            self._solve(time_s)
+            # What comes back of a posture must not slow a walk.
+            self._solve(0.0 if attempt and self._walking else time_s)
             excess = excess_step(joints, body.joints_rad, steps_rad)
             if excess <= 1.0 or attempt == RETRIES - 1:
                 break

@@ -18,7 +18,8 @@ from hobnail.robot import Vec2
 # What was given up comes back at this rate (of all, 1/s): a body that nods in every
 # stride would be worse than one that stays level.
 COMES_BACK_HZ = 1.0
-HALVINGS = 9  # in search for the share
+LEAST_STEP = 1e-6  # of the share, on the way down
+HALVINGS = 4  # of the last step down
 
 
 class Yielding:
@@ -45,7 +46,7 @@ class Yielding:
         posture: Sequence[float],
         time_s: float,
     ) -> None:
-        """Solve for `body` (see there), `time_s` after the last time."""
+        """Solve for `body` (see there); `time_s` is for what was given up to come back."""
         if self.share == 1.0:  # as a rule
             body.solve(feet, pose, shift_m, posture)
             if body.out_of_reach == 0:
@@ -73,7 +74,10 @@ class Yielding:
         if not reached(0.0):
             reached(before)  # giving up helps nobody
             return
-        low, high = 0.0, before
+        # The step down is as small as can be: a tick that needs little must find little.
+        low, high, step = before, before, LEAST_STEP
+        while not reached(low := max(before - step, 0.0)):
+            high, step = low, 4.0 * step
         for _ in range(HALVINGS):
             middle = 0.5 * (low + high)
             low, high = (middle, high) if reached(middle) else (low, middle)
