@@ -77,6 +77,19 @@ def work(robot: Robot, seed: int) -> Walk:
     controller.rise()
     _settle(walk, "rise")
     demand(walk.ticks[-1].height_m == robot.stance.height_m, "does not rise to its stance height")
+    # A controlled stop in mid-stride: down over the feet where they are; and on again.
+    walk.walk(random.uniform(-1.0, 1.0), random.uniform(-1.0, 1.0), random.uniform(-1.0, 1.0))
+    walk.go(random.randint(1, 80))
+    controller.lower(random.uniform(0.3, 3.0))
+    _settle(walk, "crouch")
+    demand(walk.ticks[-1].height_m <= robot.stance.height_m, "does not crouch")
+    controller.rise()
+    _settle(walk, "rise again")
+    walk.walk(0.5, 0.0, 0.0)
+    walk.go(30)
+    controller.stand()
+    _settle(walk, "stand again")
+    demand(walk.ticks[-1].height_m == robot.stance.height_m, "does not stand at its stance height")
     _check(walk)
     return walk
 
