@@ -204,7 +204,7 @@ def test_posture_moves_at_its_rates(robot: Robot) -> None:
     walk.until_settled(10.0)
     heights = np.diff([tick.height_m for tick in walk.ticks]) / walk.dt_s
     assert np.abs(heights).max() <= limits.rate_m_s * (1.0 + 1e-9)
-    rolls = np.diff([roll for roll, _ in walk.tilts_rad]) / walk.dt_s
+    rolls = np.diff([tick.tilt_rad[0] for tick in walk.ticks]) / walk.dt_s
     assert np.abs(rolls).max() <= limits.rate_rad_s * (1.0 + 1e-9)
 
 

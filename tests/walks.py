@@ -16,7 +16,6 @@ from numpy.typing import NDArray
 from scipy.spatial.transform import Rotation
 
 from hobnail.controller import Controller, Tick
-from hobnail.motion.glide import Glide
 from hobnail.motion.leg import LegKinematics
 from hobnail.motion.schedule import shares_by_feet_down
 from hobnail.robot import Gait, Robot, Vec3
@@ -30,38 +29,23 @@ Command = Callable[["Walk"], None]
 
 
 class Walk:
-    """A controller and everything that it has done.
-
-    `posture` follows the posture by the same glide as the robot's own (tested by
-    itself), over the time that the ticks say has passed: the ticks do not tell
-    roll and pitch.
-    """
+    """A controller and everything that it has done."""
 
     def __init__(self, robot: Robot, *, at_rest: bool = False, dt_s: float | None = None) -> None:
         self.robot = robot
         self.controller = Controller(robot, at_rest=at_rest)
         self.dt_s = dt_s or robot.period_s
-        rates = robot.posture_limits
-        stance = robot.stance
-        self.posture = Glide(
-            [stance.rest_height_m if at_rest else stance.height_m, *[0.0] * 5],
-            [rates.rate_m_s, *[rates.rate_rad_s] * 3, rates.rate_m_s, rates.rate_m_s],
-        )
         self.ticks: list[Tick] = []
         self.dts_s: list[float] = []
         self.supplies_v: list[float] = []
-        self.tilts_rad: list[tuple[float, float]] = []  # roll, pitch
 
     def go(self, ticks: int) -> Walk:
         """Tick on."""
         for _ in range(ticks):
             tick = self.controller.tick(self.dt_s)
-            if self.posture.moving:
-                self.posture.advance(self.dt_s * tick.slowdown)
             self.ticks.append(tick)
             self.dts_s.append(self.dt_s)
             self.supplies_v.append(self.controller.supply_v)
-            self.tilts_rad.append((self.posture.value[1], self.posture.value[2]))
         return self
 
     def walk(self, vx: float, vy: float, yaw_rate: float, pivot: tuple[float, float] = (0.0, 0.0)) -> Walk:
@@ -76,19 +60,13 @@ class Walk:
         """Command a posture in shares of its limits: height 0..1, the others -1..1."""
         limits = self.robot.posture_limits
         low, high = limits.height_m
-        target = [
-            low + shares[0] * (high - low),
-            shares[1] * limits.roll_rad,
-            shares[2] * limits.pitch_rad,
-            shares[3] * limits.yaw_rad,
-            shares[4] * limits.lean_m,
-            shares[5] * limits.lean_m,
-        ]
-        height, roll, pitch, yaw, lean_x, lean_y = target
         self.controller.posture(
-            height_m=height, roll_rad=roll, pitch_rad=pitch, yaw_rad=yaw, lean_m=(lean_x, lean_y)
+            height_m=low + shares[0] * (high - low),
+            roll_rad=shares[1] * limits.roll_rad,
+            pitch_rad=shares[2] * limits.pitch_rad,
+            yaw_rad=shares[3] * limits.yaw_rad,
+            lean_m=(shares[4] * limits.lean_m, shares[5] * limits.lean_m),
         )
-        self.posture.aim(target)
         return self
 
     def until_settled(self, most_s: float = 60.0) -> Walk:
@@ -124,7 +102,7 @@ def to_ground(walk: Walk, feet_m: Array) -> Array:
     """Feet from the body frame into the ground frame: body at (x, y, height), turned by
     yaw about z, then pitch about y, then roll about x."""
     pose = np.array([tick.pose for tick in walk.ticks])
-    tilt = np.array(walk.tilts_rad)
+    tilt = np.array([tick.tilt_rad for tick in walk.ticks])
     turned = Rotation.from_euler("ZYX", np.column_stack((pose[:, 2], tilt[:, 1], tilt[:, 0])))
     place = np.column_stack((pose[:, :2], [tick.height_m for tick in walk.ticks]))
     return np.stack([turned.apply(feet_m[:, leg]) + place for leg in range(feet_m.shape[1])], axis=1)
@@ -291,14 +269,14 @@ def gaits() -> st.SearchStrategy[Command]:
     )
 
 
-def postures(share: float = 1.0) -> st.SearchStrategy[Command]:
-    """A posture within that share of its limits."""
-    tilts = st.floats(-share, share)
+def postures() -> st.SearchStrategy[Command]:
+    """A posture within its limits."""
+    tilts = st.floats(-1.0, 1.0)
 
     def command(values: tuple[float, ...]) -> Command:
         return lambda walk: void(walk.set_posture(values))
 
-    return st.tuples(st.floats(0.5 - 0.5 * share, 0.5 + 0.5 * share), *[tilts] * 5).map(command)
+    return st.tuples(st.floats(0.0, 1.0), *[tilts] * 5).map(command)
 
 
 def supplies() -> st.SearchStrategy[Command]:

@@ -8,8 +8,8 @@ the pulses of the calibrated servos and checks what it is asked.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from itertools import chain
+from typing import NamedTuple
 
 from hobnail.errors import CommandError
 from hobnail.motion.joint_steps import STEP_SHARE
@@ -24,8 +24,7 @@ GREATEST = 1e6  # of what a command to walk may name, in any unit
 LEAST = 1e-9  # m/s, rad/s; a velocity below counts as none
 
 
-@dataclass(frozen=True, slots=True)
-class Tick:
+class Tick(NamedTuple):
     """What one tick asks of the robot; legs in the order of `Robot.legs`.
 
     To drive a model of the robot use `pulses_us` or `commanded_rad`; the
@@ -44,6 +43,7 @@ class Tick:
     walking: bool  # a foot is in the air or about to be, or the body moves
     settled: bool  # nothing moves and nothing is about to
     height_m: float  # body origin above the ground
+    tilt_rad: tuple[float, float]  # roll and pitch of the body, as far as the posture is taken
     clamped: int  # joints held back by the last hard clamp, off their path
     out_of_reach: int  # feet brought to the nearest reachable point
 
@@ -185,7 +185,8 @@ class Controller:
             walker.gait.name,
             walker.walking,
             walker.settled,
-            walker.height_m,
+            body.height_m,
+            body.tilt_rad,
             walker.clamped,
             body.out_of_reach,
         )

@@ -146,7 +146,7 @@ class Walker:
     @property
     def height_m(self) -> float:
         """Body origin above the ground."""
-        return self._yielding.height_m
+        return self.body.height_m
 
     @property
     def posture_target(self) -> list[float]:

@@ -15,13 +15,16 @@ from hobnail.robot import Span, Vec2, Vec3
 
 
 class WholeBody:
-    """The latest solution: `pose` of the body on the ground (x, y, yaw), `feet_m` in the
-    body frame, `joints_rad`, and the count of feet that were `out_of_reach`."""
+    """The latest solution: `pose` of the body on the ground (x, y, yaw), its `height_m` and
+    `tilt_rad` (roll, pitch), `feet_m` in the body frame, `joints_rad`, and the count of feet
+    that were `out_of_reach`."""
 
-    __slots__ = ("feet_m", "joints_rad", "out_of_reach", "pose")
+    __slots__ = ("feet_m", "height_m", "joints_rad", "out_of_reach", "pose", "tilt_rad")
 
     def __init__(self) -> None:
         self.pose: Pose = (0.0, 0.0, 0.0)
+        self.height_m = 0.0
+        self.tilt_rad = (0.0, 0.0)
         self.feet_m: tuple[Vec3, ...] = ()
         self.joints_rad: tuple[Vec3, ...] = ()
         self.out_of_reach = 0
@@ -45,6 +48,8 @@ class WholeBody:
             heading += yaw
             c, s = cos(heading), sin(heading)
         self.pose = (x0, y0, heading)
+        self.height_m = height
+        self.tilt_rad = (roll, pitch)
         tilted = roll != 0.0 or pitch != 0.0
         if tilted:
             cr, sr, cp, sp = cos(roll), sin(roll), cos(pitch), sin(pitch)

@@ -23,17 +23,15 @@ HALVINGS = 4  # of the last step down
 
 
 class Yielding:
-    """The `share` of its wishes that the body takes, whether it is `moving`, and the height
-    (m) that it makes.
+    """The `share` of its wishes that the body takes, and whether it is `moving`.
 
     A wish is what differs from standing level, unshifted, at `level_m`.
     """
 
-    __slots__ = ("_level_m", "height_m", "moving", "share")
+    __slots__ = ("_level_m", "moving", "share")
 
     def __init__(self, level_m: float) -> None:
         self._level_m = level_m
-        self.height_m = level_m
         self.share = 1.0
         self.moving = False
 
@@ -50,15 +48,15 @@ class Yielding:
         if self.share == 1.0:  # as a rule
             body.solve(feet, pose, shift_m, posture)
             if body.out_of_reach == 0:
-                self.height_m = posture[0]
                 self.moving = False
                 return
 
         def reached(share: float) -> bool:
             height, *others = posture
             self.share = share
-            self.height_m = height if share == 1.0 else self._level_m + share * (height - self._level_m)
-            taken = [self.height_m, *(share * value for value in others)]
+            level = self._level_m
+            taken = [height if share == 1.0 else level + share * (height - level)]
+            taken += [share * value for value in others]
             body.solve(feet, pose, (share * shift_m[0], share * shift_m[1]), taken)
             return body.out_of_reach == 0
 

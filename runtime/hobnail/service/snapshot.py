@@ -32,6 +32,7 @@ def snapshot(machine: Machine, now_s: float) -> dict[str, object]:
         "stance": list(tick.stance) if tick else [],
         "feet_m": [list(foot) for foot in tick.feet_m] if tick else [],
         "height_m": tick.height_m if tick else None,
+        "tilt_rad": list(tick.tilt_rad) if tick else None,
         "faults": machine.faults.describe(),
         "first_cause": stop.reason if stop else machine.faults.first_cause,
         "stop": {
