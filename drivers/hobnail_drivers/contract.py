@@ -10,6 +10,7 @@ import math
 from abc import ABC, abstractmethod
 from collections.abc import Sequence
 from dataclasses import dataclass, field
+from operator import le
 from typing import ClassVar, final
 
 from hobnail_drivers.errors import NotOpenError, PulseError, SettingsError
@@ -128,7 +129,8 @@ class Driver(ABC):
         self.boards = tuple(boards)
         self.outputs = tuple(outputs)
         self.argument = argument
-        self._limits = tuple((output.min_us, output.max_us) for output in self.outputs)
+        self._lows_us = [output.min_us for output in self.outputs]
+        self._highs_us = [output.max_us for output in self.outputs]
         self._is_open = False
 
     @final
@@ -149,12 +151,10 @@ class Driver(ABC):
         """
         if not self._is_open:
             raise NotOpenError("the driver is not open: call open() first")
-        limits = self._limits
-        if len(pulses_us) != len(limits):
-            raise PulseError(f"{len(pulses_us)} pulses for {len(limits)} outputs; nothing was sent")
-        for pulse, (low, high) in zip(pulses_us, limits, strict=True):
-            if pulse is not None and not low <= pulse <= high:
-                self._refuse(pulses_us)
+        if len(pulses_us) != len(self.outputs):
+            raise PulseError(f"{len(pulses_us)} pulses for {len(self.outputs)} outputs; nothing was sent")
+        if None in pulses_us or not self._within_limits(pulses_us):  # type: ignore[arg-type]
+            self._check_each(pulses_us)
         self._write(pulses_us)
 
     @final
@@ -182,7 +182,10 @@ class Driver(ABC):
         """Where the boards are, a line each, for the release helper (see `board_notes`); none by default."""
         return ()
 
-    def _refuse(self, pulses_us: Pulses) -> None:
+    def _within_limits(self, pulses_us: Sequence[float]) -> bool:
+        return all(map(le, self._lows_us, pulses_us)) and all(map(le, pulses_us, self._highs_us))
+
+    def _check_each(self, pulses_us: Pulses) -> None:
         for pulse, output in zip(pulses_us, self.outputs, strict=True):
             if pulse is not None and not output.min_us <= pulse <= output.max_us:
                 kind = "not a number" if math.isnan(pulse) else f"{pulse:.1f} us"

@@ -118,7 +118,7 @@ class SimulatedDriver(Driver):
         """Shafts that get their first pulse now lay at the hard limit farther from it."""
         for index, (target, shaft) in enumerate(zip(targets, self._shafts, strict=True)):
             if target is not None and shaft is None:
-                low, high = self._limits[index]
+                low, high = self._lows_us[index], self._highs_us[index]
                 self._shafts[index] = low if target - low > high - target else high
 
     def _move(self) -> None:

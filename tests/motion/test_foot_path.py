@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Sequence
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -33,7 +34,7 @@ def keyframes(draw: st.DrawFn, *, monotone: bool = False) -> tuple[Keyframe, ...
 
 def sampled(path: FootPath, times: Sequence[float] | NDArray[np.float64]) -> NDArray[np.float64]:
     """Travel and lift at times: two rows."""
-    return np.array([path.at(float(time)) for time in times]).T
+    return np.array([path.at(float(time))[:2] for time in times]).T
 
 
 def derivatives(path: FootPath, at: float, step: float) -> NDArray[np.float64]:
@@ -64,7 +65,7 @@ def test_minimum_jerk_at_a_quarter() -> None:
             Keyframe(time=1.0, travel=1.0, lift=0.0),
         )
     )
-    assert STRAIGHT.at(0.25) == (0.103515625, 0.0)
+    assert STRAIGHT.at(0.25) == (0.103515625, 0.0, 5.625)  # 60 u - 180 u^2 + 120 u^3
     assert up_and_down.at(0.125)[1] == 0.103515625
     assert up_and_down.at(0.875)[1] == pytest.approx(0.103515625, abs=1e-15)
 
@@ -78,11 +79,25 @@ def test_minimum_jerk_peaks() -> None:
 
 
 @examples(100)
+@given(frames=keyframes() | swings(), share=st.floats(0.05, 0.95))
+def test_bend_is_the_second_derivative_of_travel(frames: tuple[Keyframe, ...], share: float) -> None:
+    """By finite differences, inside each stretch between keyframes."""
+    path = FootPath(frames)
+    for before, after in pairwise(frames):
+        span = after.time - before.time
+        at = before.time + (0.02 + 0.96 * share) * span
+        step = 0.01 * span
+        low, middle, high = (path.at(at + offset) for offset in (-step, 0.0, step))
+        # Of travel 1 over such a span; a quintic's fourth derivative is what a difference is off by.
+        assert middle[2] * span**2 == pytest.approx((low[0] - 2.0 * middle[0] + high[0]) / 1e-4, abs=0.02)
+
+
+@examples(100)
 @given(keyframes() | swings())
 def test_passes_through_its_keyframes(frames: tuple[Keyframe, ...]) -> None:
     path = FootPath(frames)
     for frame in frames:
-        assert path.at(frame.time) == pytest.approx((frame.travel, frame.lift), abs=1e-12)
+        assert path.at(frame.time)[:2] == pytest.approx((frame.travel, frame.lift), abs=1e-12)
 
 
 @examples(100)

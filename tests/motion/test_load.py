@@ -25,6 +25,7 @@ from walks import vec3
 Array = NDArray[np.float64]
 ROBOTS = pytest.mark.parametrize("robot", [juniper(), bramble(), anvil()], ids=lambda robot: robot.name)
 angles_near = st.tuples(st.floats(-0.4, 0.4), st.floats(-0.4, 0.4), st.floats(-0.5, 0.5))
+STILL = (0.0, 0.0, 0.0)
 forces = st.tuples(st.floats(-5.0, 5.0), st.floats(-5.0, 5.0), st.floats(0.0, 30.0))
 
 
@@ -62,11 +63,19 @@ def corrections(robot: Robot) -> list[LegCorrection]:
     ]
 
 
-def loaded(robot: Robot, leg: int, angles: Vec3, force: Vec3) -> tuple[Vec3, Vec3]:
-    """Angles and torques of one leg under a load."""
-    roll, hip, knee = angles
-    _, y, z = LegKinematics(robot.legs[leg]).foot(roll, hip, knee)
-    return corrections(robot)[leg].loaded(roll, hip, knee, y, z, force)
+def loaded(correction: LegCorrection, leg: Leg, angles: Vec3, force: Vec3) -> Vec3:
+    """What a leg that stands still under a load is sent."""
+    _, y, z = LegKinematics(leg).foot(*angles)
+    return correction.command(angles, STILL, y, z, force)
+
+
+def held_torques(robot: Robot, leg: int, angles: Vec3, force: Vec3) -> Array:
+    """The torques (N m) that stiff servos without slack are taken to hold: how far off the
+    angles they are sent, by their stiffness."""
+    assert robot.legs[leg].foot_radius_m == 0.0
+    stiffness = [joint.servo.stiffness_nm_rad for joint in robot.legs[leg].joints]
+    sent = loaded(corrections(robot)[leg], robot.legs[leg], angles, force)
+    return np.asarray(np.array(stiffness) * (np.array(sent) - np.array(angles)))
 
 
 # ---- sag
@@ -77,13 +86,13 @@ def loaded(robot: Robot, leg: int, angles: Vec3, force: Vec3) -> tuple[Vec3, Vec
 @given(off=angles_near, force=forces, leg=st.integers(0, 3))
 def test_torques_agree_with_pinocchio(robot: Robot, off: Vec3, force: Vec3, leg: int) -> None:
     """What holds the links' weight against gravity, less what the ground's push does: g(q) - J' f."""
+    robot = plain(robot)
     joints = [list(angles) for angles in neutral_rad(robot)]
     joints[leg] = [a + b for a, b in zip(joints[leg], off, strict=True)]
     judge = judge_of(robot)
     held = judge.static_torques(joints)[leg] - judge.foot_jacobian(joints, leg).T @ np.array(force)
     roll, hip, knee = joints[leg]
-    _, torques = loaded(robot, leg, (roll, hip, knee), force)
-    assert torques == pytest.approx(held, abs=1e-9)
+    assert held_torques(robot, leg, (roll, hip, knee), force) == pytest.approx(held, abs=1e-9)
 
 
 @ROBOTS
@@ -95,7 +104,7 @@ def test_a_springy_leg_so_commanded_rests_where_it_should(robot: Robot, off: Vec
     judge = judge_of(robot)
     others = [list(angles) for angles in neutral_rad(robot)]
     roll, hip, knee = (a + b for a, b in zip(others[0], off, strict=True))
-    commanded, _ = loaded(robot, 0, (roll, hip, knee), force)
+    commanded = loaded(corrections(robot)[0], robot.legs[0], (roll, hip, knee), force)
     stiffness = np.array([joint.servo.stiffness_nm_rad for joint in robot.legs[0].joints])
 
     def unbalance(angles: Array) -> Array:
@@ -204,8 +213,8 @@ def test_a_round_foot_rolls_without_slip_under_a_body_that_goes_straight(
             angles = kinematics.angles(x, y, z)
             if corrected:
                 # Less what the links' own weight asks for: that is another test's.
-                (with_it, _), (without, _) = (
-                    correction.loaded(*angles, y, z, (0.0, 0.0, 0.0)) for correction in (round_foot, pointed)
+                with_it, without = (
+                    correction.command(angles, STILL, y, z, STILL) for correction in (round_foot, pointed)
                 )
                 angles = vec3(np.array(angles) + np.array(with_it) - np.array(without))
             centres.append(kinematics.foot(*angles))
@@ -264,8 +273,8 @@ def test_a_servo_that_trails_so_commanded_follows_its_path(robot: Robot) -> None
             command = np.array(wanted)
             if lead:
                 at, moving = vec3(wanted), vec3(speeds)
-                here = np.array(correction.command(at, moving, 0.0, -0.1, (0.0, 0.0, 0.0)))
-                command += here - np.array(correction.command(at, (0.0,) * 3, 0.0, -0.1, (0.0, 0.0, 0.0)))
+                here = np.array(correction.command(at, moving, 0.0, -0.1, STILL))
+                command += here - np.array(correction.command(at, STILL, 0.0, -0.1, STILL))
             return np.asarray(stiffness * (command - angles) / slope)
 
         found = solve_ivp(speed, (0.0, 1.5), path(0.0)[0], t_eval=np.linspace(0.5, 1.5, 60), max_step=0.01)
@@ -297,12 +306,9 @@ def test_slack_is_crossed_towards_the_load() -> None:
         LegCorrection(each, LegKinematics(each), angles)
         for each in (leg, replace(leg, joints=(roll, hip, knee)))
     )
-    _, y, z = LegKinematics(leg).foot(*angles)
     for force in ((0.0, 0.0, 300.0), (0.0, 0.0, -300.0)):
-        _, torques = without.loaded(*angles, y, z, force)
-        plain_command, command = (
-            np.array(each.command(angles, (0.0, 0.0, 0.0), y, z, force)) for each in (without, with_it)
-        )
+        torques = held_torques(robot, 0, angles, force)
+        plain_command, command = (np.array(loaded(each, leg, angles, force)) for each in (without, with_it))
         sure = np.abs(torques) > 1.2  # ten times the friction taken, 3 % of 4 N m
         assert sure.sum() >= 2
         added = command - plain_command

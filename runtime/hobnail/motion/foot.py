@@ -53,14 +53,15 @@ class Swing:
         """Whether the aim rests on the target."""
         return self.offset_x is AT_REST and self.offset_y is AT_REST
 
-    def at(self, path: FootPath, u: float) -> tuple[float, float, float]:
-        """(x, y, lift share) at the share `u` of the swing."""
-        travel, lift = path.at(u)
+    def at(self, path: FootPath, u: float) -> tuple[float, float, float, float]:
+        """(x, y, lift share, bend of the travel) at the share `u` of the swing."""
+        travel, lift, bend = path.at(u)
         (x0, y0), (x1, y1) = self.start, self.target
         return (
             x0 + travel * (x1 + self.offset_x[0] - x0),
             y0 + travel * (y1 + self.offset_y[0] - y0),
             lift,
+            bend,
         )
 
 

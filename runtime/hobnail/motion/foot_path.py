@@ -40,8 +40,8 @@ class FootPath:
             for start, end, along, up in zip(times[:-1], times[1:], travel, lift, strict=True)
         ]
 
-    def at(self, u: float) -> tuple[float, float]:
-        """(travel, lift) at the share `u` (0..1) of the swing."""
+    def at(self, u: float) -> tuple[float, float, float]:
+        """(travel, lift, second derivative of the travel by u) at the share `u` (0..1) of the swing."""
         start, per_time, (a0, a1, a3, a4, a5), (b0, b1, b3, b4, b5) = self._segments[
             bisect_right(self._starts, u)
         ]
@@ -50,13 +50,8 @@ class FootPath:
         return (
             a0 + a1 * s + s3 * (a3 + s * (a4 + s * a5)),
             b0 + b1 * s + s3 * (b3 + s * (b4 + s * b5)),
+            per_time * per_time * s * (6.0 * a3 + s * (12.0 * a4 + s * 20.0 * a5)),
         )
-
-    def bend(self, u: float) -> float:
-        """Second derivative of the travel by the share `u` of the swing."""
-        start, per_time, (_, _, a3, a4, a5), _ = self._segments[bisect_right(self._starts, u)]
-        s = (u - start) * per_time
-        return per_time * per_time * s * (6.0 * a3 + s * (12.0 * a4 + s * 20.0 * a5))
 
 
 def _segments(times: Sequence[float], values: Sequence[float]) -> list[tuple[float, ...]]:

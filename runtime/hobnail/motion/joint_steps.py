@@ -20,7 +20,8 @@ def excess_step(before: Sequence[Vec3], after: Sequence[Vec3], steps: Sequence[V
     """Greatest joint step as a multiple of what is allowed; 0 when all are within."""
     worst = 0.0
     for old, new, most in zip(before, after, steps, strict=True):
-        if not _within(old, new, most):
+        (a0, b0, c0), (a1, b1, c1), (a, b, c) = old, new, most
+        if not (-a <= a1 - a0 <= a and -b <= b1 - b0 <= b and -c <= c1 - c0 <= c):
             worst = max(worst, *(abs(y - x) / d for x, y, d in zip(old, new, most, strict=True)))
     return worst
 
@@ -43,14 +44,13 @@ class FeedForward:
     """What the servos are sent, leg by leg: the geometric angles with the corrections of
     `hobnail.motion.load`, as far as each joint's step allows."""
 
-    __slots__ = ("_feet", "_speeds", "commanded_rad")
+    __slots__ = ("_feet", "commanded_rad")
 
     def __init__(self, feet: Sequence[Foot], body: WholeBody, drive: Drive) -> None:
         self._feet = feet
-        self._speeds: list[Vec3] = [(0.0, 0.0, 0.0)] * len(feet)  # of the joints along their path, rad/s
         anywhere = [(math.inf, math.inf, math.inf)] * len(feet)
         self.commanded_rad = body.joints_rad
-        self.advance(body.joints_rad, body, drive, 0.0, anywhere)
+        self.advance(body.joints_rad, body, drive, 1.0, anywhere)
 
     def advance(
         self,
@@ -62,34 +62,29 @@ class FeedForward:
     ) -> None:
         """Go on with the body, which went from `before` in `time_s` along its path while the
         ground did `drive` to it."""
-        if time_s > 0.0:
-            self._speeds = [
-                ((a1 - a0) / time_s, (b1 - b0) / time_s, (c1 - c0) / time_s)
-                for (a0, b0, c0), (a1, b1, c1) in zip(before, body.joints_rad, strict=True)
-            ]
+        hz = 1.0 / time_s
         ahead, left, up, spin = drive
         commanded = []
-        for foot, (x, y, z), angles, speeds, last, most in zip(
-            self._feet, body.feet_m, body.joints_rad, self._speeds, self.commanded_rad, steps, strict=True
+        for foot, (x, y, z), (a0, b0, c0), angles, last, most in zip(
+            self._feet, body.feet_m, before, body.joints_rad, self.commanded_rad, steps, strict=True
         ):
             if foot.correction.active:
+                a, b, c = angles
+                speeds = ((a - a0) * hz, (b - b0) * hz, (c - c0) * hz)
+                _, hip_y, hip_z = foot.hip
                 load = foot.load
                 push = (load * (ahead - spin * y), load * (left + spin * x), load * up)
-                _, hip_y, hip_z = foot.hip
-                angles = foot.correction.command(angles, speeds, y - hip_y, z - hip_z, push)
-                angles = hold(angles, foot.limits)
+                angles = hold(
+                    foot.correction.command(angles, speeds, y - hip_y, z - hip_z, push), foot.limits
+                )
             commanded.append(_near(last, angles, most))
         self.commanded_rad = tuple(commanded)
 
 
 def _near(old: Vec3, new: Vec3, most: Vec3) -> Vec3:
     """`new`, or the nearest to it within one step of `old`."""
-    if _within(old, new, most):
+    (a0, b0, c0), (a1, b1, c1), (a, b, c) = old, new, most
+    if -a <= a1 - a0 <= a and -b <= b1 - b0 <= b and -c <= c1 - c0 <= c:
         return new
     a, b, c = (min(max(y, x - d), x + d) for x, y, d in zip(old, new, most, strict=True))
     return a, b, c
-
-
-def _within(old: Vec3, new: Vec3, most: Vec3) -> bool:
-    a, b, c = most
-    return -a <= new[0] - old[0] <= a and -b <= new[1] - old[1] <= b and -c <= new[2] - old[2] <= c

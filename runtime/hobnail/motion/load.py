@@ -18,6 +18,7 @@ The load is what the schedule says each foot should carry, not a measurement.
 
 from __future__ import annotations
 
+from cmath import rect
 from math import copysign, cos, sin
 
 from hobnail.motion.balance import GRAVITY_M_S2
@@ -35,6 +36,7 @@ class LegCorrection:
     """Corrections of one leg about its neutral angles."""
 
     __slots__ = (
+        "_fold_m2",
         "_give",
         "_lower_m",
         "_neutral",
@@ -52,6 +54,7 @@ class LegCorrection:
     def __init__(self, leg: Leg, kinematics: LegKinematics, neutral_rad: Vec3) -> None:
         self._upper_m = kinematics.upper_m
         self._lower_m = kinematics.lower_m
+        self._fold_m2 = self._upper_m * self._lower_m
         self._radius_m = leg.foot_radius_m
         self._neutral = (neutral_rad[0], neutral_rad[1] + neutral_rad[2])
         stiffness = [joint.servo.stiffness_nm_rad for joint in leg.joints]
@@ -80,59 +83,48 @@ class LegCorrection:
         self.active = self._radius_m > 0.0 or any(self._give) or any(self.trail_s)
 
     def command(self, angles: Vec3, speeds: Vec3, y: float, z: float, force_n: Vec3) -> Vec3:
-        """What the servos must be sent for geometric angles (rad) that move at `speeds`
-        (rad/s): `loaded` angles, ahead by what the servos trail, and across their slack
-        to the side on which they bear their torque."""
-        (roll, hip, knee), (a, b, c) = self.loaded(*angles, y, z, force_n)
-        va, vb, vc = speeds
-        ta, tb, tc = self.trail_s
-        sa, sb, sc = self.slope_nm_s
-        a += sa * va
-        b += sb * vb
-        c += sc * vc
-        ua, ub, uc = self.sure_nm
-        da, db, dc = self.slack_rad
-        return (
-            roll + ta * va + da * a / (abs(a) + ua),
-            hip + tb * vb + db * b / (abs(b) + ub),
-            knee + tc * vc + dc * c / (abs(c) + uc),
-        )
-
-    def loaded(
-        self, roll: float, hip: float, knee: float, y: float, z: float, force_n: Vec3
-    ) -> tuple[Vec3, Vec3]:
-        """Angles that make up for sag and rolling at the geometric angles (rad), the foot's
-        y and z relative to the hip (m) and the force of the ground on it (body frame, N);
-        and the torques (N m) by which the servos hold that load."""
-        shank = hip + knee
-        upper, lower = self._upper_m, self._lower_m
-        upper_x, shank_x = -upper * sin(hip), -lower * sin(shank)
-        upper_z, shank_z = -upper * cos(hip), -lower * cos(shank)
-        foot_x, foot_z = upper_x + shank_x, upper_z + shank_z
+        """What the servos must be sent for geometric angles (rad) that move at `speeds` (rad/s),
+        with the foot at `y` and `z` relative to the hip (m) and the force of the ground on it
+        (body frame, N): all that the head of this file names."""
+        roll, hip, knee = angles
         ahead, left, up = force_n
+        # In the plane of the leg: down, and back as the imaginary part.
+        upper, lower = rect(self._upper_m, hip), rect(self._lower_m, hip + knee)
         cos_roll, sin_roll = cos(roll), sin(roll)
         push = up * cos_roll - left * sin_roll
-        # Minus f . dp/dq, for the ground's push and for the weights of the links.
+        # Torques that hold: minus f . dp/dq, for the ground's push and the weights of the links.
         at_knee, at_foot = self._weights_n
-        a = left * z - up * y + self._side_nm * cos_roll - sin_roll * (at_knee * upper_z + at_foot * shank_z)
-        b = push * foot_x - ahead * foot_z - cos_roll * (at_knee * upper_x + at_foot * shank_x)
-        c = push * shank_x - ahead * shank_z - cos_roll * at_foot * shank_x
-        give_roll, give_hip, give_knee = self._give
-        roll_by, hip_by, knee_by = a * give_roll, b * give_hip, c * give_knee
+        c = (lower * complex(cos_roll * at_foot - push, ahead)).imag
+        b = c + (upper * complex(cos_roll * at_knee - push, ahead)).imag
+        a = left * z - up * y + self._side_nm * cos_roll
+        a += sin_roll * (at_knee * upper.real + at_foot * lower.real)
+        va, vb, vc = speeds
+        ga, gb, gc = self._give
+        ta, tb, tc = self.trail_s
+        roll_by, hip_by, knee_by = ga * a + ta * va, gb * b + tb * vb, gc * c + tc * vc
+        # What each servo bears while it moves says to which side of its slack it is pushed.
+        sa, sb, sc = self.slope_nm_s
+        a, b, c = a + sa * va, b + sb * vb, c + sc * vc
+        ua, ub, uc = self.sure_nm
+        da, db, dc = self.slack_rad
+        roll_by += da * a / (abs(a) + ua)
+        hip_by += db * b / (abs(b) + ub)
+        knee_by += dc * c / (abs(c) + uc)
         radius = self._radius_m
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
-            forward = radius * (shank - self._neutral[1])
+            neutral_roll, neutral_shank = self._neutral
+            forward = radius * (hip + knee - neutral_shank)
             # Knee and hip that move the foot along x alone, in the plane of the leg.  A leg
             # nearly straight cannot, and is left to roll a little farther.
             bend = sin(knee)
             if abs(bend) < LEAST_FOLD:
                 bend = copysign(LEAST_FOLD, bend)
-            folded = upper * lower * bend
-            hip_by += forward * shank_x / folded
-            knee_by -= forward * foot_x / folded
-            roll_by += radius * (roll - self._neutral[0]) / z
-        return (roll + roll_by, hip + hip_by, knee + knee_by), (a, b, c)
+            turn = forward / (self._fold_m2 * bend)
+            hip_by -= turn * lower.imag
+            knee_by += turn * (upper.imag + lower.imag)
+            roll_by += radius * (roll - neutral_roll) / z
+        return roll + roll_by, hip + hip_by, knee + knee_by
 
 
 def half_dead_band_rad(joint: Joint) -> float:

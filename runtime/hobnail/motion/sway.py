@@ -29,6 +29,7 @@ NOTHING = 1e-9
 
 
 Shift = tuple[float, float, float, float]
+Wave = tuple[int, complex, complex, float]  # harmonic, its part along x and y, minus its curvature
 
 
 class PeriodicSway:
@@ -40,7 +41,7 @@ class PeriodicSway:
     linear inverted pendulum (Kajita et al. 2001) with that zero-moment point.
     """
 
-    __slots__ = ("_height_term", "_terms", "active", "leads")
+    __slots__ = ("_height_term", "_pace", "_terms", "_waves", "active", "leads")
 
     def __init__(self, feet: Sequence[Vec2], gait: Gait, height_m: float) -> None:
         share, duty = gait.body_shift, gait.duty
@@ -71,29 +72,41 @@ class PeriodicSway:
             if any(abs(part) > NOTHING for part in term[1:])
         ]
         self._height_term = height_m / GRAVITY_M_S2 * (2.0 * math.pi) ** 2
+        self._pace: Sequence[float] = ()  # that the waves are for; never changed in place
+        self._waves: list[Wave] = []
         self.active = bool(self._terms)
         # Whether the body must be over its support before the first foot lifts.
         self.leads = any(abs(x) + abs(y) > LEAD_M for x, y in zip(base_x, base_y, strict=True))
 
     def at(self, clock: float, pace: Sequence[float]) -> Shift:
         """Shift (m) and its acceleration (m/s^2), (x, y, ax, ay), at a time of the cycle for
-        a pace (vx, vy, yaw rate, cycle rate)."""
-        vx, vy, yaw_rate, rate_hz = pace
-        cycle_s = 1.0 / rate_hz
+        a pace (vx, vy, yaw rate, cycle rate): a new object for every new pace."""
+        if pace is not self._pace:
+            self._pace, self._waves = pace, self._waves_at(*pace)
         angle = 2.0 * math.pi * clock
-        bend = (2.0 * math.pi * rate_hz) ** 2
-        stiff = self._height_term * rate_hz * rate_hz
         x = y = ax = ay = 0.0
-        for k, base_x, base_y, sweep, turn_x, turn_y in self._terms:
-            # Both signs of each harmonic but the mean.
-            wave = cmath.rect((2.0 if k else 1.0) / (1.0 + stiff * k * k), k * angle)
-            along = ((base_x + cycle_s * (vx * sweep + yaw_rate * turn_x)) * wave).real
-            across = ((base_y + cycle_s * (vy * sweep + yaw_rate * turn_y)) * wave).real
+        for k, wave_x, wave_y, bend in self._waves:
+            turned = cmath.rect(1.0, k * angle)
+            along, across = (wave_x * turned).real, (wave_y * turned).real
             x += along
             y += across
-            ax -= bend * k * k * along
-            ay -= bend * k * k * across
+            ax -= bend * along
+            ay -= bend * across
         return x, y, ax, ay
+
+    def _waves_at(self, vx: float, vy: float, yaw_rate: float, rate_hz: float) -> list[Wave]:
+        """The harmonics of the shift at a pace."""
+        cycle_s = 1.0 / rate_hz
+        bend = (2.0 * math.pi * rate_hz) ** 2
+        stiff = self._height_term * rate_hz * rate_hz
+        waves = []
+        for k, base_x, base_y, sweep, turn_x, turn_y in self._terms:
+            # Both signs of each harmonic but the mean.
+            share = (2.0 if k else 1.0) / (1.0 + stiff * k * k)
+            along = base_x + cycle_s * (vx * sweep + yaw_rate * turn_x)
+            across = base_y + cycle_s * (vy * sweep + yaw_rate * turn_y)
+            waves.append((k, share * along, share * across, bend * k * k))
+        return waves
 
     def over_cycle(self, clocks: NDArray[np.float64], rate_hz: float) -> NDArray[np.float64]:
         """The shift (m) at many times of the cycle, shape (5, times), which is linear in the

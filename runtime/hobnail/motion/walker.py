@@ -260,6 +260,7 @@ class Walker:
         plan = self._plan
         duty, lift_m = plan.gait.duty, plan.gait.lift_m
         airtime = 1.0 - duty
+        hurry = (rate / airtime) ** 2
         clock = self._clock
         path = plan.path
         ramp = plan.load_ramp
@@ -286,16 +287,15 @@ class Walker:
                 swing = swing.re_aimed(target, time_s, left)
             foot.swing = swing
             if swing is not None:
-                foot.x, foot.y, lift = swing.at(path, (phase - duty) / airtime)
-                foot.lift_m = lift_m * lift
+                x, y, lift, bend = swing.at(path, (phase - duty) / airtime)
+                foot.x, foot.y, foot.lift_m = x, y, lift_m * lift
                 weight = 0.0
-                thrust = foot.swung_kg * path.bend((phase - duty) / airtime) * (rate / airtime) ** 2
-                push_x += thrust * (swing.target[0] - swing.start[0])
-                push_y += thrust * (swing.target[1] - swing.start[1])
-                spin += thrust * (
-                    (foot.x - x0) * (swing.target[1] - swing.start[1])
-                    - (foot.y - y0) * (swing.target[0] - swing.start[0])
-                )
+                (from_x, from_y), (to_x, to_y) = swing.start, swing.target
+                thrust = foot.swung_kg * bend * hurry
+                thrust_x, thrust_y = thrust * (to_x - from_x), thrust * (to_y - from_y)
+                push_x += thrust_x
+                push_y += thrust_y
+                spin += (x - x0) * thrust_y - (y - y0) * thrust_x
             elif phase >= duty:
                 weight = 1.0
             elif phase < ramp:
