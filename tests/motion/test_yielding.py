@@ -45,12 +45,12 @@ class Stand:
 
     def __init__(self, robot: Robot) -> None:
         self.feet = standing(robot)
-        self.body = WholeBody()
+        self.body = WholeBody(self.feet)
         self.yielding = Yielding(robot.stance.height_m)
 
     def take(self, posture: Sequence[float], time_s: float = PERIOD_S) -> float:
         """The share of that posture that is taken."""
-        self.yielding.solve(self.body, self.feet, (0.0, 0.0, 0.0), (0.0, 0.0), posture, time_s)
+        self.yielding.solve(self.body, (0.0, 0.0, 0.0), (0.0, 0.0), posture, time_s)
         return self.yielding.share
 
     def come_to_rest(self, posture: Sequence[float]) -> float:
@@ -69,10 +69,10 @@ def far(robot: Robot) -> list[float]:
 
 @ROBOTS
 def test_what_is_in_reach_is_taken_as_it_is(robot: Robot) -> None:
-    stand, judge = Stand(robot), WholeBody()
+    stand, judge = Stand(robot), WholeBody(standing(robot))
     posture = [0.97 * robot.stance.height_m, 0.05, -0.04, 0.06, 0.005, -0.005]
     assert stand.take(posture) == 1.0
-    judge.solve(stand.feet, (0.0, 0.0, 0.0), (0.0, 0.0), posture)
+    judge.solve((0.0, 0.0, 0.0), (0.0, 0.0), posture)
     assert stand.body.joints_rad == judge.joints_rad
     assert stand.body.height_m == posture[0]
     assert not stand.yielding.moving
@@ -81,7 +81,7 @@ def test_what_is_in_reach_is_taken_as_it_is(robot: Robot) -> None:
 @ROBOTS
 def test_what_is_out_of_reach_is_taken_as_far_as_legs_go(robot: Robot) -> None:
     """Every foot is in reach; with a hundredth more of the posture one would not be."""
-    stand, judge = Stand(robot), WholeBody()
+    stand, judge = Stand(robot), WholeBody(standing(robot))
     posture = far(robot)
     assert 0.0 < stand.take(posture) < 1.0
     assert stand.body.out_of_reach == 0
@@ -90,7 +90,7 @@ def test_what_is_out_of_reach_is_taken_as_far_as_legs_go(robot: Robot) -> None:
     assert stand.body.out_of_reach == 0
     level = robot.stance.height_m
     more = [level + (share + 0.01) * (posture[0] - level), *((share + 0.01) * each for each in posture[1:])]
-    judge.solve(stand.feet, (0.0, 0.0, 0.0), (0.0, 0.0), more)
+    judge.solve((0.0, 0.0, 0.0), (0.0, 0.0), more)
     assert judge.out_of_reach > 0
     assert stand.body.height_m == pytest.approx(level + share * (posture[0] - level), abs=1e-12)
 

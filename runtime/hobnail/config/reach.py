@@ -165,12 +165,12 @@ def _check_postures(section: Section, robot: Robot, places: Sequence[Vec2], repo
 
 def _takes(feet: Sequence[Foot], height_m: float, indices: Sequence[int], value: float) -> bool:
     """Whether all legs reach with each of these parts of the posture at that value, either way."""
-    body = WholeBody()
+    body = WholeBody(feet)
     for index in indices:
         for signed in (value, -value):
             posture = [height_m, 0.0, 0.0, 0.0, 0.0, 0.0]
             posture[index] = signed
-            body.solve(feet, (0.0, 0.0, 0.0), (0.0, 0.0), posture)
+            body.solve((0.0, 0.0, 0.0), (0.0, 0.0), posture)
             if body.out_of_reach:
                 return False
     return True

@@ -19,7 +19,9 @@ The load is what the schedule says each foot should carry, not a measurement.
 from __future__ import annotations
 
 from cmath import rect
+from itertools import chain
 from math import copysign, cos, sin
+from typing import NamedTuple
 
 from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.leg import LegKinematics
@@ -33,54 +35,32 @@ LEAST_FOLD = 0.2
 
 
 class LegCorrection:
-    """Corrections of one leg about its neutral angles."""
+    """Corrections of one leg about its neutral angles.
 
-    __slots__ = (
-        "_fold_m2",
-        "_give",
-        "_lower_m",
-        "_neutral",
-        "_radius_m",
-        "_side_nm",
-        "_upper_m",
-        "_weights_n",
-        "active",
-        "slack_rad",
-        "slope_nm_s",
-        "sure_nm",
-        "trail_s",
-    )
+    `trail_s` is by what time each servo trails a steady motion.
+    """
+
+    __slots__ = ("_bends", "_fold_m2", "_neutral", "_radius_m", "_weighs", "active", "trail_s")
 
     def __init__(self, leg: Leg, kinematics: LegKinematics, neutral_rad: Vec3) -> None:
-        self._upper_m = kinematics.upper_m
-        self._lower_m = kinematics.lower_m
-        self._fold_m2 = self._upper_m * self._lower_m
         self._radius_m = leg.foot_radius_m
         self._neutral = (neutral_rad[0], neutral_rad[1] + neutral_rad[2])
-        stiffness = [joint.servo.stiffness_nm_rad for joint in leg.joints]
-        a, b, c = (1.0 / k if k else 0.0 for k in stiffness)
-        self._give = (a, b, c)
-        a, b, c = (joint.servo.torque_nm / joint.servo.speed_rad_s for joint in leg.joints)
-        self.slope_nm_s = (a, b, c)  # of the torque-speed line, N m s/rad
-        a, b, c = (
-            slope * give if joint.servo.trail_s is None else joint.servo.trail_s
-            for joint, slope, give in zip(leg.joints, self.slope_nm_s, self._give, strict=True)
-        )
-        self.trail_s = (a, b, c)  # by which each servo trails a steady motion
-        a, b, c = (
-            half_dead_band_rad(joint) + joint.servo.backlash_rad / 2 if k else 0.0
-            for joint, k in zip(leg.joints, stiffness, strict=True)
-        )
-        self.slack_rad = (a, b, c)
-        a, b, c = (SURE_SHARE * joint.servo.torque_nm for joint in leg.joints)
-        self.sure_nm = (a, b, c)
-        # Link masses sit midway: the weights that act at the knee, and half of it at the foot.
-        self._weights_n = (
+        self._fold_m2 = kinematics.upper_m * kinematics.lower_m
+        # Link masses sit midway: the weights that act at the knee, and half of it at the foot,
+        # and the moment of all about the roll axis.
+        self._weighs = (
+            kinematics.upper_m,
+            kinematics.lower_m,
             GRAVITY_M_S2 * (0.5 * leg.upper_kg + leg.lower_kg),
             GRAVITY_M_S2 * 0.5 * leg.lower_kg,
+            GRAVITY_M_S2 * (leg.hip_kg + leg.upper_kg + leg.lower_kg) * leg.abduction_m,
         )
-        self._side_nm = GRAVITY_M_S2 * (leg.hip_kg + leg.upper_kg + leg.lower_kg) * leg.abduction_m
-        self.active = self._radius_m > 0.0 or any(self._give) or any(self.trail_s)
+        bends = [_Bend.of(joint) for joint in leg.joints]
+        # All of the first kind, then all of the second, and so on.
+        self._bends = tuple(chain.from_iterable(zip(*bends, strict=True)))
+        a, b, c = (bend.trail_s for bend in bends)
+        self.trail_s = (a, b, c)
+        self.active = self._radius_m > 0.0 or any(bend.give or bend.trail_s for bend in bends)
 
     def command(self, angles: Vec3, speeds: Vec3, y: float, z: float, force_n: Vec3) -> Vec3:
         """What the servos must be sent for geometric angles (rad) that move at `speeds` (rad/s),
@@ -88,28 +68,24 @@ class LegCorrection:
         (body frame, N): all that the head of this file names."""
         roll, hip, knee = angles
         ahead, left, up = force_n
+        upper_m, lower_m, at_knee, at_foot, side_nm = self._weighs
         # In the plane of the leg: down, and back as the imaginary part.
-        upper, lower = rect(self._upper_m, hip), rect(self._lower_m, hip + knee)
+        upper, lower = rect(upper_m, hip), rect(lower_m, hip + knee)
         cos_roll, sin_roll = cos(roll), sin(roll)
         push = up * cos_roll - left * sin_roll
         # Torques that hold: minus f . dp/dq, for the ground's push and the weights of the links.
-        at_knee, at_foot = self._weights_n
         c = (lower * complex(cos_roll * at_foot - push, ahead)).imag
         b = c + (upper * complex(cos_roll * at_knee - push, ahead)).imag
-        a = left * z - up * y + self._side_nm * cos_roll
+        a = left * z - up * y + side_nm * cos_roll
         a += sin_roll * (at_knee * upper.real + at_foot * lower.real)
+        # How far the shafts stand off while they bear that and move, and to which side of their
+        # slack that takes them.
         va, vb, vc = speeds
-        ga, gb, gc = self._give
-        ta, tb, tc = self.trail_s
-        roll_by, hip_by, knee_by = ga * a + ta * va, gb * b + tb * vb, gc * c + tc * vc
-        # What each servo bears while it moves says to which side of its slack it is pushed.
-        sa, sb, sc = self.slope_nm_s
-        a, b, c = a + sa * va, b + sb * vb, c + sc * vc
-        ua, ub, uc = self.sure_nm
-        da, db, dc = self.slack_rad
-        roll_by += da * a / (abs(a) + ua)
-        hip_by += db * b / (abs(b) + ub)
-        knee_by += dc * c / (abs(c) + uc)
+        give_a, give_b, give_c, ta, tb, tc, slack_a, slack_b, slack_c, sure_a, sure_b, sure_c = self._bends
+        a, b, c = give_a * a + ta * va, give_b * b + tb * vb, give_c * c + tc * vc
+        a += slack_a * a / (abs(a) + sure_a)
+        b += slack_b * b / (abs(b) + sure_b)
+        c += slack_c * c / (abs(c) + sure_c)
         radius = self._radius_m
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
@@ -121,10 +97,31 @@ class LegCorrection:
             if abs(bend) < LEAST_FOLD:
                 bend = copysign(LEAST_FOLD, bend)
             turn = forward / (self._fold_m2 * bend)
-            hip_by -= turn * lower.imag
-            knee_by += turn * (upper.imag + lower.imag)
-            roll_by += radius * (roll - neutral_roll) / z
-        return roll + roll_by, hip + hip_by, knee + knee_by
+            a += radius * (roll - neutral_roll) / z
+            b -= turn * lower.imag
+            c += turn * (upper.imag + lower.imag)
+        return roll + a, hip + b, knee + c
+
+
+class _Bend(NamedTuple):
+    """How one servo stands off from what it is sent."""
+
+    give: float  # rad for each N m; 0 when its stiffness is not known
+    trail_s: float
+    slack_rad: float  # to each side
+    sure_rad: float  # standing off that much it is halfway across its slack
+
+    @classmethod
+    def of(cls, joint: Joint) -> _Bend:
+        servo = joint.servo
+        give = 1.0 / servo.stiffness_nm_rad if servo.stiffness_nm_rad else 0.0
+        trail_s = servo.trail_s
+        if trail_s is None:
+            trail_s = give * servo.torque_nm / servo.speed_rad_s
+        if not give:
+            return cls(0.0, trail_s, 0.0, 1.0)
+        slack_rad = half_dead_band_rad(joint) + servo.backlash_rad / 2
+        return cls(give, trail_s, slack_rad, give * SURE_SHARE * servo.torque_nm)
 
 
 def half_dead_band_rad(joint: Joint) -> float:

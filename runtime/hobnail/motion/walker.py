@@ -15,11 +15,13 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from operator import ne
 
 from hobnail.motion.balance import GRAVITY_M_S2, neutral_feet
+from hobnail.motion.feed_forward import Drive, FeedForward
 from hobnail.motion.foot import LAST_AIM, Foot, FootState, Swing
 from hobnail.motion.glide import AT_REST, Glide, GlideState, Slew, SlewState, minimum_jerk
-from hobnail.motion.joint_steps import Drive, FeedForward, clamp_steps, excess_step
+from hobnail.motion.joint_vector import clamp_steps, excess_step
 from hobnail.motion.pacing import fit_stride
 from hobnail.motion.plan import GaitPlan
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist, point_speed
@@ -96,7 +98,7 @@ class Walker:
         self.slowdown = 1.0
         self.velocity: Twist = STILL
         self.clamped = 0
-        self.body = WholeBody()
+        self.body = WholeBody(self._feet)
         self._yielding = Yielding(robot.stance.height_m)
         self._solve(0.0)
         self.feed_forward = FeedForward(self._feet, self.body, self._drive())
@@ -178,21 +180,21 @@ class Walker:
 
     # -- the tick ------------------------------------------------------------
 
-    def tick(self, dt_s: float, steps_rad: Sequence[Vec3]) -> None:
-        """Move on by `dt_s`, no joint by more than its step (rad, leg by leg)."""
+    def tick(self, dt_s: float, steps_rad: Sequence[float]) -> None:
+        """Move on by `dt_s`, no joint by more than its step (rad, all joints in a row)."""
         self._decide()
         if self._lowering and self._lowering[0] is not None:
             # Time is running while the feet are planted.
             self._lowering = (max(self._lowering[0] - dt_s, SHORTEST_LOWERING_S),)
         body = self.body
-        joints = body.joints_rad
+        before = body.angles
         saved = self._save()
         time_s = dt_s
         for attempt in range(RETRIES):
             self._advance(time_s)
             # What comes back of a posture must not slow a walk.
             self._solve(0.0 if attempt and self._walking else time_s)
-            excess = excess_step(joints, body.joints_rad, steps_rad)
+            excess = excess_step(before, body.angles, steps_rad)
             if excess <= 1.0 or attempt == RETRIES - 1:
                 break
             self._restore(saved)
@@ -204,8 +206,10 @@ class Walker:
             time_s *= share if attempt < 2 else min(share, 0.25)
         self.clamped = 0
         if excess > 1.0:
-            body.joints_rad, self.clamped = clamp_steps(joints, body.joints_rad, steps_rad)
-        self.feed_forward.advance(joints, body, self._drive(), time_s, steps_rad)
+            on_path = body.angles
+            body.take(clamp_steps(before, on_path, steps_rad))
+            self.clamped = sum(map(ne, body.angles, on_path))
+        self.feed_forward.advance(before, self._drive(), time_s, steps_rad)
         share = self.slowdown = time_s / dt_s
         pace = self._pace.value
         self.velocity = (pace[0] * share, pace[1] * share, pace[2] * share)
@@ -381,11 +385,11 @@ class Walker:
         """Height to lie down to: rest height, or as near to it as the legs fold over feet that
         were planted in mid-stride."""
         rest, height = self._robot.stance.rest_height_m, self._posture.value[0]
-        body = WholeBody()
+        body = WholeBody(self._feet)
         lowest = height
         for step in range(1, HEIGHTS + 1):
             lower = height + (rest - height) * step / HEIGHTS
-            body.solve(self._feet, self._pose, NONE, (lower, 0.0, 0.0, 0.0, 0.0, 0.0))
+            body.solve(self._pose, NONE, (lower, 0.0, 0.0, 0.0, 0.0, 0.0))
             if body.out_of_reach:
                 return lowest
             lowest = lower
@@ -478,7 +482,7 @@ class Walker:
 
     def _solve(self, time_s: float) -> None:
         shift, posture = self._shift.value, self._posture.value
-        self._yielding.solve(self.body, self._feet, self._pose, shift, posture, time_s)
+        self._yielding.solve(self.body, self._pose, shift, posture, time_s)
 
     def _drive(self) -> Drive:
         """What carries the body and drives it and the legs in the air along."""

@@ -7,35 +7,49 @@ No time and no gait here.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from itertools import chain
 from math import cos, sin
 
 from hobnail.motion.foot import Foot
+from hobnail.motion.joint_vector import held, legwise, within
 from hobnail.motion.planar import Pose
-from hobnail.robot import Span, Vec2, Vec3
+from hobnail.robot import Vec2, Vec3
 
 
 class WholeBody:
     """The latest solution: `pose` of the body on the ground (x, y, yaw), its `height_m` and
-    `tilt_rad` (roll, pitch), `feet_m` in the body frame, `joints_rad`, and the count of feet
-    that were `out_of_reach`."""
+    `tilt_rad` (roll, pitch), `feet_m` in the body frame, the joints' `angles` in a row and
+    the same as `joints_rad` by legs, and the count of feet that were `out_of_reach`.
 
-    __slots__ = ("feet_m", "height_m", "joints_rad", "out_of_reach", "pose", "tilt_rad")
+    `lows` and `highs` are the joints' limits.
+    """
 
-    def __init__(self) -> None:
+    __slots__ = (
+        "_feet",
+        "angles",
+        "feet_m",
+        "height_m",
+        "highs",
+        "joints_rad",
+        "lows",
+        "out_of_reach",
+        "pose",
+        "tilt_rad",
+    )
+
+    def __init__(self, feet: Sequence[Foot]) -> None:
+        self._feet = feet
+        self.lows = [low for foot in feet for low, _ in foot.limits]
+        self.highs = [high for foot in feet for _, high in foot.limits]
         self.pose: Pose = (0.0, 0.0, 0.0)
         self.height_m = 0.0
         self.tilt_rad = (0.0, 0.0)
         self.feet_m: tuple[Vec3, ...] = ()
+        self.angles: list[float] = []
         self.joints_rad: tuple[Vec3, ...] = ()
         self.out_of_reach = 0
 
-    def solve(
-        self,
-        feet: Sequence[Foot],
-        pose: Pose,
-        shift_m: Vec2,
-        posture: Sequence[float],
-    ) -> None:
+    def solve(self, pose: Pose, shift_m: Vec2, posture: Sequence[float]) -> None:
         """Solve for the walk's `pose`, the body's `shift_m` over its supports and the
         `posture` (height, roll, pitch, yaw, lean x, lean y)."""
         height, roll, pitch, yaw, lean_x, lean_y = posture
@@ -54,8 +68,8 @@ class WholeBody:
         if tilted:
             cr, sr, cp, sp = cos(roll), sin(roll), cos(pitch), sin(pitch)
         feet_m, joints = [], []
-        self.out_of_reach = 0
-        for foot in feet:
+        beyond = set()
+        for foot in self._feet:
             dx, dy = foot.x - x0, foot.y - y0
             x, y, z = c * dx + s * dy, c * dy - s * dx, foot.radius_m + foot.lift_m - height
             if tilted:
@@ -63,26 +77,23 @@ class WholeBody:
                 x, z = cp * x - sp * z, sp * x + cp * z
                 y, z = cr * y + sr * z, cr * z - sr * y
             hip_x, hip_y, hip_z = foot.hip
-            at_y, at_z = y - hip_y, z - hip_z
-            try:
-                angles = foot.kinematics.angles(x - hip_x, at_y, at_z)
-            except ValueError:
-                angles = foot.kinematics.angles(*foot.kinematics.nearest_reachable(x - hip_x, at_y, at_z))
-                self.out_of_reach += 1
-            held = hold(angles, foot.limits)
-            if held != angles:
-                angles = held
-                self.out_of_reach += 1
             feet_m.append((x, y, z))
-            joints.append(angles)
+            kinematics = foot.kinematics
+            try:
+                joints.append(kinematics.angles(x - hip_x, y - hip_y, z - hip_z))
+            except ValueError:
+                beyond.add(len(joints))
+                nearest = kinematics.nearest_reachable(x - hip_x, y - hip_y, z - hip_z)
+                joints.append(kinematics.angles(*nearest))
         self.feet_m = tuple(feet_m)
         self.joints_rad = tuple(joints)
+        self.angles = list(chain.from_iterable(joints))
+        if not within(self.lows, self.angles, self.highs):
+            self.take(held(self.lows, self.angles, self.highs))
+            beyond |= {leg for leg, angles in enumerate(joints) if angles != self.joints_rad[leg]}
+        self.out_of_reach = len(beyond)
 
-
-def hold(angles: Vec3, limits: tuple[Span, ...]) -> Vec3:
-    """Angles held to their limits; the very same tuple when all are within."""
-    a, b, c = angles
-    (a0, a1), (b0, b1), (c0, c1) = limits
-    if a0 <= a <= a1 and b0 <= b <= b1 and c0 <= c <= c1:
-        return angles
-    return min(max(a, a0), a1), min(max(b, b0), b1), min(max(c, c0), c1)
+    def take(self, angles: list[float]) -> None:
+        """Those angles, not the ones solved for."""
+        self.angles = angles
+        self.joints_rad = legwise(angles)

@@ -10,7 +10,6 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 
-from hobnail.motion.foot import Foot
 from hobnail.motion.planar import Pose
 from hobnail.motion.whole_body import WholeBody
 from hobnail.robot import Vec2
@@ -38,7 +37,6 @@ class Yielding:
     def solve(
         self,
         body: WholeBody,
-        feet: Sequence[Foot],
         pose: Pose,
         shift_m: Vec2,
         posture: Sequence[float],
@@ -46,7 +44,7 @@ class Yielding:
     ) -> None:
         """Solve for `body` (see there); `time_s` is for what was given up to come back."""
         if self.share == 1.0:  # as a rule
-            body.solve(feet, pose, shift_m, posture)
+            body.solve(pose, shift_m, posture)
             if body.out_of_reach == 0:
                 self.moving = False
                 return
@@ -57,7 +55,7 @@ class Yielding:
             level = self._level_m
             taken = [height if share == 1.0 else level + share * (height - level)]
             taken += [share * value for value in others]
-            body.solve(feet, pose, (share * shift_m[0], share * shift_m[1]), taken)
+            body.solve(pose, (share * shift_m[0], share * shift_m[1]), taken)
             return body.out_of_reach == 0
 
         before = self.share
