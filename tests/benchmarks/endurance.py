@@ -2,13 +2,12 @@
 
 In real time: a line each tenth of the time; beside it runs an idle sleeper of the
 same period and policy, whose lost ticks are those that the machine took.
-With `simulated`: machine, loop and recorder on a clock that does not wait.
-Run: python tests/benchmarks/endurance.py SECONDS [other|fifo|simulated] [DRIVER]
+The same in simulated time, without process and socket: `soak.py`.
+Run: python tests/benchmarks/endurance.py [SECONDS] [other|fifo] [DRIVER]
 """
 
 from __future__ import annotations
 
-import os
 import signal
 import subprocess
 import sys
@@ -16,11 +15,8 @@ import tempfile
 import time
 from pathlib import Path
 
-from hobnail import Client, load_robot
-from hobnail.service.machine import Machine
+from hobnail import Client
 from hobnail.service.realtime import FIFO_PRIORITY
-from hobnail.service.recorder import Recorder
-from hobnail.service.states import ON_FEET
 
 CONFIG = Path(__file__).parents[2] / "config" / "juniper.yaml"
 
@@ -47,7 +43,7 @@ def resident_kb(pid: int) -> int:
     return int(status.split("VmRSS:")[1].split()[0])
 
 
-def in_real_time(seconds: float, policy: str, driver: str) -> None:
+def walk(seconds: float, policy: str, driver: str) -> None:
     """Walk, turn and change gait in turns; print memory and ticks."""
     with tempfile.TemporaryDirectory(dir="/dev/shm") as folder:
         path = Path(folder) / "hobnail.sock"
@@ -90,42 +86,10 @@ def walk_about(client: Client, pid: int, seconds: float, gaits: list[str]) -> No
     show(client, pid, seconds)
 
 
-def simulated(seconds: float) -> None:
-    """The machine and its recorder, tick by tick, as fast as it goes."""
-    robot = load_robot(CONFIG)
-    dt_s, now_s = robot.period_s, 0.0
-    machine = Machine(robot, now_s=now_s)
-    machine.request("stand", {}, 1, now_s)
-    ticks, began_s = round(seconds / dt_s), time.perf_counter()
-    print("      s   resident kB   states")
-    with tempfile.TemporaryDirectory(dir="/dev/shm") as folder:
-        recorder = Recorder(Path(folder), robot)
-        for k in range(ticks + 1):
-            if k % max(1, ticks // 10) == 0:
-                print(f"{now_s:7.0f} {resident_kb(os.getpid()):13d}   {machine.state}", flush=True)
-            now_s += dt_s
-            if k % 10 == 0 and machine.state in ON_FEET:
-                vx = 0.15 if k // 1000 % 2 else -0.1
-                machine.request("walk", {"vx": vx, "yaw_rate": 0.3}, 1, now_s)
-            if k % 2000 == 0 and machine.state in ON_FEET:
-                machine.request("gait", {"name": robot.gaits[k // 2000 % len(robot.gaits)].name}, 1, now_s)
-            frame = machine.tick(now_s, dt_s)
-            if not frame.release:
-                faults = machine.faults.names()
-                recorder.row(frame, now_s, dt_s, 0.0, machine.command, machine.body.supply_v, faults)
-            machine.faults.drain()
-        recorder.close()
-    took_s = time.perf_counter() - began_s
-    print(f"{seconds / took_s:.0f} times real time; clamped {machine.counters['clamped']}")
-
-
 def main() -> None:
     """Choose by the arguments."""
     words = [*sys.argv[1:], *["600", "other", "chip-model"][len(sys.argv) - 1 :]]
-    if words[1] == "simulated":
-        simulated(float(words[0]))
-    else:
-        in_real_time(float(words[0]), words[1], words[2])
+    walk(float(words[0]), words[1], words[2])
 
 
 def show(client: Client, pid: int, now_s: float) -> None:

@@ -28,6 +28,7 @@ from hobnail.service.notify import Notifier
 from hobnail.service.server import SocketServer
 from hobnail.service.states import State
 from hobnail_drivers.bus_model import BusModel
+from hobnail_drivers.chip_model import ModelledOutputLine
 from hobnail_drivers.contract import Driver
 from hobnail_drivers.faults import FaultInjector
 from hobnail_drivers.gpio import OutputLine
@@ -59,21 +60,6 @@ def brisk(robot: Robot, **safety: Any) -> Robot:
         safety=replace(robot.safety, wake_interval_s=0.04, **safety),
         posture_limits=replace(robot.posture_limits, rate_m_s=0.2),
     )
-
-
-class ModelledLine(OutputLine):
-    """The /OE pins of modelled chips; pulled low when let go of."""
-
-    def __init__(self, chips: list[Chip]) -> None:
-        self._chips = chips
-        self.set(True)
-
-    def set(self, high: bool) -> None:
-        for chip in self._chips:
-            chip.enable(not high)
-
-    def close(self) -> None:
-        self.set(False)
 
 
 class Fed(Notifier):
@@ -164,7 +150,7 @@ class World:
         return self.plan.bus(self.wires[number])
 
     def _open_line(self, chip: str, line: int) -> OutputLine:
-        return ModelledLine(
+        return ModelledOutputLine(
             [self.chips[board.name] for board in self.robot.boards if board.output_enable == (chip, line)]
         )
 
