@@ -103,9 +103,13 @@ class Tally:
 class FileFuzz:
     """The good files, and the judge of the damaged ones; `folder` is for its own files."""
 
-    def __init__(self, folder: Path, seed: int, *, hang_s: float = 0.0, keep: Path | None = None) -> None:
+    def __init__(
+        self, folder: Path, seed: int, *, hang_s: float = 0.0, keep: Path | None = None, walk_one_in: int = 1
+    ) -> None:
         self._seed = seed
         self._hang_s = hang_s
+        self._walk_one_in = walk_one_in
+        self._accepted = 0
         self._keep = keep
         self._robots = [load_robot(path) for path in CONFIGS]
         configs = [Source(path.stem, path.read_text()) for path in CONFIGS]
@@ -219,10 +223,13 @@ class FileFuzz:
         return True
 
     def _walk(self, robot: Robot, random: Random) -> None:
-        """Walk a robot, if none like it has walked before."""
+        """Walk a robot, if none like it has walked before, and it is its turn."""
         like = hash(replace(robot, name="", source="", digest="", boards=(), safety=Safety()))
-        if like not in self._seen:
-            self._seen.add(like)
+        if like in self._seen:
+            return
+        self._seen.add(like)
+        self._accepted += 1
+        if self._accepted % self._walk_one_in == 0:
             self.tally.walked += 1
             walk_a_little(robot, random)
 
@@ -317,12 +324,21 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument("--seed", type=int, default=1)
     parser.add_argument("--time-limit-s", type=float, default=0.0, help="stop after that time; 0: never")
     parser.add_argument("--hang-s", type=float, default=20.0, help="most processor time for one input")
+    parser.add_argument(
+        "--walk-one-in", type=int, default=1, metavar="N", help="let every N-th accepted robot walk"
+    )
     parser.add_argument("--keep", type=Path, default=None, help="folder for inputs that were findings")
     options = parser.parse_args(arguments)
     signal.signal(signal.SIGVTALRM, _hang)
     end = time.monotonic() + (options.time_limit_s or float("inf"))
     with tempfile.TemporaryDirectory(prefix="fuzz-files-") as folder:
-        fuzz = FileFuzz(Path(folder), options.seed, hang_s=options.hang_s, keep=options.keep)
+        fuzz = FileFuzz(
+            Path(folder),
+            options.seed,
+            hang_s=options.hang_s,
+            keep=options.keep,
+            walk_one_in=options.walk_one_in,
+        )
         for number in range(options.first, options.first + options.count):
             if time.monotonic() > end:
                 print(f"stopped before input {number}: time is up")
