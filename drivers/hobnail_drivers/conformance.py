@@ -117,6 +117,24 @@ class DriverContract(ABC):
         driver.write(PULSES_US)
         self.assert_sends(driver, PULSES_US)
 
+    def test_a_cut_may_come_at_any_time_and_release_lets_writing_go_on(self) -> None:
+        driver = self.make(BOARDS, OUTPUTS)
+        driver.cut()
+        driver.open()
+        self.assert_sends(driver, NONE)
+        driver.write(PULSES_US)
+        driver.cut()
+        driver.cut()
+        driver.release()
+        self.assert_sends(driver, NONE)
+        driver.write(PULSES_US)
+        self.assert_sends(driver, PULSES_US)
+        driver.close()
+        driver.cut()
+        driver.open()
+        driver.write(PULSES_US)
+        self.assert_sends(driver, PULSES_US)
+
     def test_opening_again_ends_every_pulse(self) -> None:
         driver = self.opened()
         driver.write(PULSES_US)

@@ -1,7 +1,8 @@
 """The contract that every servo driver keeps: pulses in microseconds, `None` for no signal.
 
 A driver knows boards, channels and pulses; nothing of legs, angles or gaits.
-It is used from one thread at a time, but not always from the same one.
+It is used from one thread at a time, but not always from the same one; `cut`
+alone may be called beside whatever else is under way.
 """
 
 from __future__ import annotations
@@ -165,6 +166,17 @@ class Driver(ABC):
         self._release()
 
     @final
+    def cut(self) -> None:
+        """Switch outputs off by what needs no bus, such as an output-enable line, where there is any.
+
+        From any thread, at any time, while another call hangs as well.  It only
+        comes before `release`, which has to follow as soon as the bus lets it:
+        until a `release` or `open` that begins after it, outputs stay cut,
+        whatever is written.  Raises BusError.
+        """
+        self._cut()
+
+    @final
     def health(self) -> Health:
         """Read the boards' settings back.  Raises BusError, NotOpenError."""
         if not self._is_open:
@@ -193,6 +205,9 @@ class Driver(ABC):
                     f"board {output.board} channel {output.channel}: pulse is {kind}, allowed "
                     f"{output.min_us:.0f} to {output.max_us:.0f} us; nothing was sent"
                 )
+
+    def _cut(self) -> None:  # noqa: B027 -- most boards have nothing but their bus
+        """Must not touch a bus, nor wait for another call; nothing by default."""
 
     @abstractmethod
     def _open(self) -> None: ...

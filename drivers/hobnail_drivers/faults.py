@@ -73,7 +73,7 @@ class FaultInjector:
 
 
 class FaultyDriver(Driver):
-    """Passes everything on to `inner`, when the plan lets it."""
+    """Passes everything on to `inner`, when the plan lets it; `cut` always."""
 
     def __init__(self, inner: Driver, plan: FaultInjector) -> None:
         super().__init__(inner.boards, inner.outputs)
@@ -95,6 +95,9 @@ class FaultyDriver(Driver):
     def _release(self) -> None:
         self._pass_one()
         self.inner.release()
+
+    def _cut(self) -> None:
+        self.inner.cut()
 
     def _health(self) -> Health:
         self._pass_one()

@@ -1,12 +1,14 @@
 """The PCA9685 driver: servos on one or more boards over Linux I2C, pulses in us.
 
 One bus transaction a board a frame.  Never puts a board to sleep while it
-pulses, and never changes its frame rate but in `open`.  Category 0 first: where
-a board's /OE is wired to a GPIO line, `release` drives that before it uses the bus.
+pulses, and never changes its frame rate but in `open`.  Where a board's /OE is
+wired to a GPIO line, `cut` drives that high at once, also while another thread
+hangs in a transfer, and `release` once the pulses under way have ended.
 """
 
 from __future__ import annotations
 
+import threading
 import time
 from collections.abc import Callable, Sequence
 from contextlib import suppress
@@ -43,6 +45,8 @@ class Pca9685Driver(Driver):
         self._wired = [Board(board, self.outputs) for board in self.boards]
         self._buses: dict[int, SmBus] = {}
         self._lines: dict[tuple[str, int], OutputLine] = {}  # /OE; boards may share one
+        self._lines_lock = threading.Lock()  # for the lines and what keeps them high; never during a transfer
+        self._is_held = False  # /OE lines stay high until a release or open that begins after `cut`
         self._is_cut = True  # every output was ended; /OE lines are high
         self._is_unsure = True  # some board may still pulse
 
@@ -56,6 +60,7 @@ class Pca9685Driver(Driver):
 
     def _open(self) -> None:
         self._is_cut = self._is_unsure = True
+        self._is_held = False
         try:
             self._connect()
             for board in self._wired:
@@ -86,19 +91,26 @@ class Pca9685Driver(Driver):
                 raise board.error(error, "writing pulses") from error
 
     def _release(self) -> None:
-        self._is_cut = True
+        was_cut, self._is_cut = self._is_cut, True
+        self._is_held = False  # before anything else: a `cut` from now on holds the lines
         errors: list[BusError] = []
-        for end in (self._cut_line, Board.end_pulses):  # the lines first: they need no bus
-            for board in self._wired:
-                try:
-                    end(board)
-                except BusError as error:
-                    errors.append(error)
-                except OSError as error:
-                    errors.append(board.error(error, "ending pulses"))
-                    errors[-1].__cause__ = error
+        for board in self._wired:
+            try:
+                board.end_pulses()
+            except OSError as error:
+                errors.append(board.error(error, "ending pulses"))
+                errors[-1].__cause__ = error
+        if self._lines:
+            if not errors and not was_cut:  # else the lines would cut the pulses under way
+                self._sleep(1.0 / min(self.frame_hz.values()))
+            errors += self._drive_lines(high=True)
         self._is_unsure = bool(errors)
         if errors:
+            raise errors[0]
+
+    def _cut(self) -> None:
+        self._is_held = True
+        if errors := self._drive_lines(high=True):
             raise errors[0]
 
     def _health(self) -> Health:
@@ -125,8 +137,11 @@ class Pca9685Driver(Driver):
         for board in self._wired:
             where = board.settings.output_enable
             if where is not None and where not in self._lines:
-                self._lines[where] = self._open_line(*where)
-            self._cut_line(board)
+                line = self._open_line(*where)
+                with self._lines_lock:
+                    self._lines[where] = line
+        if errors := self._drive_lines(high=True):
+            raise errors[0]
         for board in self._wired:
             number = board.settings.bus
             if number not in fresh:
@@ -139,26 +154,30 @@ class Pca9685Driver(Driver):
                 self._buses[number] = fresh[number]
             board.connect(fresh[number])
 
-    def _cut_line(self, board: Board) -> None:
-        self._set_line(board, high=True)
-
-    def _set_line(self, board: Board, *, high: bool) -> None:
-        where = board.settings.output_enable
-        if where is not None and where in self._lines:
-            self._lines[where].set(high)
+    def _drive_lines(self, *, high: bool) -> list[BusError]:
+        """Try each line, and give the errors.  Lines that are held stay high."""
+        errors = []
+        with self._lines_lock:
+            for line in self._lines.values():
+                try:
+                    line.set(high or self._is_held)
+                except BusError as error:
+                    errors.append(error)
+        return errors
 
     def _uncut(self) -> None:
         """Let the /OE lines through again; every output behind them is full off."""
         if self._is_unsure:
             raise SetupError("a board may still pulse since the last failure: call open() first")
-        for board in self._wired:
-            self._set_line(board, high=False)
+        if errors := self._drive_lines(high=False):
+            raise errors[0]
         self._is_cut = False
 
     def _let_go(self) -> None:
-        for line in self._lines.values():
-            line.close()
+        with self._lines_lock:
+            for line in self._lines.values():
+                line.close()
+            self._lines.clear()
         for bus in self._buses.values():
             bus.close()
-        self._lines.clear()
         self._buses.clear()

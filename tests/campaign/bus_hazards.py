@@ -90,6 +90,40 @@ def hangs(state: str) -> str:
         return f"told after {took_s:.2f} s, stopped; no pulse once the bus let go"
 
 
+def hangs_with_a_line(state: str) -> str:
+    """A transfer hangs while a stop of category 0 is asked for, and while nobody stops; /OE is wired."""
+    robot = brisk(demo())
+    wired = replace(
+        robot, boards=tuple(replace(board, output_enable=("gpiochip0", 17)) for board in robot.boards)
+    )
+    told = []
+    for asked in (True, False):
+        with robot_in(state, wired, may_cut=True) as world:
+            world.plan.call_next(world.clock.hang)
+            while world.clock.wakes_s is None:  # until the next frame or read-back
+                world.run(world.robot.period_s)
+            began_s = world.clock.now_s
+            if asked:
+                world.ask("stop", 9, category=0)
+            else:
+                _until_told(world, "bus-stalled")
+            took_s = world.clock.now_s - began_s
+            assert world.clock.wakes_s is not None, "the transfer no longer hangs"
+            sent = [
+                pulse for chip in world.chips.values() for pulse in chip.sending_us() if pulse is not None
+            ]
+            assert not sent, f"{len(sent)} outputs pulse while the transfer hangs"
+            told.append(f"{took_s:.2f} s after {'a stop' if asked else 'it began'}")
+            silent(world, 0.5)
+            world.clock.let_go()
+            world.run(0.1)
+            assert world.witness.all_full_off(), "the bus let go, and no release followed"
+            silent(world, 0.5)
+            prove_latched(world)
+            end(world)
+    return f"pins off {' and '.join(told)}, while it hangs; released once the bus let go"
+
+
 def slow(state: str) -> str:
     """Every transfer takes longer than a tick."""
     with robot_in(state) as world:

@@ -65,6 +65,7 @@ HAZARDS = (
     Hazard("bus-flaky", "a transfer fails now and then and ends the run", bus_hazards.flaky),
     Hazard("bus-slow", "frames take longer to send than a tick lasts", bus_hazards.slow, NO_PULSES),
     Hazard("bus-hangs", "a transfer hangs for a second", bus_hazards.hangs),
+    Hazard("bus-hangs-with-oe", "a transfer hangs, /OE is wired", bus_hazards.hangs_with_a_line),
     Hazard("brown-out", "the board loses its settings as the supply sags", bus_hazards.brown_out),
     Hazard("supply-low", "the battery runs low", motion_hazards.supply_low),
     Hazard("card-stalls", "a storage card that stalls freezes the loop", file_hazards.card_stalls),

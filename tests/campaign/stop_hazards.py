@@ -90,18 +90,23 @@ def _stopped_by_contact(state: str) -> str:
 
 
 def switched_off(state: str) -> str:
-    """Pulses end on request, by category 0, and by category 0 with /OE wired: no servo jerks."""
-    with robot_in(state) as world:
-        if state in LATCHED:
-            refused(world, "off", "reset")
-            world.loop.run(lambda: world.state == "stopped")
-        else:
-            world.ask("off")
-            world.until("off", 20.0)
-        heed(world)  # no pulse was cut
-        silent(world, 0.1)
-        assert world.witness.all_full_off(), "full off it has to be, on every channel"
-        end(world)
+    """Pulses end on request and by category 0, with and without /OE wired: no servo jerks."""
+    robot = brisk(demo())
+    wired = replace(
+        robot, boards=tuple(replace(board, output_enable=("gpiochip0", 17)) for board in robot.boards)
+    )
+    for each in (robot, wired):
+        with robot_in(state, each, may_cut=state in LATCHED and each is wired) as world:
+            if state in LATCHED:
+                refused(world, "off", "reset")
+                world.loop.run(lambda: world.state == "stopped")
+            else:
+                world.ask("off")
+                world.until("off", 20.0)
+            heed(world)  # no pulse was cut
+            silent(world, 0.1)
+            assert world.witness.all_full_off(), "full off it has to be, on every channel"
+            end(world)
     with robot_in(state) as world:
         world.ask("stop", category=0)
         world.run(world.robot.period_s)
@@ -109,10 +114,8 @@ def switched_off(state: str) -> str:
         silent(world, 0.1)
         assert world.witness.all_full_off(), "full off it has to be, on every channel"
         end(world)
-    robot = brisk(demo())
-    wired = tuple(replace(board, output_enable=("gpiochip0", 17)) for board in robot.boards)
     # The line cuts at once: that is what it is for.
-    with robot_in(state, replace(robot, boards=wired), may_cut=True) as world:
+    with robot_in(state, wired, may_cut=True) as world:
         world.ask("stop", category=0)
         assert all(pulse is None for chip in world.chips.values() for pulse in chip.sending_us())
         silent(world, 0.1)

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import pytest
 
 from hobnail_drivers.chip_model import ModelledPca9685Driver
-from hobnail_drivers.conformance import DriverContract, ManualClock
+from hobnail_drivers.conformance import NONE, PULSES_US, DriverContract, ManualClock
 from hobnail_drivers.contract import BoardSettings, Driver, Output
 from hobnail_drivers.faults import FaultInjector, FaultyDriver
 from hobnail_drivers.simulated import SimulatedDriver
@@ -49,6 +50,31 @@ class TestModelledWithPlainI2c(DriverContract):
 
 class TestModelledWithSmbusOnly(TestModelledWithPlainI2c):
     plain_i2c = False
+
+
+class TestModelledWithOutputEnable(TestModelledWithPlainI2c):
+    """/OE of all boards on one line."""
+
+    def make(self, boards: Sequence[BoardSettings], outputs: Sequence[Output]) -> Driver:
+        return super().make([replace(board, output_enable=("gpiochip0", 17)) for board in boards], outputs)
+
+    def test_from_a_cut_on_nothing_is_sent_until_release_or_open(self) -> None:
+        driver = self.opened()
+        for allow in (driver.release, driver.open):
+            driver.write(PULSES_US)
+            driver.cut()
+            self.assert_sends(driver, NONE)
+            driver.write(PULSES_US)
+            self.assert_sends(driver, NONE)
+            allow()
+            self.assert_sends(driver, NONE)
+            driver.write(PULSES_US)
+            self.assert_sends(driver, PULSES_US)
+            driver.release()
+            driver.cut()
+            driver.write(PULSES_US)  # the first one, which would enable the outputs
+            self.assert_sends(driver, NONE)
+            allow()
 
 
 class TestModelledInAFile(TestModelledWithPlainI2c):

@@ -7,7 +7,8 @@ import math
 import struct
 import subprocess
 import sys
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
+from threading import Thread
 from typing import Any
 
 import pytest
@@ -21,11 +22,12 @@ from hobnail_drivers.contract import BoardSettings, Output
 from hobnail_drivers.errors import BusError, MissingLibraryError, SettingsError, SetupError
 from hobnail_drivers.faults import FaultInjector
 from hobnail_drivers.gpio import OutputLine
-from hobnail_drivers.i2c import RegisterBus
+from hobnail_drivers.i2c import RegisterBus, SmBus
 from hobnail_drivers.libraries import load_pwm_chip
 from hobnail_drivers.pca9685 import Pca9685Driver
 
 FRAME_S = 1.0 / 50.0288
+WAIT_S = 10.0  # a bound for a broken test, not a time that anything takes
 
 
 @pytest.fixture
@@ -420,38 +422,155 @@ class Line(OutputLine):
         self.happened.append("closed")
 
 
-def test_oe_is_cut_before_the_bus_is_used_and_low_only_while_all_is_off(clock: ManualClock) -> None:
-    happened: list[str] = []
-    model = ModelledPca9685Driver([board()], outputs(), clock=clock, sleep=clock.sleep)
-    bus = model.buses[1]
-    bus.open()
-    plan = FaultInjector()
+class Wired:
+    """An open board that pulses, whose /OE is wired; `happened` has what line, bus and sleep did, in turn."""
+
+    def __init__(self, clock: ManualClock) -> None:
+        model = ModelledPca9685Driver([board()], outputs(), clock=clock, sleep=clock.sleep)
+        bus = model.buses[1]
+        self.happened: list[str] = []
+        self.plan = FaultInjector()
+        self.plan.call(1, lambda: self.happened.append("bus"), count=None)
+
+        def open_bus(_: int) -> SmBus:
+            bus.open()
+            return self.plan.bus(bus)
+
+        def sleep(seconds: float) -> None:
+            clock.sleep(seconds)
+            self.happened.append("frame" if seconds > 0.999 * FRAME_S else "wait")
+
+        self.driver = Pca9685Driver(
+            [board(output_enable=("gpiochip0", 17))],
+            outputs(),
+            open_bus=open_bus,
+            open_line=lambda *_: Line(self.happened),
+            sleep=sleep,
+        )
+        self.driver.open()
+        self.opening = self.happened[:]
+        self.driver.write([1500.0] * 12)
+        self.happened.clear()
+
+
+def test_oe_is_high_before_the_bus_is_used_and_low_once_all_is_off(clock: ManualClock) -> None:
+    opening = Wired(clock).opening
+    assert opening[0] == "high"
+    assert opening[-1] == "low"
+    assert opening.count("low") == 1
+
+
+def test_a_release_lets_the_pulses_under_way_end_before_oe_is_high(clock: ManualClock) -> None:
+    wired = Wired(clock)
+    wired.driver.release()
+    assert wired.happened == ["bus", "frame", "high"]
+    wired.driver.release()
+    assert wired.happened[3:] == ["bus", "high"]
+    wired.driver.write([1500.0] * 12)
+    assert wired.happened[5:] == ["low", "bus"]
+    wired.driver.close()
+    assert wired.happened[7:] == ["bus", "frame", "high", "closed"]
+
+
+def test_a_release_that_fails_leaves_oe_high_until_open(clock: ManualClock) -> None:
+    wired = Wired(clock)
+    wired.plan.fail_next(errno.ETIMEDOUT, count=None)
+    with pytest.raises(BusError):
+        wired.driver.release()
+    assert wired.happened == ["bus", "high"]
+    wired.plan.clear()
+    with pytest.raises(SetupError):
+        wired.driver.write([1500.0] * 12)  # it may still pulse behind the line
+    assert "low" not in wired.happened
+    wired.driver.open()
+    assert wired.happened[-1] == "low"
+
+
+@pytest.mark.parametrize("call", ["write", "first write", "release", "health", "open", "close"])
+def test_oe_is_cut_at_once_while_any_transfer_hangs_and_stays_high(clock: ManualClock, call: str) -> None:
+    wired = Wired(clock)
+    driver = wired.driver
+    calls: dict[str, Callable[[], object]] = {
+        "write": lambda: driver.write([1500.0] * 12),
+        "first write": lambda: driver.write([1500.0] * 12),
+        "release": driver.release,
+        "health": driver.health,
+        "open": driver.open,
+        "close": driver.close,
+    }
+    if call == "first write":
+        driver.release()
+
+    def hang() -> None:
+        """What holds the transfer up is over once another thread has cut."""
+        thread = Thread(target=driver.cut, daemon=True)
+        wired.happened.append("hangs")
+        thread.start()
+        thread.join(WAIT_S)
+        assert not thread.is_alive(), "the cut waits for the transfer"
+
+    wired.plan.call_next(hang)
+    calls[call]()
+    after = wired.happened[wired.happened.index("hangs") :]
+    assert after[1] == "high"
+    assert "low" not in after
+    if call != "close":
+        driver.release()
+        driver.write([1500.0] * 12)
+        assert wired.happened[-2:] == ["low", "bus"]
+
+
+def test_a_cut_that_meets_the_line_on_its_way_down_has_the_last_word(clock: ManualClock) -> None:
+    wired = Wired(clock)
+    wired.driver.release()
+    thread = Thread(target=wired.driver.cut, daemon=True)
+
+    class Slow(Line):
+        def set(self, high: bool) -> None:
+            if not high:
+                thread.start()
+                thread.join(0.1)  # were it free to go before, it would be done by then
+            super().set(high)
+
+    wired.driver._lines = {("gpiochip0", 17): Slow(wired.happened)}
+    wired.driver.write([1500.0] * 12)
+    thread.join(WAIT_S)
+    assert "low" in wired.happened
+    assert [word for word in wired.happened if word in ("high", "low")][-1] == "high"
+
+
+def test_every_oe_line_is_tried_though_one_fails(clock: ManualClock) -> None:
+    class Broken(Line):
+        def set(self, high: bool) -> None:
+            super().set(high)
+            if broken:
+                raise BusError(errno.EIO, "gone", "gpiochip0 line 17", "GPIO")
+
+    broken = False
+    told: dict[int, list[str]] = {17: [], 18: []}
+    model = two_boards(clock)
+    model.buses[1].open()
     driver = Pca9685Driver(
-        [board(output_enable=("gpiochip0", 17))],
-        outputs(),
-        open_bus=lambda _: plan.bus(bus),
-        open_line=lambda *_: Line(happened),
+        [
+            board("fore", 0x40, output_enable=("gpiochip0", 17)),
+            board("hind", 0x41, output_enable=("gpiochip0", 18)),
+        ],
+        model.outputs,
+        open_bus=lambda _: model.buses[1],
+        open_line=lambda _, line: (Broken if line == 17 else Line)(told[line]),
         sleep=clock.sleep,
     )
-    plan.call(1, lambda: happened.append("bus"), count=None)
     driver.open()
-    assert happened[0] == "high"
-    assert happened[-1] == "low"
-    happened.clear()
-    driver.release()
-    assert happened == ["high", "bus"]
-    driver.write([1500.0] * 12)
-    assert happened == ["high", "bus", "low", "bus"]
-    plan.fail_next(errno.ETIMEDOUT, count=None)
-    with pytest.raises(BusError):
-        driver.release()
-    assert happened[4:] == ["high", "bus"]
-    plan.clear()
-    with pytest.raises(SetupError):
-        driver.write([1500.0] * 12)  # it may still pulse behind the line
-    assert "low" not in happened[4:]
-    driver.close()
-    assert happened[-1] == "closed"
+    driver.write([1500.0] * 8)
+    broken = True
+    for call in (driver.cut, driver.release):
+        told[18].clear()
+        with pytest.raises(BusError, match="line 17"):
+            call()
+        assert told[18] == ["high"]
+    assert model.chips["fore"].is_full_off()
+    with pytest.raises(SetupError):  # as long as nobody knows what the line does
+        driver.write([1500.0] * 8)
 
 
 def test_boards_may_share_an_oe_line(clock: ManualClock) -> None:

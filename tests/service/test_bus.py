@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import errno
 from collections.abc import Callable, Iterator
+from dataclasses import replace
+from functools import partial
 from threading import Event
 
 import pytest
@@ -186,6 +188,76 @@ def test_a_transfer_that_hangs_for_a_second_holds_up_nobody(rig: Rig) -> None:
     assert rig.pulses == (None,) * 12
     assert rig.bus.frames == 1
     assert rig.bus.busy_since_s is None
+
+
+def test_a_cut_drives_the_line_while_a_transfer_hangs_and_a_release_follows() -> None:
+    robot = juniper()
+    wired = replace(
+        robot, boards=tuple(replace(board, output_enable=("gpiochip0", 17)) for board in robot.boards)
+    )
+    plan = FaultInjector()
+    driver = make_driver(partial(ModelledPca9685Driver, wrap_bus=plan.bus), wired)  # type: ignore[arg-type]
+    assert isinstance(driver, ModelledPca9685Driver)
+    chips = driver.chips.values()
+    bus, hang = Bus(driver, retries=3), Hang()
+    bus.start()
+    bus.set_up()
+    assert bus.wait(WAIT_S)
+    bus.submit(FRAME)
+    assert bus.wait(WAIT_S)
+    assert any(pulse is not None for chip in chips for pulse in chip.sending_us())
+    plan.call_next(hang)
+    bus.submit(OTHER)
+    assert hang.begun.wait(WAIT_S)
+    bus.cut()
+    assert bus.busy_since_s is not None  # it hangs on
+    assert all(pulse is None for chip in chips for pulse in chip.sending_us())
+    assert not bus.released  # for the boards do not know yet
+    assert not all(chip.is_full_off() for chip in chips)
+    hang.let_go.set()
+    assert bus.wait(WAIT_S)
+    assert bus.released
+    assert all(chip.is_full_off() for chip in chips)
+    assert bus.events() == []
+    bus.submit(FRAME)
+    assert bus.wait(WAIT_S)
+    assert any(pulse is not None for chip in chips for pulse in chip.sending_us())
+    plan.call_next(hang := Hang())
+    bus.submit(OTHER)
+    assert hang.begun.wait(WAIT_S)
+    assert not bus.close(0.01)  # at the end of the service likewise
+    assert all(pulse is None for chip in chips for pulse in chip.sending_us())
+    hang.let_go.set()
+    assert bus.close(WAIT_S)
+
+
+def test_a_line_that_cannot_cut_is_told_and_the_release_comes_all_the_same(
+    rig: Rig, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def broken() -> None:
+        raise BusError(errno.EIO, "gone", "gpiochip0 line 17", "GPIO")
+
+    rig.send()
+    monkeypatch.setattr(rig.inner, "_cut", broken)
+    rig.bus.cut()
+    rig.done()
+    assert rig.bus.released
+    assert rig.pulses == (None,) * 12
+    (event,) = rig.bus.events()
+    assert event.fault == "bus-error"
+    assert "line 17" in event.detail
+
+
+def test_frames_that_fail_are_cut_by_the_line_before_the_bus_is_tried_again(
+    rig: Rig, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    rig.send()
+    calls: list[str] = []
+    monkeypatch.setattr(rig.inner, "_cut", lambda: calls.append("cut"))
+    rig.plan.fail_next(errno.EIO, count=4)
+    rig.plan.call(rig.plan.transfers + 5, lambda: calls.append("transfer"))
+    rig.send()
+    assert calls == ["cut", "transfer"]
 
 
 def test_the_newest_frame_wins(rig: Rig) -> None:

@@ -1,6 +1,7 @@
 """The bus thread: the only one that calls the driver; times in s on an injected clock.
 
-The loop hands jobs over and goes on; it never waits for a transfer.  A frame
+The loop hands jobs over and goes on; it never waits for a transfer.  Only
+`Driver.cut`, which needs no bus, is called at once, whatever hangs.  A frame
 not yet sent is replaced by a newer one, a release goes before everything, and
 what happened comes back as events for the state machine.  Knows no states: it
 does not decide when to stop, and it never sets boards up again by itself.
@@ -92,6 +93,12 @@ class Bus:
             self.released = False
             self._wanted.notify()
 
+    def cut(self) -> None:
+        """End every pulse at once where a line does that, even while a transfer hangs; then `release`."""
+        with self._wanted:  # so that the release begins after the cut, as the driver wants it
+            self.release()
+            self._cut_lines()
+
     def set_up(self) -> None:
         """Open the driver, or set the boards up again, every output off."""
         with self._wanted:
@@ -124,15 +131,22 @@ class Bus:
             return self._wanted.wait_for(lambda: not self.pending and not self._check, timeout_s)
 
     def close(self, timeout_s: float) -> bool:
-        """Release, close the driver and end the thread; False when a transfer hangs."""
+        """Cut, release, close the driver and end the thread; False when a transfer hangs."""
         if not self._thread.is_alive():
             return True
         with self._wanted:
             self._frame = None
             self._close = True
+            self._cut_lines()
             self._wanted.notify()
         self._thread.join(timeout_s)
         return not self._thread.is_alive()
+
+    def _cut_lines(self) -> None:
+        try:
+            self.driver.cut()
+        except Exception as error:  # noqa: BLE001 -- the release comes all the same
+            self._events.append(Event("bus-error", f"outputs could not be cut by their line: {error}"))
 
     # In the thread
 
@@ -197,6 +211,7 @@ class Bus:
         """No more frames until the boards are set up again; pulses end now, if they can."""
         self.is_set_up = False
         self._events.append(Event(fault, detail))
+        self._cut_lines()
         self._do_release()
 
     def _do_release(self) -> None:

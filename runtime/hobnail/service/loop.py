@@ -94,7 +94,7 @@ class Loop:
         self._errors = 0.0
         self._checked_s = self._young_s = self._old_s = clock()
         self._fed_s = -1e9
-        machine.on_cut = bus.release
+        machine.on_cut = bus.cut
         machine.instruments["timing"] = self.timing
 
     def timing(self) -> dict[str, object]:
@@ -148,7 +148,7 @@ class Loop:
 
     def _failed(self, error: Exception, now_s: float) -> None:
         """An error of our own: cut the pulses and tell; raise it when there are too many."""
-        self.bus.release()
+        self.bus.cut()
         self._errors += 1.0
         if self._errors >= ERRORS_AT_ONCE:
             raise error
