@@ -53,6 +53,18 @@ def test_a_stop_ends_it_with_another_code(category: int) -> None:
     rig.expect(State.STOPPED)
 
 
+@pytest.mark.parametrize("after_s", [0.05, 2.0, 5.0])
+def test_a_stop_that_is_reset_before_the_next_tick_ends_it_as_well(after_s: float) -> None:
+    def stop_and_reset(rig: Rig) -> None:
+        rig.ask("stop", category=0)
+        rig.ask("reset")
+
+    rig, errand = run(STEPS, {after_s: stop_and_reset})
+    assert errand.exit_code == 75
+    assert rig.machine.closing in ("the route was stopped", "the route was given up")
+    rig.expect(State.OFF)
+
+
 def test_a_route_that_does_not_fit_is_not_walked() -> None:
     rig, errand = run((Pose(height_m=5.0),))
     assert errand.exit_code == 75

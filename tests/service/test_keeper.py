@@ -69,6 +69,19 @@ def test_the_posture_is_kept_when_the_pulses_end(stage: Stage) -> None:
     assert load_posture(stage.directory, juniper()) == stage.rig.machine.body.last_rad
 
 
+def test_a_stop_that_is_reset_before_the_next_tick_keeps_posture_and_recording(stage: Stage) -> None:
+    stage.rig.ask("stand")
+    stage.go(6.0)
+    stage.rig.ask("stop", category=0)
+    stage.rig.ask("reset")
+    stage.go(0.01)
+    stage.rig.expect(State.OFF)
+    stage.writer.work()
+    assert load_posture(stage.directory, juniper()) is not None
+    (kept,) = (stage.directory / RECORDINGS).iterdir()
+    assert kept.name.endswith("-stop.ring")
+
+
 def test_a_stop_keeps_the_recording(stage: Stage) -> None:
     stage.rig.ask("stand")
     stage.go(6.0)

@@ -556,6 +556,19 @@ def test_a_broken_stop_wire_at_start_keeps_the_robot_from_waking() -> None:
     assert "cannot be read" in json.dumps(stage.machine.snapshot(stage.now_s))
 
 
+def test_a_stop_that_is_reset_before_the_next_tick_is_logged(tmp_path: Path) -> None:
+    writer = Writer("test")
+    stage = Stage(log=EventLog(writer, tmp_path))
+    stage.machine.request("stand", {}, 1, stage.now_s)
+    stage.run(0.1)
+    stage.machine.request("stop", {"category": 0, "reason": "a shout"}, 1, stage.now_s)
+    stage.machine.request("reset", {}, 1, stage.now_s)
+    stage.run(0.1)
+    assert writer.close(WAIT_S)
+    log = [json.loads(line)["text"] for line in (tmp_path / LOG_NAME).read_text().splitlines()]
+    assert log == ["off -> waking", "waking -> stopped: a shout (client 1)", "stopped -> off"]
+
+
 def test_a_log_that_stalls_for_seconds_leaves_every_tick_on_time(tmp_path: Path) -> None:
     begun, let_go = Event(), Event()
 

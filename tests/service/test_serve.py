@@ -132,8 +132,9 @@ def test_a_life_over_the_socket(tmp_path: Path, plan: FaultInjector, monkeypatch
     assert (service.socket.parent / "boards").read_text() == ""
     assert last_state(service.socket.parent / RING_NAME) is State.RESTING
     assert load_posture(state_dir, juniper()) is not None
-    recordings = list((state_dir / RECORDINGS).iterdir())
-    assert [read_ring(path).rows[-1].state for path in recordings] == [State.WALKING]
+    (recording,) = (state_dir / RECORDINGS).iterdir()
+    # The writer may have come to it a little later; what led to the stop is in it all the same.
+    assert State.WALKING in {row.state for row in read_ring(recording).rows}
     log = [json.loads(line) for line in (log_dir / LOG_NAME).read_text().splitlines()]
     stopped = next(entry["text"] for entry in log if "stopped" in entry["text"])
     assert stopped == "walking -> stopped: a test (client 1)"

@@ -28,7 +28,8 @@ class Errand:
         """Go on with it; once a tick."""
         if machine.closing:
             return
-        if machine.stop_record is not None:
+        stopped = any(after is State.STOPPED for _, after, _ in machine.passages)  # and reset since
+        if stopped or machine.stop_record is not None:
             machine.power_down("the route was stopped")
             return
         try:

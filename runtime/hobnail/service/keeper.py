@@ -38,7 +38,6 @@ class Keeper:
         self._seen = self._found = signature(sources)
         self._looked_s = machine.started_s
         self._dropped = 0
-        self._state = machine.state
 
     def keep_previous(self) -> None:
         """The ring before this one was interrupted: keep it."""
@@ -47,11 +46,10 @@ class Keeper:
     def update(self, now_s: float) -> None:
         """Once a tick."""
         machine, writer = self._machine, self._writer
-        if machine.state is not self._state:
-            before, self._state = self._state, machine.state
-            if self._state in NO_PULSES and before not in NO_PULSES:
+        for before, after, _ in machine.passages:
+            if after in NO_PULSES and before not in NO_PULSES:
                 self._keep_posture(machine.robot)
-            if self._state is State.STOPPED and before is not State.OFF:
+            if after is State.STOPPED and before is not State.OFF:
                 self._keep(RING_NAME, "stop")
         if writer.dropped > self._dropped:
             machine.report("recorder-behind", now_s, f"{writer.dropped} dropped so far")

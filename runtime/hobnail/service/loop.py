@@ -219,9 +219,8 @@ class Loop:
             )
         if self._log is None:
             return
-        if frame.state is not self._state:
-            why = f": {machine.stop_record.reason}" if machine.stop_record else ""
-            self._log.event("state", f"{self._state} -> {frame.state}{why}", now_s)
+        for before, after, reason in machine.passages:
+            self._log.event("state", f"{before} -> {after}{reason and f': {reason}'}", now_s)
         for line in machine.faults.drain():
             self._log.event("fault", line, now_s)
 

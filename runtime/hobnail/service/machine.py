@@ -30,6 +30,7 @@ from hobnail.service.states import (
     TRANSITIONS,
     Command,
     Frame,
+    Passage,
     State,
     Stop,
 )
@@ -47,6 +48,8 @@ class Machine:
     `goal` is the state that the robot is on its way to: off, resting or standing.
     `wake_blocked` is set by the loop while the boards are not set up: why waking waits.
     `instruments` are read for the snapshot: name -> a callable giving what `state` shows.
+    `passages` are the changes of state from the tick before up to the newest one, as many
+    as there were: whoever compares states would miss a stop that was reset between ticks.
     `on_cut` is called at once when the pulses are cut, before the next frame says so.
     """
 
@@ -76,6 +79,8 @@ class Machine:
         self.instruments = dict(instruments or {})
         self.counters = {"clamped": 0, "out_of_reach": 0, "slowed": 0}
         self.on_cut: Callable[[], object] | None = None
+        self.passages: tuple[Passage, ...] = ()
+        self._passing: list[Passage] = []
         self._load = LoadWatch(robot)
         self._requests = Requests(self)
         self._route_client = LOCAL_CLIENT
@@ -93,6 +98,8 @@ class Machine:
         self._judge(now_s)
         if advance:
             self._advance(now_s, dt_s)
+        self.passages = tuple(self._passing)
+        self._passing.clear()
         body = self.body
         return Frame(
             self.state, body.pulses_us, self.state in NO_PULSES, body.joints_rad, self.setups, body.tick
@@ -371,4 +378,6 @@ class Machine:
     def _enter(self, state: State, now_s: float) -> None:
         if state not in TRANSITIONS[self.state]:
             raise RuntimeError(f"no way from {self.state} to {state}")
+        reason = self.stop_record.reason if self.stop_record else ""
+        self._passing.append(Passage(self.state, state, reason))
         self.state, self.since_s = state, now_s

@@ -81,6 +81,14 @@ NEXT: dict[State, str] = {
 }
 
 
+class Passage(NamedTuple):
+    """A change of state, and the reason of the stop that it belongs to, if it does to one."""
+
+    before: State
+    after: State
+    reason: str
+
+
 class Frame(NamedTuple):
     """What one tick hands to the bus.
 
