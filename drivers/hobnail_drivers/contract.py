@@ -11,7 +11,6 @@ import math
 from abc import ABC, abstractmethod
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from operator import le
 from typing import ClassVar, final
 
 from hobnail_drivers.errors import NotOpenError, PulseError, SettingsError
@@ -154,8 +153,9 @@ class Driver(ABC):
             raise NotOpenError("the driver is not open: call open() first")
         if len(pulses_us) != len(self.outputs):
             raise PulseError(f"{len(pulses_us)} pulses for {len(self.outputs)} outputs; nothing was sent")
-        if None in pulses_us or not self._within_limits(pulses_us):  # type: ignore[arg-type]
-            self._check_each(pulses_us)
+        for pulse, low, high in zip(pulses_us, self._lows_us, self._highs_us, strict=True):
+            if pulse is not None and not low <= pulse <= high:
+                self._refuse(pulses_us)
         self._write(pulses_us)
 
     @final
@@ -194,10 +194,7 @@ class Driver(ABC):
         """Where the boards are, a line each, for the release helper (see `board_notes`); none by default."""
         return ()
 
-    def _within_limits(self, pulses_us: Sequence[float]) -> bool:
-        return all(map(le, self._lows_us, pulses_us)) and all(map(le, pulses_us, self._highs_us))
-
-    def _check_each(self, pulses_us: Pulses) -> None:
+    def _refuse(self, pulses_us: Pulses) -> None:
         for pulse, output in zip(pulses_us, self.outputs, strict=True):
             if pulse is not None and not output.min_us <= pulse <= output.max_us:
                 kind = "not a number" if math.isnan(pulse) else f"{pulse:.1f} us"

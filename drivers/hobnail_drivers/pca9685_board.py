@@ -40,7 +40,8 @@ class _Run:
         self.first = slots[0][0]
         self.rise = slots[0][2]
         self.register = r.led_on_l(self.first) + 2
-        self._slots = [(index, rise) for _, index, rise in slots]
+        # A pulse of so many counts falls so many after it rises; half a count more rounds it.
+        self._slots = [(index, rise + 0.5) for _, index, rise in slots]
         self._counts = [0] * (2 * len(slots) - 1)  # fall, rise, fall, ..., fall
         self._counts[1::2] = [rise for _, _, rise in slots[1:]]
         self._pack_into = struct.Struct(f"<{len(self._counts)}H").pack_into
@@ -56,8 +57,8 @@ class _Run:
         self._counts[0::2] = [
             r.FULL_16
             if (pulse_us := pulses_us[index]) is None
-            else int(pulse_us * counts_a_us + 0.5) + rise & 0xFFF
-            for index, rise in self._slots
+            else int(pulse_us * counts_a_us + ahead) & 0xFFF
+            for index, ahead in self._slots
         ]
         self._pack_into(self.buffer, 1, *self._counts)
 

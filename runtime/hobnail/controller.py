@@ -9,11 +9,10 @@ from __future__ import annotations
 
 import math
 from itertools import chain
-from operator import add, mul
 from typing import NamedTuple
 
 from hobnail.errors import CommandError
-from hobnail.motion.joint_vector import STEP_SHARE, legwise
+from hobnail.motion.joint_steps import STEP_SHARE
 from hobnail.motion.plan import joint_speeds_rad_s
 from hobnail.motion.planar import to_origin
 from hobnail.motion.walker import Walker
@@ -60,15 +59,14 @@ class Controller:
         self.robot = robot
         self._maps = [JointMap(joint) for joint in robot.joints]
         # Most servos have a straight map, which needs no looking up.
-        self._straight = not any(m.knots_rad for m in self._maps)
-        self._offsets_us = [m.pieces[0][0] for m in self._maps]
-        self._slopes_us = [m.pieces[0][1] for m in self._maps]
+        straight = not any(m.knots_rad for m in self._maps)
+        self._lines = [m.pieces[0] for m in self._maps] if straight else None
         limits = [tuple(JointMap(joint).reachable_rad for joint in leg.joints) for leg in robot.legs]
         self._walker = Walker(robot, limits, at_rest=at_rest)
         self._supply_v = robot.supply.nominal_v
         self._speeds = joint_speeds_rad_s(robot, self._supply_v)
         self._dt_s = 0.0
-        self._steps: list[float] = []
+        self._steps: list[Vec3] = []
 
     @property
     def supply_v(self) -> float:
@@ -164,20 +162,23 @@ class Controller:
                 raise CommandError(f"dt_s is {dt_s} s; allowed: more than 0 to {LONGEST_TICK_S:g} s")
             self._dt_s = dt_s
             share = dt_s * STEP_SHARE
-            self._steps = [speed * share for speed in chain.from_iterable(self._speeds)]
+            self._steps = [(a * share, b * share, c * share) for a, b, c in self._speeds]
         walker = self._walker
         walker.tick(dt_s, self._steps)
-        body, commanded = walker.body, walker.feed_forward.angles
-        if self._straight:
-            pulses = tuple(map(add, self._offsets_us, map(mul, self._slopes_us, commanded)))
+        body, commanded = walker.body, walker.feed_forward.commanded_rad
+        angles = chain.from_iterable(commanded)
+        if self._lines:
+            pulses = [
+                offset + slope * angle for angle, (offset, slope) in zip(angles, self._lines, strict=True)
+            ]
         else:
-            pulses = tuple([m.pulse_us(angle) for m, angle in zip(self._maps, commanded, strict=True)])
+            pulses = [m.pulse_us(angle) for angle, m in zip(angles, self._maps, strict=True)]
         return Tick(
             body.joints_rad,
-            legwise(commanded),
+            commanded,
             body.feet_m,
             walker.stance,
-            pulses,
+            tuple(pulses),
             walker.slowdown,
             body.pose,
             walker.velocity,

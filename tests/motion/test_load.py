@@ -26,6 +26,7 @@ Array = NDArray[np.float64]
 ROBOTS = pytest.mark.parametrize("robot", [juniper(), bramble(), anvil()], ids=lambda robot: robot.name)
 angles_near = st.tuples(st.floats(-0.4, 0.4), st.floats(-0.4, 0.4), st.floats(-0.5, 0.5))
 STILL = (0.0, 0.0, 0.0)
+UNLOADED = (0.0, 0.0, 0.0, 0.0)
 forces = st.tuples(st.floats(-5.0, 5.0), st.floats(-5.0, 5.0), st.floats(0.0, 30.0))
 
 
@@ -65,8 +66,12 @@ def corrections(robot: Robot) -> list[LegCorrection]:
 
 def loaded(correction: LegCorrection, leg: Leg, angles: Vec3, force: Vec3) -> Vec3:
     """What a leg that stands still under a load is sent."""
-    _, y, z = LegKinematics(leg).foot(*angles)
-    return correction.command(angles, STILL, y, z, force)
+    return correction.command(angles, angles, 1.0, foot_of(leg, angles), 1.0, (*force, 0.0))
+
+
+def foot_of(leg: Leg, angles: Vec3) -> Vec3:
+    """Where the foot is (body frame)."""
+    return vec3(np.array(LegKinematics(leg).foot(*angles)) + np.array(leg.hip_m))
 
 
 def held_torques(robot: Robot, leg: int, angles: Vec3, force: Vec3) -> Array:
@@ -214,7 +219,7 @@ def test_a_round_foot_rolls_without_slip_under_a_body_that_goes_straight(
             if corrected:
                 # Less what the links' own weight asks for: that is another test's.
                 with_it, without = (
-                    correction.command(angles, STILL, y, z, STILL) for correction in (round_foot, pointed)
+                    loaded(correction, leg, angles, STILL) for correction in (round_foot, pointed)
                 )
                 angles = vec3(np.array(angles) + np.array(with_it) - np.array(without))
             centres.append(kinematics.foot(*angles))
@@ -272,8 +277,9 @@ def test_a_servo_that_trails_so_commanded_follows_its_path(robot: Robot) -> None
             command = np.array(wanted)
             if lead:
                 at, moving = vec3(wanted), vec3(speeds)
-                here = np.array(correction.command(at, moving, 0.0, -0.1, STILL))
-                command += here - np.array(correction.command(at, STILL, 0.0, -0.1, STILL))
+                before = vec3(np.array(at) - 1e-3 * np.array(moving))
+                here = correction.command(at, before, 1e3, foot_of(robot.legs[0], at), 0.0, UNLOADED)
+                command += np.array(here) - np.array(loaded(correction, robot.legs[0], at, STILL))
             return np.asarray(stiffness * (command - angles) / slope)
 
         found = solve_ivp(speed, (0.0, 1.5), path(0.0)[0], t_eval=np.linspace(0.5, 1.5, 60), max_step=0.01)

@@ -7,46 +7,43 @@ how fast the robot goes: they follow it as far as each joint's step allows.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from itertools import repeat
-from operator import mul, sub
+from math import inf
 
 from hobnail.motion.foot import Foot
-from hobnail.motion.joint_vector import clamp_steps, held, legwise, within
+from hobnail.motion.joint_steps import clamp_limits, clamp_steps
+from hobnail.motion.load import Drive
 from hobnail.motion.whole_body import WholeBody
-
-# What the ground does through all feet together: force ahead, left and up (N), and the
-# turning about the body, as force over arm for a foot that carries everything (N/m).
-Drive = tuple[float, float, float, float]
+from hobnail.robot import Vec3
 
 
 class FeedForward:
-    """`angles` holds what the servos are sent, all joints in a row."""
+    """`commanded_rad` holds what the servos are sent, leg by leg."""
 
-    __slots__ = ("_active", "_body", "_legs", "angles")
+    __slots__ = ("_body", "_legs", "commanded_rad")
 
     def __init__(self, feet: Sequence[Foot], body: WholeBody, drive: Drive) -> None:
         """For a body that stands still."""
         self._body = body
-        self._legs = [(foot, foot.correction.command, foot.hip[1], foot.hip[2]) for foot in feet]
-        self._active = any(foot.correction.active for foot in feet)
-        self.angles = self._wanted(body.angles, drive, 1.0)
+        self._legs = [(foot, foot.correction.command, foot.limits) for foot in feet]
+        self.commanded_rad = body.joints_rad
+        self.advance(body.joints_rad, drive, 1.0, [(inf, inf, inf)] * len(feet))
 
-    def advance(self, before: Sequence[float], drive: Drive, time_s: float, steps: Sequence[float]) -> None:
+    def advance(self, before: Sequence[Vec3], drive: Drive, time_s: float, steps: Sequence[Vec3]) -> None:
         """Go on with the body, whose joints went from `before` in `time_s` along their path
         while the ground did `drive` to it; no joint by more than its step."""
-        self.angles = clamp_steps(self.angles, self._wanted(before, drive, time_s), steps)
-
-    def _wanted(self, before: Sequence[float], drive: Drive, time_s: float) -> list[float]:
+        hz = 1.0 / time_s
         body = self._body
-        if not self._active:
-            return body.angles
-        ahead, left, up, spin = drive
-        speeds = list(map(mul, map(sub, body.angles, before), repeat(1.0 / time_s)))
-        wanted: list[float] = []
-        for (foot, command, hip_y, hip_z), (x, y, z), angles, turning in zip(
-            self._legs, body.feet_m, body.joints_rad, legwise(speeds), strict=True
+        commanded = []
+        for (foot, command, limits), foot_m, old, angles, last, most in zip(
+            self._legs, body.feet_m, before, body.joints_rad, self.commanded_rad, steps, strict=True
         ):
-            load = foot.load
-            force = (load * (ahead - spin * y), load * (left + spin * x), load * up)
-            wanted += command(angles, turning, y - hip_y, z - hip_z, force)
-        return wanted if within(body.lows, wanted, body.highs) else held(body.lows, wanted, body.highs)
+            sent = a, b, c = command(angles, old, hz, foot_m, foot.load, drive)
+            (low_a, high_a), (low_b, high_b), (low_c, high_c) = limits
+            if not (low_a <= a <= high_a and low_b <= b <= high_b and low_c <= c <= high_c):
+                sent = a, b, c = clamp_limits(sent, limits)
+            a0, b0, c0 = last
+            da, db, dc = most
+            if not (-da <= a - a0 <= da and -db <= b - b0 <= db and -dc <= c - c0 <= dc):
+                sent = clamp_steps(last, sent, most)
+            commanded.append(sent)
+        self.commanded_rad = tuple(commanded)

@@ -18,7 +18,6 @@ The load is what the schedule says each foot should carry, not a measurement.
 
 from __future__ import annotations
 
-from cmath import rect
 from itertools import chain
 from math import copysign, cos, sin
 from typing import NamedTuple
@@ -26,6 +25,10 @@ from typing import NamedTuple
 from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.leg import LegKinematics
 from hobnail.robot import Joint, Leg, Vec3
+
+# What the ground does through all feet together: force ahead, left and up (N), and the
+# turning about the body, as force over arm for a foot that carries everything (N/m).
+Drive = tuple[float, float, float, float]
 
 # Share of the stall torque from which on the side is sure to which a torque pushes a servo:
 # about the friction of its gears (common practice).
@@ -40,9 +43,10 @@ class LegCorrection:
     `trail_s` is by what time each servo trails a steady motion.
     """
 
-    __slots__ = ("_bends", "_fold_m2", "_neutral", "_radius_m", "_weighs", "active", "trail_s")
+    __slots__ = ("_bends", "_fold_m2", "_hip_y", "_hip_z", "_neutral", "_radius_m", "_weighs", "trail_s")
 
     def __init__(self, leg: Leg, kinematics: LegKinematics, neutral_rad: Vec3) -> None:
+        _, self._hip_y, self._hip_z = leg.hip_m
         self._radius_m = leg.foot_radius_m
         self._neutral = (neutral_rad[0], neutral_rad[1] + neutral_rad[2])
         self._fold_m2 = kinematics.upper_m * kinematics.lower_m
@@ -60,29 +64,37 @@ class LegCorrection:
         self._bends = tuple(chain.from_iterable(zip(*bends, strict=True)))
         a, b, c = (bend.trail_s for bend in bends)
         self.trail_s = (a, b, c)
-        self.active = self._radius_m > 0.0 or any(bend.give or bend.trail_s for bend in bends)
 
-    def command(self, angles: Vec3, speeds: Vec3, y: float, z: float, force_n: Vec3) -> Vec3:
-        """What the servos must be sent for geometric angles (rad) that move at `speeds` (rad/s),
-        with the foot at `y` and `z` relative to the hip (m) and the force of the ground on it
-        (body frame, N): all that the head of this file names."""
+    def command(self, angles: Vec3, before: Vec3, hz: float, foot_m: Vec3, load: float, drive: Drive) -> Vec3:
+        """What the servos must be sent for geometric angles (rad) that were `before` 1 / `hz`
+        seconds ago, with the foot at `foot_m` (body frame) and its share `load` of what the
+        ground does: all that the head of this file names."""
         roll, hip, knee = angles
-        ahead, left, up = force_n
+        roll0, hip0, knee0 = before
+        x, y, z = foot_m
+        ahead, left, up, spin = drive
+        # The ground's force on this foot.
+        ahead, left, up = load * (ahead - spin * y), load * (left + spin * x), load * up
+        y -= self._hip_y
+        z -= self._hip_z
         upper_m, lower_m, at_knee, at_foot, side_nm = self._weighs
-        # In the plane of the leg: down, and back as the imaginary part.
-        upper, lower = rect(upper_m, hip), rect(lower_m, hip + knee)
+        # Links in the plane of the leg: how far they go back and down.
+        shank = hip + knee
+        upper_back, upper_down = upper_m * sin(hip), upper_m * cos(hip)
+        lower_back, lower_down = lower_m * sin(shank), lower_m * cos(shank)
         cos_roll, sin_roll = cos(roll), sin(roll)
         push = up * cos_roll - left * sin_roll
         # Torques that hold: minus f . dp/dq, for the ground's push and the weights of the links.
-        c = (lower * complex(cos_roll * at_foot - push, ahead)).imag
-        b = c + (upper * complex(cos_roll * at_knee - push, ahead)).imag
+        c = lower_back * (cos_roll * at_foot - push) + lower_down * ahead
+        b = c + upper_back * (cos_roll * at_knee - push) + upper_down * ahead
         a = left * z - up * y + side_nm * cos_roll
-        a += sin_roll * (at_knee * upper.real + at_foot * lower.real)
+        a += sin_roll * (at_knee * upper_down + at_foot * lower_down)
         # How far the shafts stand off while they bear that and move, and to which side of their
         # slack that takes them.
-        va, vb, vc = speeds
         give_a, give_b, give_c, ta, tb, tc, slack_a, slack_b, slack_c, sure_a, sure_b, sure_c = self._bends
-        a, b, c = give_a * a + ta * va, give_b * b + tb * vb, give_c * c + tc * vc
+        a = give_a * a + ta * (roll - roll0) * hz
+        b = give_b * b + tb * (hip - hip0) * hz
+        c = give_c * c + tc * (knee - knee0) * hz
         a += slack_a * a / (abs(a) + sure_a)
         b += slack_b * b / (abs(b) + sure_b)
         c += slack_c * c / (abs(c) + sure_c)
@@ -90,7 +102,7 @@ class LegCorrection:
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
             neutral_roll, neutral_shank = self._neutral
-            forward = radius * (hip + knee - neutral_shank)
+            forward = radius * (shank - neutral_shank)
             # Knee and hip that move the foot along x alone, in the plane of the leg.  A leg
             # nearly straight cannot, and is left to roll a little farther.
             bend = sin(knee)
@@ -98,8 +110,8 @@ class LegCorrection:
                 bend = copysign(LEAST_FOLD, bend)
             turn = forward / (self._fold_m2 * bend)
             a += radius * (roll - neutral_roll) / z
-            b -= turn * lower.imag
-            c += turn * (upper.imag + lower.imag)
+            b -= turn * lower_back
+            c += turn * (upper_back + lower_back)
         return roll + a, hip + b, knee + c
 
 

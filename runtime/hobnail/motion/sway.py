@@ -29,7 +29,7 @@ NOTHING = 1e-9
 
 
 Shift = tuple[float, float, float, float]
-Wave = tuple[int, complex, complex, float]  # harmonic, its part along x and y, minus its curvature
+Wave = tuple[int, complex, complex, float]  # harmonic, its part that turns forth and back, its curvature
 
 
 class PeriodicSway:
@@ -84,15 +84,13 @@ class PeriodicSway:
         if pace is not self._pace:
             self._pace, self._waves = pace, self._waves_at(*pace)
         angle = 2.0 * math.pi * clock
-        x = y = ax = ay = 0.0
-        for k, wave_x, wave_y, bend in self._waves:
+        shift = acceleration = 0j  # y as the imaginary part
+        for k, forth, back, bend in self._waves:
             turned = cmath.rect(1.0, k * angle)
-            along, across = (wave_x * turned).real, (wave_y * turned).real
-            x += along
-            y += across
-            ax -= bend * along
-            ay -= bend * across
-        return x, y, ax, ay
+            part = forth * turned + back * turned.conjugate()
+            shift += part
+            acceleration -= bend * part
+        return shift.real, shift.imag, acceleration.real, acceleration.imag
 
     def _waves_at(self, vx: float, vy: float, yaw_rate: float, rate_hz: float) -> list[Wave]:
         """The harmonics of the shift at a pace."""
@@ -102,10 +100,11 @@ class PeriodicSway:
         waves = []
         for k, base_x, base_y, sweep, turn_x, turn_y in self._terms:
             # Both signs of each harmonic but the mean.
-            share = (2.0 if k else 1.0) / (1.0 + stiff * k * k)
-            along = base_x + cycle_s * (vx * sweep + yaw_rate * turn_x)
-            across = base_y + cycle_s * (vy * sweep + yaw_rate * turn_y)
-            waves.append((k, share * along, share * across, bend * k * k))
+            share = (1.0 if k else 0.5) / (1.0 + stiff * k * k)
+            x = share * (base_x + cycle_s * (vx * sweep + yaw_rate * turn_x))
+            y = share * (base_y + cycle_s * (vy * sweep + yaw_rate * turn_y))
+            # Twice the real part of each, x + y i as one number.
+            waves.append((k, x + 1j * y, x.conjugate() + 1j * y.conjugate(), bend * k * k))
         return waves
 
     def over_cycle(self, clocks: NDArray[np.float64], rate_hz: float) -> NDArray[np.float64]:

@@ -15,13 +15,15 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from itertools import chain
 from operator import ne
 
 from hobnail.motion.balance import GRAVITY_M_S2, neutral_feet
-from hobnail.motion.feed_forward import Drive, FeedForward
+from hobnail.motion.feed_forward import FeedForward
 from hobnail.motion.foot import LAST_AIM, Foot, FootState, Swing
 from hobnail.motion.glide import AT_REST, Glide, GlideState, Slew, SlewState, minimum_jerk
-from hobnail.motion.joint_vector import clamp_steps, excess_step
+from hobnail.motion.joint_steps import clamp_steps, excess_step
+from hobnail.motion.load import Drive
 from hobnail.motion.pacing import fit_stride
 from hobnail.motion.plan import GaitPlan
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist, point_speed
@@ -180,21 +182,21 @@ class Walker:
 
     # -- the tick ------------------------------------------------------------
 
-    def tick(self, dt_s: float, steps_rad: Sequence[float]) -> None:
-        """Move on by `dt_s`, no joint by more than its step (rad, all joints in a row)."""
+    def tick(self, dt_s: float, steps_rad: Sequence[Vec3]) -> None:
+        """Move on by `dt_s`, no joint by more than its step (rad, leg by leg)."""
         self._decide()
         if self._lowering and self._lowering[0] is not None:
             # Time is running while the feet are planted.
             self._lowering = (max(self._lowering[0] - dt_s, SHORTEST_LOWERING_S),)
         body = self.body
-        before = body.angles
+        before = body.joints_rad
         saved = self._save()
         time_s = dt_s
         for attempt in range(RETRIES):
             self._advance(time_s)
             # What comes back of a posture must not slow a walk.
             self._solve(0.0 if attempt and self._walking else time_s)
-            excess = excess_step(before, body.angles, steps_rad)
+            excess = excess_step(before, body.joints_rad, steps_rad)
             if excess <= 1.0 or attempt == RETRIES - 1:
                 break
             self._restore(saved)
@@ -206,9 +208,9 @@ class Walker:
             time_s *= share if attempt < 2 else min(share, 0.25)
         self.clamped = 0
         if excess > 1.0:
-            on_path = body.angles
-            body.take(clamp_steps(before, on_path, steps_rad))
-            self.clamped = sum(map(ne, body.angles, on_path))
+            on_path = body.joints_rad
+            body.joints_rad = tuple(map(clamp_steps, before, on_path, steps_rad))
+            self.clamped = sum(map(ne, chain(*body.joints_rad), chain(*on_path)))
         self.feed_forward.advance(before, self._drive(), time_s, steps_rad)
         share = self.slowdown = time_s / dt_s
         pace = self._pace.value

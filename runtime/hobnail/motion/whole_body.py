@@ -7,45 +7,27 @@ No time and no gait here.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from itertools import chain
 from math import cos, sin
 
 from hobnail.motion.foot import Foot
-from hobnail.motion.joint_vector import held, legwise, within
+from hobnail.motion.joint_steps import clamp_limits
 from hobnail.motion.planar import Pose
 from hobnail.robot import Vec2, Vec3
 
 
 class WholeBody:
     """The latest solution: `pose` of the body on the ground (x, y, yaw), its `height_m` and
-    `tilt_rad` (roll, pitch), `feet_m` in the body frame, the joints' `angles` in a row and
-    the same as `joints_rad` by legs, and the count of feet that were `out_of_reach`.
+    `tilt_rad` (roll, pitch), `feet_m` in the body frame, `joints_rad`, and the count of feet
+    that were `out_of_reach`."""
 
-    `lows` and `highs` are the joints' limits.
-    """
-
-    __slots__ = (
-        "_feet",
-        "angles",
-        "feet_m",
-        "height_m",
-        "highs",
-        "joints_rad",
-        "lows",
-        "out_of_reach",
-        "pose",
-        "tilt_rad",
-    )
+    __slots__ = ("_legs", "feet_m", "height_m", "joints_rad", "out_of_reach", "pose", "tilt_rad")
 
     def __init__(self, feet: Sequence[Foot]) -> None:
-        self._feet = feet
-        self.lows = [low for foot in feet for low, _ in foot.limits]
-        self.highs = [high for foot in feet for _, high in foot.limits]
+        self._legs = [(foot, foot.radius_m, foot.hip, foot.kinematics, foot.limits) for foot in feet]
         self.pose: Pose = (0.0, 0.0, 0.0)
         self.height_m = 0.0
         self.tilt_rad = (0.0, 0.0)
         self.feet_m: tuple[Vec3, ...] = ()
-        self.angles: list[float] = []
         self.joints_rad: tuple[Vec3, ...] = ()
         self.out_of_reach = 0
 
@@ -68,32 +50,29 @@ class WholeBody:
         if tilted:
             cr, sr, cp, sp = cos(roll), sin(roll), cos(pitch), sin(pitch)
         feet_m, joints = [], []
-        beyond = set()
-        for foot in self._feet:
+        self.out_of_reach = 0
+        for foot, radius, (hip_x, hip_y, hip_z), kinematics, limits in self._legs:
             dx, dy = foot.x - x0, foot.y - y0
-            x, y, z = c * dx + s * dy, c * dy - s * dx, foot.radius_m + foot.lift_m - height
+            x, y, z = c * dx + s * dy, c * dy - s * dx, radius + foot.lift_m - height
             if tilted:
                 # The transpose of Ry(pitch) Rx(roll).
                 x, z = cp * x - sp * z, sp * x + cp * z
                 y, z = cr * y + sr * z, cr * z - sr * y
-            hip_x, hip_y, hip_z = foot.hip
             feet_m.append((x, y, z))
-            kinematics = foot.kinematics
+            at_x, at_y, at_z = x - hip_x, y - hip_y, z - hip_z
+            reached = True
             try:
-                joints.append(kinematics.angles(x - hip_x, y - hip_y, z - hip_z))
+                angles = kinematics.angles(at_x, at_y, at_z)
             except ValueError:
-                beyond.add(len(joints))
-                nearest = kinematics.nearest_reachable(x - hip_x, y - hip_y, z - hip_z)
-                joints.append(kinematics.angles(*nearest))
+                reached = False
+                angles = kinematics.angles(*kinematics.nearest_reachable(at_x, at_y, at_z))
+            q0, q1, q2 = angles
+            (low0, high0), (low1, high1), (low2, high2) = limits
+            if not (low0 <= q0 <= high0 and low1 <= q1 <= high1 and low2 <= q2 <= high2):
+                reached = False
+                angles = clamp_limits(angles, limits)
+            if not reached:
+                self.out_of_reach += 1
+            joints.append(angles)
         self.feet_m = tuple(feet_m)
         self.joints_rad = tuple(joints)
-        self.angles = list(chain.from_iterable(joints))
-        if not within(self.lows, self.angles, self.highs):
-            self.take(held(self.lows, self.angles, self.highs))
-            beyond |= {leg for leg, angles in enumerate(joints) if angles != self.joints_rad[leg]}
-        self.out_of_reach = len(beyond)
-
-    def take(self, angles: list[float]) -> None:
-        """Those angles, not the ones solved for."""
-        self.angles = angles
-        self.joints_rad = legwise(angles)
