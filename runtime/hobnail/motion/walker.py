@@ -319,9 +319,9 @@ class Walker:
         most = LOAD_RATE_HZ * time_s
         total = sum(weights) or 1.0
         for foot, weight in zip(self._feet, weights, strict=True):
-            change = weight / total - foot.load
-            if change:
-                foot.load += max(-most, min(most, change))
+            share = weight / total
+            change = share - foot.load
+            foot.load = share if -most <= change <= most else foot.load + math.copysign(most, change)
 
     def _foothold(self, foot: Foot, until_touch_down_s: float) -> Vec2:
         """Where on the ground the foot must land: under its neutral place at the body's
