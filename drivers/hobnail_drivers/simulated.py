@@ -55,6 +55,8 @@ class SimulatedDriver(Driver):
         self.dropped = 0
         frame_hz = {board.name: board.frame_hz for board in self.boards}
         self._steps_us = [1e6 / (frame_hz[output.board] * COUNTS) for output in self.outputs]
+        self._dead_bands_us = [output.dead_band_us for output in self.outputs]
+        self._speeds_us_s = [output.speed_us_s for output in self.outputs]
         self._none: tuple[float | None, ...] = (None,) * len(self.outputs)
         self._clock = clock
         self._targets: tuple[float | None, ...] = self._none
@@ -89,7 +91,7 @@ class SimulatedDriver(Driver):
         self._set(
             tuple(
                 [
-                    None if pulse is None else round(pulse / step) * step
+                    None if pulse is None else int(pulse / step + 0.5) * step
                     for pulse, step in zip(pulses_us, self._steps_us, strict=True)
                 ]
             )
@@ -126,14 +128,15 @@ class SimulatedDriver(Driver):
         now_s = self._clock()
         dt_s = now_s - self._moved_s
         self._moved_s = now_s
-        shafts = self._shafts
-        for index, target in enumerate(self._targets):
-            shaft = shafts[index]
-            if target is None or shaft is None:
-                continue
-            error = target - shaft
-            output = self.outputs[index]
-            excess = abs(error) - output.dead_band_us
-            if excess > 0.0:
-                step = min(excess, output.speed_us_s * dt_s)
-                shafts[index] = shaft + step if error > 0.0 else shaft - step
+        shafts: list[float | None] = []
+        for target, shaft, band, speed in zip(
+            self._targets, self._shafts, self._dead_bands_us, self._speeds_us_s, strict=True
+        ):
+            if target is not None and shaft is not None and not -band <= target - shaft <= band:
+                step = speed * dt_s
+                if target > shaft:
+                    shaft = shaft + step if shaft + step < target - band else target - band
+                else:
+                    shaft = shaft - step if shaft - step > target + band else target + band
+            shafts.append(shaft)
+        self._shafts = shafts
