@@ -104,6 +104,8 @@ def test_stop_while_walking_lies_down_then_ends_the_pulses(board: Board) -> None
     assert (board.show("ActiveState"), board.show("Result")) == ("inactive", "success")
     assert board.show("ExecMainStatus") == "0"
     lay_down(board.file(EVENTS).read_text())
+    journal = board.journal()
+    assert [journal.count(line) for line in ("off -> waking", "lowering -> resting")] == [1, 1]
     assert board.file("/var/lib/hobnail/posture.json").is_file(), "the posture to wake in, whenever that is"
 
 
