@@ -471,6 +471,27 @@ def test_the_watchdog_is_not_fed_while_the_bus_hangs(state: str) -> None:
     assert fed.times[-1] > stage.now_s - 1.0
 
 
+def test_the_watchdog_is_not_fed_when_frames_are_taken_and_never_sent() -> None:
+    """No job hangs: there is nobody to do them any more."""
+    stage, fed = watched()
+    stage.walk()
+    stage.bus.holds = True
+    ended_s = stage.now_s
+    stage.run(5.0)
+    limit_s = stage.robot.safety.bus_stall_s
+    assert [at_s for at_s in fed.times if at_s > ended_s + limit_s + 0.02] == []
+
+
+def test_garbage_is_collected_between_ticks_young_often_and_old_seldom(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    collected: list[int] = []
+    monkeypatch.setattr("gc.collect", lambda generation=2: collected.append(generation))
+    Stage().run(20.5)
+    assert collected.count(2) == 2
+    assert collected.count(0) == 18
+
+
 def test_the_watchdog_is_not_fed_while_pulses_cannot_be_ended() -> None:
     stage, fed = watched()
     stage.walk()

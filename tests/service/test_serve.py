@@ -33,10 +33,12 @@ from hobnail.service.recorder import RING_NAME, last_state, read_ring
 from hobnail.service.states import State
 from hobnail.service.writer import LOG_NAME
 from hobnail_drivers.chip_file import open_chip_file
+from hobnail_drivers.contact import SimulatedContact
 from hobnail_drivers.contract import Driver
 from hobnail_drivers.errors import SetupError
 from hobnail_drivers.faults import FaultInjector
 from hobnail_drivers.simulated import SimulatedDriver
+from hobnail_drivers.supply import SimulatedSupply
 from robots import CONFIG, juniper
 
 WAIT_S = 60.0  # a bound for a broken test, not a time that anything takes
@@ -216,6 +218,87 @@ def test_inputs_of_a_model_are_not_looked_for_and_that_is_said(
     with serve.Running(robot, "simulated", tmp_path / "s", None, None, None):
         pass
     assert "not watched" in capsys.readouterr().err
+
+
+class Watched(InThread):
+    """The same with a stop input and a supply monitor, on a driver that is no model."""
+
+    def __init__(self, directory: Path, patch: pytest.MonkeyPatch, **settings: object) -> None:
+        super().__init__(directory, patch, **settings)
+        robot = quick(juniper())
+        stop_input = StopInput(chip="gpiochip0", line=4, debounce_s=0.01)
+        self.robot = replace(robot, safety=replace(robot.safety, stop_input=stop_input))
+        self.contact = SimulatedContact()
+        self.supply = SimulatedSupply(robot.supply.nominal_v)
+        patch.setattr(SimulatedDriver, "is_model", False)
+        patch.setattr(serve, "open_contact", lambda _: self.contact)
+        patch.setattr(serve, "open_monitor", lambda _: self.supply)
+
+    def _run(self) -> None:
+        self.result.append(serve.run(self.robot, socket_path=self.socket, **self._settings))  # type: ignore[arg-type]
+
+
+@pytest.mark.usefixtures("plan")
+def test_an_open_stop_input_stops(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    with Watched(tmp_path, monkeypatch) as service, Client(service.socket) as client:
+        client.stand()
+        until(client, State.STANDING)
+        service.contact.closed = False
+        told = until(client, State.STOPPED)
+        assert "stop-input" in str(told["first_cause"])
+
+
+@pytest.mark.usefixtures("plan")
+def test_a_low_supply_ends_at_rest(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    with Watched(tmp_path, monkeypatch) as service, Client(service.socket) as client:
+        client.stand()
+        until(client, State.STANDING)
+        service.supply.now_v = 1.0
+        until(client, State.LOWERING)
+        told = until(client, State.OFF)
+        assert "supply-low" in str(told["first_cause"])
+
+
+def test_pulses_are_ended_before_anything_else_is_closed(tmp_path: Path, plan: FaultInjector) -> None:
+    closed: list[str] = []
+    with serve.Running(quick(juniper()), "simulated", tmp_path / "s", None, None, None) as running:
+        plan.call_next(lambda: closed.append("pulses"), count=None)
+        running._closers.insert(0, lambda: closed.append("first opened"))
+        running._closers.append(lambda: closed.append("last opened"))
+    assert closed == ["pulses", "pulses", "last opened", "first opened"]  # release, close
+
+
+@pytest.mark.usefixtures("plan")
+def test_after_a_reboot_it_wakes_where_it_was_last(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    robot, run_dir, state_dir = quick(juniper()), tmp_path / "run", tmp_path / "state"
+    with InThread(tmp_path, monkeypatch, state_dir=state_dir) as service, Client(service.socket) as client:
+        client.stand()
+        until(client, State.STANDING)
+        client.stop(0)
+        until(client, State.STOPPED)
+    posture = load_posture(state_dir, juniper())
+    assert posture is not None
+    for path in run_dir.iterdir():  # is in memory: a reboot empties it
+        path.unlink()
+    with serve.Running(robot, "simulated", run_dir / "s", state_dir, None, None) as running:
+        assert running.machine.body.last_rad == pytest.approx(posture)
+
+
+@pytest.mark.usefixtures("plan")
+def test_what_a_kill_interrupted_is_kept_at_the_next_start(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    run_dir, state_dir = tmp_path / "run", tmp_path / "state"
+    with InThread(tmp_path, monkeypatch) as service, Client(service.socket) as client:
+        client.stand()
+        until(client, State.STANDING)
+        left = (run_dir / RING_NAME).read_bytes()  # as a kill would leave it
+    (run_dir / RING_NAME).write_bytes(left)
+    with serve.Running(quick(juniper()), "simulated", run_dir / "s", state_dir, None, None):
+        pass
+    (kept,) = (state_dir / RECORDINGS).iterdir()
+    assert kept.name.endswith("-interrupted.ring")
+    assert last_state(kept) is State.STANDING
 
 
 @pytest.mark.usefixtures("plan")

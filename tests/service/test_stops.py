@@ -189,6 +189,22 @@ def test_a_pause_longer_than_the_time_to_live_is_letting_go() -> None:
     rig.ask("walk", vx=0.1)
 
 
+def test_a_long_command_from_before_the_stop_is_not_renewed_after_it() -> None:
+    """Its client was silent throughout, but its time to live is not over."""
+    rig = in_state("standing")
+    rig.ask("walk", client=7, vx=0.1, ttl_s=60.0)
+    rig.until(State.WALKING)
+    rig.ask("stop", client=2, category=0)
+    rig.ask("reset", client=2)
+    rig.tick()
+    rig.ask("stand", client=2)
+    rig.until(State.STANDING)
+    with pytest.raises(StateError, match="let go"):
+        rig.ask("walk", client=7, vx=0.1, ttl_s=60.0)
+    rig.ask("walk", client=7)
+    rig.ask("walk", client=7, vx=0.1)
+
+
 @pytest.mark.parametrize("state", WAYS_IN)
 def test_stop_latches_in_every_state_off_included(state: str) -> None:
     rig = in_state(state)
