@@ -640,6 +640,7 @@ def test_timing_is_published() -> None:
     assert told == {
         "period_s": 0.01, "ticks": 100, "skipped": 0, "waited": 0,
         "lateness_us": {"p50": 0.0, "p99": 0.0, "p999": 0.0, "max": 0.0},
+        "lateness_histogram_us": [(1.0, 100)],
     }  # fmt: skip
 
 

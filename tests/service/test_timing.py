@@ -22,6 +22,29 @@ def test_percentiles_are_at_most_a_bucket_too_high(late_us: list[float]) -> None
     assert lateness.max_us == pytest.approx(max(late_us))
 
 
+@given(st.lists(st.floats(0.0, 1e6), max_size=200))
+def test_the_histogram_counts_each_value_under_the_edge_above_it(late_us: list[float]) -> None:
+    lateness = Lateness()
+    for value in late_us:
+        lateness.add(value * 1e-6)
+    edges_us = [0.0] + [2.0**power for power in range(25)]
+    # The judge: numpy's, whose bins have their lower edge, and ours the upper one.
+    counts, _ = np.histogram([-value for value in late_us], bins=[-edge for edge in reversed(edges_us)])
+    wanted = {edge: count for edge, count in zip(edges_us[1:], reversed(counts), strict=True) if count}
+    got = dict(lateness.histogram())
+    assert sum(got.values()) == len(late_us)
+    # A value within rounding of an edge may be on either side.
+    near = sum(any(abs(value - edge) < 1e-6 * edge for edge in edges_us) for value in late_us)
+    assert sum(abs(got.get(edge, 0) - wanted.get(edge, 0)) for edge in edges_us) <= 2 * near
+
+
+def test_the_histogram_has_all_that_is_later_in_its_last_place() -> None:
+    lateness = Lateness()
+    for late_s in (-1.0, 1.5e-6, 3e-6, 3.5e-6, 7200.0):
+        lateness.add(late_s)
+    assert lateness.histogram() == [(1.0, 1), (2.0, 1), (4.0, 2), (2.0**24, 1)]
+
+
 def test_early_and_on_time_count_as_zero() -> None:
     lateness = Lateness()
     for late_s in (-1.0, 0.0, 1e-7):

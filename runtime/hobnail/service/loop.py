@@ -98,13 +98,14 @@ class Loop:
         machine.instruments["timing"] = self.timing
 
     def timing(self) -> dict[str, object]:
-        """Period, ticks done, skipped and waited, and the lateness of those done."""
+        """Period, ticks done, skipped and waited, and the lateness of those done (see `Lateness`)."""
         return {
             "period_s": self._period_s,
             "ticks": self.ticks,
             "skipped": self.skipped,
             "waited": self.waited,
             "lateness_us": self.lateness.describe(),
+            "lateness_histogram_us": self.lateness.histogram(),
         }
 
     def run(self, finished: Callable[[], bool]) -> None:

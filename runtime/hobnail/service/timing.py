@@ -37,6 +37,16 @@ class Lateness:
                 return min(math.exp2(index / PER_OCTAVE), self.max_us)
         return 0.0
 
+    def histogram(self) -> list[tuple[float, int]]:
+        """(upper edge in us, count) of each factor of two that has any; the last one has all above it."""
+        buckets = self._buckets
+        counts = [(1.0, buckets[0])]
+        counts += [
+            (2.0 ** (octave + 1), sum(buckets[1 + octave * PER_OCTAVE : 1 + (octave + 1) * PER_OCTAVE]))
+            for octave in range(OCTAVES)
+        ]
+        return [(edge_us, count) for edge_us, count in counts if count]
+
     def describe(self) -> dict[str, float]:
         """p50, p99, p99.9 and the greatest, us."""
         told = {name: self.percentile_us(share) for name, share in _SHARES.items()}
