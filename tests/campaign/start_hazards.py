@@ -161,7 +161,7 @@ def program_killed(state: str) -> str:
         directory = Path(name)
         service = _start(directory)
         try:
-            with Client(directory / "h.sock") as client:
+            with Client(directory / "h.sock", timeout_s=PATIENCE_S) as client:
                 _lead(client, state)
                 # The state is told at once; pulses follow it within the next transfer.
                 _until(lambda: (_pulses(directory) > 0) == (state in PULSING), "pulses as they should be")
@@ -182,7 +182,7 @@ def program_killed(state: str) -> str:
             assert done.returncode == 0, done.stderr
             assert _pulses(directory) == 0, f"{_pulses(directory)} channels on after hobnail-release"
             service = _start(directory)
-            with Client(directory / "h.sock") as client:
+            with Client(directory / "h.sock", timeout_s=PATIENCE_S) as client:
                 assert client.state()["state"] == "off"
                 assert _pulses(directory) == 0, "a restart wakes nothing"
         finally:

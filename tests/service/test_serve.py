@@ -113,7 +113,10 @@ def test_a_life_over_the_socket(tmp_path: Path, plan: FaultInjector, monkeypatch
     shown: list[dict[str, object]] = []
     state_dir, log_dir = tmp_path / "state", tmp_path / "log"
     settings = {"state_dir": state_dir, "log_dir": log_dir, "on_state": shown.append}
-    with InThread(tmp_path, monkeypatch, **settings) as service, Client(service.socket) as client:
+    with (
+        InThread(tmp_path, monkeypatch, **settings) as service,
+        Client(service.socket, timeout_s=WAIT_S) as client,
+    ):
         client.stand()
         until(client, State.STANDING)
         client.walk(0.1, 0.0, 0.0, ttl_s=5.0)
@@ -240,7 +243,7 @@ class Watched(InThread):
 
 @pytest.mark.usefixtures("plan")
 def test_an_open_stop_input_stops(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    with Watched(tmp_path, monkeypatch) as service, Client(service.socket) as client:
+    with Watched(tmp_path, monkeypatch) as service, Client(service.socket, timeout_s=WAIT_S) as client:
         client.stand()
         until(client, State.STANDING)
         service.contact.closed = False
@@ -250,7 +253,7 @@ def test_an_open_stop_input_stops(tmp_path: Path, monkeypatch: pytest.MonkeyPatc
 
 @pytest.mark.usefixtures("plan")
 def test_a_low_supply_ends_at_rest(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    with Watched(tmp_path, monkeypatch) as service, Client(service.socket) as client:
+    with Watched(tmp_path, monkeypatch) as service, Client(service.socket, timeout_s=WAIT_S) as client:
         client.stand()
         until(client, State.STANDING)
         service.supply.now_v = 1.0
@@ -271,7 +274,10 @@ def test_pulses_are_ended_before_anything_else_is_closed(tmp_path: Path, plan: F
 @pytest.mark.usefixtures("plan")
 def test_after_a_reboot_it_wakes_where_it_was_last(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     robot, run_dir, state_dir = quick(juniper()), tmp_path / "run", tmp_path / "state"
-    with InThread(tmp_path, monkeypatch, state_dir=state_dir) as service, Client(service.socket) as client:
+    with (
+        InThread(tmp_path, monkeypatch, state_dir=state_dir) as service,
+        Client(service.socket, timeout_s=WAIT_S) as client,
+    ):
         client.stand()
         until(client, State.STANDING)
         client.stop(0)
@@ -289,7 +295,7 @@ def test_what_a_kill_interrupted_is_kept_at_the_next_start(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     run_dir, state_dir = tmp_path / "run", tmp_path / "state"
-    with InThread(tmp_path, monkeypatch) as service, Client(service.socket) as client:
+    with InThread(tmp_path, monkeypatch) as service, Client(service.socket, timeout_s=WAIT_S) as client:
         client.stand()
         until(client, State.STANDING)
         left = (run_dir / RING_NAME).read_bytes()  # as a kill would leave it
@@ -392,7 +398,7 @@ def process(directory: Path) -> Iterator[Process]:
 def walking(directory: Path) -> Iterator[tuple[Process, Client]]:
     with process(directory) as service:
         service.hear("READY=1")
-        with Client(service.socket) as client:
+        with Client(service.socket, timeout_s=WAIT_S) as client:
             client.stand()
             until(client, State.STANDING)
             client.walk(0.1, 0.0, 0.0, ttl_s=10.0)
@@ -405,7 +411,7 @@ def test_ready_is_said_when_the_socket_answers_and_the_watchdog_is_fed(tmp_path:
     with process(tmp_path) as service:
         heard = service.hear("READY=1")
         assert len(heard) == 1  # nothing came before it
-        with Client(service.socket) as client:
+        with Client(service.socket, timeout_s=WAIT_S) as client:
             assert client.state()["state"] == "off"
         assert service.pulses() == 0
         service.hear("WATCHDOG=1")
@@ -466,7 +472,7 @@ def test_a_restart_wakes_nothing(tmp_path: Path) -> None:
         service.hear("READY=1")
         service.hear("WATCHDOG=1")
         assert service.pulses() == 0
-        with Client(service.socket) as client:
+        with Client(service.socket, timeout_s=WAIT_S) as client:
             assert client.state()["state"] == "off"
 
 
