@@ -170,6 +170,18 @@ def test_a_release_that_fails_is_not_taken_for_done(rig: Rig) -> None:
     assert rig.bus.released
 
 
+def test_after_a_release_that_failed_no_frame_is_sent_until_the_boards_are_set_up(rig: Rig) -> None:
+    rig.send()
+    rig.plan.fail_next(errno.ETIMEDOUT)
+    rig.bus.release()
+    rig.done()
+    assert not rig.bus.is_set_up
+    rig.bus.release()
+    rig.send()
+    assert rig.bus.frames == 1
+    assert rig.pulses == (None,) * 12
+
+
 def test_a_transfer_that_hangs_for_a_second_holds_up_nobody(rig: Rig) -> None:
     hang = Hang()
     rig.plan.call_next(hang)

@@ -16,7 +16,7 @@ from hobnail.errors import FaultError
 from hobnail.robot import Robot, StopInput, Supply
 from hobnail.service.bus import Bus
 from hobnail.service.drivers import make_driver
-from hobnail.service.loop import CHECK_EVERY_S, Loop
+from hobnail.service.loop import CHECK_EVERY_S, SET_UP_LIMIT_S, Loop
 from hobnail.service.machine import Machine
 from hobnail.service.notify import Notifier
 from hobnail.service.power import StopInputWatch, SupplyWatch
@@ -249,6 +249,16 @@ def test_a_process_that_was_held_up_as_a_whole_does_not_blame_the_bus() -> None:
     stage.run(0.1)
     assert not stage.machine.faults.is_latched("bus-stalled")
     stage.expect(State.WALKING)
+
+
+def test_a_set_up_may_take_longer_than_a_transfer_but_not_for_ever() -> None:
+    stage = Stage()
+    stage.bus.is_set_up = False
+    stage.bus.hang()
+    stage.run(SET_UP_LIMIT_S - 0.1)
+    assert not stage.machine.faults.is_latched("bus-stalled")
+    stage.run(0.2)
+    assert stage.machine.faults.is_latched("bus-stalled")
 
 
 def test_many_short_jobs_are_no_stall() -> None:

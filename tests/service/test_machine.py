@@ -223,6 +223,17 @@ def test_the_claim_goes_with_its_client() -> None:
     rig.ask("stand", client=2)
 
 
+def test_whoever_cancels_a_route_ends_its_claim_too() -> None:
+    rig = in_state("standing")
+    rig.ask("route", steps=[{"forward_mm": 500}])
+    rig.go(2.0)
+    with pytest.raises(CommanderError):
+        rig.ask("rest", client=2)
+    rig.ask("route", client=2, cancel=True)
+    rig.ask("rest", client=3)
+    rig.until(State.RESTING)
+
+
 def test_wrong_values_are_command_errors() -> None:
     rig = in_state("standing")
     with pytest.raises(CommandError, match="gait"):

@@ -189,6 +189,23 @@ def test_a_pause_longer_than_the_time_to_live_is_letting_go() -> None:
     rig.ask("walk", vx=0.1)
 
 
+def test_a_stick_held_down_since_before_the_wake_is_not_a_fresh_command() -> None:
+    """There was no stop: it was held down while the robot was off."""
+    rig = in_state("off")
+    refused: list[StateError] = []
+
+    def hold() -> None:
+        with pytest.raises(StateError) as caught:
+            rig.ask("walk", client=7, vx=0.1)
+        refused.append(caught.value)
+
+    rig.go(0.5, hold)
+    rig.ask("stand", client=2)
+    rig.go(8.0, hold)
+    rig.expect(State.STANDING)
+    assert "let go" in str(refused[-1])
+
+
 def test_a_long_command_from_before_the_stop_is_not_renewed_after_it() -> None:
     """Its client was silent throughout, but its time to live is not over."""
     rig = in_state("standing")
