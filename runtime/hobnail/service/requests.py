@@ -147,8 +147,7 @@ class Requests:
         if "cancel" in values:
             if not machine.routing:
                 raise StateError("route: none is being walked, so there is nothing to cancel")
-            # It only ends motion: like `stop`, it needs no claim.
-            machine.commander.drop()
+            # It only ends motion: like `stop`, it needs no claim, and the route's own ends with it.
             machine.head_for(State.STANDING, now_s)
         else:
             from hobnail.service.route_file import steps_from_json  # slow to import, seldom needed
