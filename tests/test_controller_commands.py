@@ -245,7 +245,9 @@ def test_lower_from_a_walk_ends_level_at_rest_height_with_every_foot_down(
     begin = len(walk.ticks)
     walk.until_settled()
     last = walk.ticks[-1]
-    assert last.height_m == robot.stance.rest_height_m
+    rest, stance = robot.stance.rest_height_m, robot.stance.height_m
+    # Feet planted in mid-stride, for the time's sake, may keep legs from folding all the way.
+    assert rest <= last.height_m <= (rest if within_s is None else rest + 0.15 * (stance - rest))
     assert all(last.stance)
     heights = [tick.height_m for tick in walk.ticks[begin:]]
     lowest_in_air = min(

@@ -8,7 +8,8 @@ from dataclasses import replace
 import pytest
 
 from hobnail.cli.main import main
-from hobnail.workshop.check import Check, check
+from hobnail.motion import steadiness
+from hobnail.workshop.check import Check, Look, check, zero_moment_margin
 from robots import CONFIG, bramble, juniper
 
 Output = pytest.CaptureFixture[str]
@@ -44,6 +45,32 @@ def test_standing_the_mass_is_well_inside_the_feet(found: Check) -> None:
 def test_a_trot_balances_in_motion_only(found: Check) -> None:
     # Two feet down at a time: the support is a line (Hildebrand 1965), no margin is positive.
     assert found.gaits[0].margin_m < 0.005
+
+
+def test_the_zero_moment_point_by_hand() -> None:
+    """A mass 0.2 m up that speeds up by 1 m/s^2: its point is 0.2 / 9.81 m behind it, here 20 mm
+    from the feet that it has left behind."""
+    every_s, height_m = 0.03, 0.2
+    behind = height_m / 9.81
+    feet = [(0.0, -0.1), (0.0, 0.1), (-1.0, 0.1), (-1.0, -0.1)]
+    looks: list[Look] = [
+        ((0.02 + behind + 0.5 * (k * every_s) ** 2, 0.0, height_m), feet) for k in (-1.0, 0.0, 1.0)
+    ]
+    assert zero_moment_margin(looks, every_s) == pytest.approx(-0.02, abs=1e-4)
+
+
+def test_the_demo_robots_can_be_driven_as_they_are(found: Check) -> None:
+    assert found.warnings == ()
+    assert check(bramble()).warnings == ()
+
+
+def test_a_slow_gait_that_tips_is_told(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Without the limit on its strides the crawl balances only in motion."""
+    monkeypatch.setattr(steadiness, "MARGIN_SHARE", -2.0)
+    robot = juniper()
+    (crawl,) = (gait for gait in robot.gaits if gait.name == "crawl")
+    (warning,) = check(replace(robot, gaits=(robot.gaits[0], crawl))).warnings
+    assert "gait crawl has three feet or more down at any time, but at its fastest tips" in warning
 
 
 def test_slow_servos_are_told() -> None:

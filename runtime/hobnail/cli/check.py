@@ -111,6 +111,6 @@ def lines(found: Check) -> list[str]:
         "",
         "  of the envelope: least share of a command on its border that was reached",
         "  fastest joint: share of the speed that a servo may be asked for",
-        "  least margin: centre of mass inside the feet on the ground; negative: balances only in motion",
+        "  least margin: zero-moment point inside the feet on the ground; two feet are a line, with none",
     ]
     return told + [f"warning: {warning}" for warning in found.warnings]

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
+from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.foot import Foot
 from hobnail.motion.foot_path import FootPath
 from hobnail.motion.pacing import (
@@ -19,11 +20,13 @@ from hobnail.motion.pacing import (
 )
 from hobnail.motion.planar import Twist
 from hobnail.motion.reach import CycleReach, fit_shift
-from hobnail.motion.steadiness import steady_strides
+from hobnail.motion.steadiness import least_margin, steady_strides
 from hobnail.motion.support import support_centre
 from hobnail.motion.sway import PeriodicSway
 from hobnail.robot import Gait, Robot, Vec2, Vec3
 
+# Of a slow gait's margin on the spot, what speeding up and slowing down may use.
+SPEEDING_SHARE = 0.2
 # Share of a cycle over which a foot takes up and gives off its load: the time in
 # which both of two alternating sets of feet are down, within these bounds.
 LOAD_RAMP = (0.05, 0.1)
@@ -39,6 +42,7 @@ class GaitPlan:
         "_robot",
         "_strides",
         "_table",
+        "acceleration_m_s2",
         "arm2_m2",
         "gait",
         "load_ramp",
@@ -66,12 +70,17 @@ class GaitPlan:
         # Mean square distance of the feet from the body: a turning moment over it is the
         # force over arm of each.
         self.arm2_m2 = sum(x * x + y * y for x, y in self._neutral) / len(feet)
+        self.acceleration_m_s2 = math.inf
         self._strides: Vec3 | None = None
         if self.sway.leads:
             longest = 2.0 * max(self.reach_m)
             arm = math.sqrt(self.arm2_m2)
             centre = support_centre(self._neutral, robot.gaits[0].duty, robot.gaits[0].phases)
             self._strides = steady_strides(self._neutral, shifting, centre, (longest, longest, longest / arm))
+            if self._strides:
+                # Speeding up moves the zero-moment point as well.
+                margin = least_margin(self._neutral, shifting, centre, (0.0, 0.0, 0.0))
+                self.acceleration_m_s2 = SPEEDING_SHARE * margin * GRAVITY_M_S2 / robot.stance.height_m
         self._table: CycleTable | None = None
         if gait.cycle_s is None:
             self._table = CycleTable(

@@ -20,7 +20,7 @@ INSTANTS = 40  # of the cycle, at which the margin is taken
 HALVINGS = 6  # of the longest stride, to find where the margin ends
 MARGIN_M = 0.015
 # Of a gait's margin on the spot, where that is small already, this much must be left.
-MARGIN_SHARE = 0.5
+MARGIN_SHARE = 0.65
 
 
 def least_margin(feet: Sequence[Vec2], gait: Gait, centre: Vec2, stride: Vec3) -> float:

@@ -425,7 +425,7 @@ class Walker:
 
     def _aim_pace(self, twist: Twist, rate_hz: float) -> None:
         envelope = self._robot.envelope
-        along = envelope.acceleration_m_s2
+        along = min(envelope.acceleration_m_s2, self._plan.acceleration_m_s2)
         self._pace.aim((*twist, rate_hz), (along, along, envelope.turn_acceleration_rad_s2, 2.0 * rate_hz))
 
     def _look_ahead(self) -> None:
