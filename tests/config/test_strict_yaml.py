@@ -9,7 +9,7 @@ import pytest
 import yaml
 
 from hobnail.config import strict_yaml
-from hobnail.config.strict_yaml import Listing, Mapping, Report, Scalar, parse, read_file, shown
+from hobnail.config.strict_yaml import Listing, Mapping, Node, Report, Scalar, parse, read_file, shown
 
 
 @pytest.fixture(params=["C", "Python"], autouse=True)
@@ -96,6 +96,23 @@ def test_broken_yaml_is_told_with_its_place(data: bytes) -> None:
 def test_a_last_line_cut_short_is_told_where_the_file_ends() -> None:
     line, column, path, _ = only_problem(b"a: 1\nb: {c: 2, ")
     assert (line, column, path) == (2, 11, "b")
+
+
+@pytest.mark.parametrize(
+    "data", [b"a: 1\n?", b"a: 1\n?\n", b"a: 1\nb:\n  ?", b"a: 1\nb:\n  c: 2\n  ?\n", b"a:"]
+)
+def test_what_is_missing_at_the_end_has_its_place_in_the_file(data: bytes) -> None:
+    root = parse(data, Report("robot.yaml"))
+    assert root is not None
+    lines = data.split(b"\n")
+
+    def check(node: Node) -> None:
+        assert 1 <= node.line <= len(lines)
+        assert 1 <= node.column <= len(lines[node.line - 1]) + 1
+        for each in [*node.keys.values(), *node.entries.values()] if isinstance(node, Mapping) else ():
+            check(each)
+
+    check(root)
 
 
 def test_merge_keys_are_plain_words() -> None:

@@ -224,6 +224,8 @@ class _Composer:
 
     def __init__(self, text: str, report: Report) -> None:
         self._loader = _LOADER(text)
+        end = _place(text)
+        self._end = (end.line, end.column)
         self._report = report
         self.path = ""
 
@@ -246,7 +248,7 @@ class _Composer:
 
     def _node(self, event: yaml.Event, path: str, depth: int) -> Node:
         self.path = path
-        line, column = _position(event)
+        line, column = self._position(event)
         tag = getattr(event, "tag", None)
         if getattr(event, "anchor", None) is not None:  # an alias has one, too
             self._refuse(
@@ -288,11 +290,13 @@ class _Composer:
         mapping.entries[name] = value
 
     def _refuse(self, event: yaml.Event, found: str, allowed: str, hint: str = "") -> NoReturn:
-        line, column = _position(event)
+        line, column = self._position(event)
         self._report.add(Node(path=self.path, line=line, column=column), found, allowed, hint)
         raise _RefusedError
 
-
-def _position(event: yaml.Event) -> tuple[int, int]:
-    mark = event.start_mark
-    return (mark.line + 1, mark.column + 1) if mark else (0, 0)
+    def _position(self, event: yaml.Event) -> tuple[int, int]:
+        mark = event.start_mark
+        if not mark:
+            return (0, 0)
+        # What is missing at the end of a file, the C parser may place beyond it.
+        return min((mark.line + 1, mark.column + 1), self._end)
