@@ -64,19 +64,38 @@ class RobotJudge:
         self.foot_frames = [_add_leg(self.model, body, leg) for leg in robot.legs]
         self.data = self.model.createData()
 
-    def _configuration(self, joints_rad: Sequence[Sequence[float]]) -> Any:
+    def configuration(
+        self,
+        joints_rad: Sequence[Sequence[float]],
+        pose: Sequence[float] = (0.0, 0.0, 0.0),
+        height_m: float = 0.0,
+    ) -> Any:
+        """A state: joints, and the level body at (x, y, yaw) and at that height."""
+        x, y, yaw = pose
         q = pin.neutral(self.model)
+        q[:FREE_FLYER] = x, y, height_m, 0.0, 0.0, np.sin(0.5 * yaw), np.cos(0.5 * yaw)
         q[FREE_FLYER:] = np.ravel(joints_rad)
         return q
 
+    def difference(self, before: Any, after: Any) -> Any:
+        """The motion that leads from one state to another in a second."""
+        return pin.difference(self.model, before, after)
+
+    def ground_wrench(self, state: Any, speed: Any, acceleration: Any) -> tuple[Any, Any]:
+        """Force (N) and moment (N m) that the ground must give in that motion, along the body's
+        axes, about the point on the ground below the body origin."""
+        wrench = pin.rnea(self.model, self.data, state, speed, acceleration)[:6]
+        force, moment = wrench[:3], wrench[3:]
+        return force, moment + np.cross((0.0, 0.0, state[2]), force)
+
     def centre_of_mass(self, joints_rad: Sequence[Sequence[float]]) -> Vec3:
         """Centre of mass (body frame, m)."""
-        x, y, z = pin.centerOfMass(self.model, self.data, self._configuration(joints_rad))
+        x, y, z = pin.centerOfMass(self.model, self.data, self.configuration(joints_rad))
         return float(x), float(y), float(z)
 
     def foot_jacobian(self, joints_rad: Sequence[Sequence[float]], leg: int) -> Any:
         """d foot / d joints of that leg, 3 by 3, along the body's axes."""
-        q = self._configuration(joints_rad)
+        q = self.configuration(joints_rad)
         full = pin.computeFrameJacobian(
             self.model, self.data, q, self.foot_frames[leg], pin.ReferenceFrame.LOCAL_WORLD_ALIGNED
         )
@@ -85,5 +104,5 @@ class RobotJudge:
 
     def static_torques(self, joints_rad: Sequence[Sequence[float]]) -> Any:
         """Torques that hold the robot's own links against gravity (9.81 m/s2 down), per leg."""
-        torques = pin.computeGeneralizedGravity(self.model, self.data, self._configuration(joints_rad))
+        torques = pin.computeGeneralizedGravity(self.model, self.data, self.configuration(joints_rad))
         return torques[6:].reshape(-1, 3)

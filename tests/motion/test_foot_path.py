@@ -65,7 +65,7 @@ def test_minimum_jerk_at_a_quarter() -> None:
             Keyframe(time=1.0, travel=1.0, lift=0.0),
         )
     )
-    assert STRAIGHT.at(0.25) == (0.103515625, 0.0, 5.625)  # 60 u - 180 u^2 + 120 u^3
+    assert STRAIGHT.at(0.25) == (0.103515625, 0.0, 5.625, 0.0)  # 60 u - 180 u^2 + 120 u^3
     assert up_and_down.at(0.125)[1] == 0.103515625
     assert up_and_down.at(0.875)[1] == pytest.approx(0.103515625, abs=1e-15)
 
@@ -80,7 +80,7 @@ def test_minimum_jerk_peaks() -> None:
 
 @examples(100)
 @given(frames=keyframes() | swings(), share=st.floats(0.05, 0.95))
-def test_bend_is_the_second_derivative_of_travel(frames: tuple[Keyframe, ...], share: float) -> None:
+def test_bends_are_the_second_derivatives(frames: tuple[Keyframe, ...], share: float) -> None:
     """By finite differences, inside each stretch between keyframes."""
     path = FootPath(frames)
     for before, after in pairwise(frames):
@@ -88,8 +88,10 @@ def test_bend_is_the_second_derivative_of_travel(frames: tuple[Keyframe, ...], s
         at = before.time + (0.02 + 0.96 * share) * span
         step = 0.01 * span
         low, middle, high = (path.at(at + offset) for offset in (-step, 0.0, step))
-        # Of travel 1 over such a span; a quintic's fourth derivative is what a difference is off by.
-        assert middle[2] * span**2 == pytest.approx((low[0] - 2.0 * middle[0] + high[0]) / 1e-4, abs=0.02)
+        # Of 1 over such a span; a quintic's fourth derivative is what a difference is off by.
+        for value, bend in ((0, 2), (1, 3)):
+            by_difference = (low[value] - 2.0 * middle[value] + high[value]) / 1e-4
+            assert middle[bend] * span**2 == pytest.approx(by_difference, abs=0.02)
 
 
 @examples(100)

@@ -186,7 +186,7 @@ def hardest_joint(foot: Foot, gait: Gait, velocity: Vec2, cycle_s: float, speeds
     """Greatest joint speed of a steady straight step, simulated finely, as a share of its own."""
     u = np.linspace(0.0, 1.0, 801)
     path = FootPath(gait.swing)
-    travel, lift, _ = np.array([path.at(float(share)) for share in u]).T
+    travel, lift = np.array([path.at(float(share))[:2] for share in u]).T
     airtime_s = (1.0 - gait.duty) * cycle_s
     # The foot flies a stride over the ground while the body goes on: from half a stance behind.
     ahead_s = travel * cycle_s - u * airtime_s - 0.5 * gait.duty * cycle_s

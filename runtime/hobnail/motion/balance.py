@@ -10,7 +10,7 @@ from collections.abc import Sequence
 
 from hobnail.motion.leg import LegKinematics
 from hobnail.motion.support import support_centre
-from hobnail.robot import Robot, Vec2, Vec3
+from hobnail.robot import Leg, Robot, Vec2, Vec3
 
 GRAVITY_M_S2 = 9.81
 
@@ -18,22 +18,28 @@ GRAVITY_M_S2 = 9.81
 def centre_of_mass(robot: Robot, joints_rad: Sequence[Sequence[float]]) -> Vec3:
     """Centre of mass of the whole robot (body frame, m) for joint angles per leg."""
     parts: list[tuple[float, Vec3]] = [(robot.body.mass_kg, robot.body.com_m)]
-    for leg, (roll, hip, knee) in zip(robot.legs, joints_rad, strict=True):
-        kinematics = LegKinematics(leg)
-        c, s = math.cos(roll), math.sin(roll)
-        axis = (0.0, leg.abduction_m * c, leg.abduction_m * s)
-        knee_at = kinematics.knee_point(roll, hip)
-        foot_at = kinematics.foot(roll, hip, knee)
-        for mass, near, far in (
-            (leg.hip_kg, axis, axis),
-            (leg.upper_kg, axis, knee_at),
-            (leg.lower_kg, knee_at, foot_at),
-        ):
-            x, y, z = (h + 0.5 * (a + b) for h, a, b in zip(leg.hip_m, near, far, strict=True))
-            parts.append((mass, (x, y, z)))
+    for leg, angles in zip(robot.legs, joints_rad, strict=True):
+        parts += link_masses(leg, LegKinematics(leg), angles)
     total = sum(mass for mass, _ in parts)
     x, y, z = (sum(mass * at[axis] for mass, at in parts) / total for axis in range(3))
     return x, y, z
+
+
+def link_masses(leg: Leg, kinematics: LegKinematics, angles: Sequence[float]) -> list[tuple[float, Vec3]]:
+    """Mass (kg) and place (body frame, m) of the hip, the upper and the lower link."""
+    roll, hip, knee = angles
+    axis = (0.0, leg.abduction_m * math.cos(roll), leg.abduction_m * math.sin(roll))
+    knee_at = kinematics.knee_point(roll, hip)
+    foot_at = kinematics.foot(roll, hip, knee)
+    parts = []
+    for mass, near, far in (
+        (leg.hip_kg, axis, axis),
+        (leg.upper_kg, axis, knee_at),
+        (leg.lower_kg, knee_at, foot_at),
+    ):
+        x, y, z = (h + 0.5 * (a + b) for h, a, b in zip(leg.hip_m, near, far, strict=True))
+        parts.append((mass, (x, y, z)))
+    return parts
 
 
 def neutral_feet(robot: Robot) -> list[Vec2]:

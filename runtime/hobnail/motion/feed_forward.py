@@ -11,9 +11,12 @@ from math import inf
 
 from hobnail.motion.foot import Foot
 from hobnail.motion.joint_steps import clamp_limits, clamp_steps
-from hobnail.motion.load import Drive
+from hobnail.motion.load import Drive, FootDrive
 from hobnail.motion.whole_body import WholeBody
 from hobnail.robot import Vec3
+
+# Feet nearer together than this (m^2, mean square) have no arm to turn the body with.
+LEAST_ARM2 = 1e-6
 
 
 class FeedForward:
@@ -33,6 +36,7 @@ class FeedForward:
         while the ground did `drive` to it; no joint by more than its step."""
         hz = 1.0 / time_s
         body = self._body
+        drive = self._about_the_carried(drive)
         commanded = []
         for (foot, command, limits), foot_m, old, angles, last, most in zip(
             self._legs, body.feet_m, before, body.joints_rad, self.commanded_rad, steps, strict=True
@@ -47,3 +51,20 @@ class FeedForward:
                 sent = clamp_steps(last, sent, most)
             commanded.append(sent)
         self.commanded_rad = tuple(commanded)
+
+    def _about_the_carried(self, drive: Drive) -> FootDrive:
+        """The drive for each foot: the moment as a spin about the point that carries the robot."""
+        ahead, left, up, moment = drive
+        whole = x_of = y_of = arm2 = 0.0
+        for (foot, _, _), (x, y, _) in zip(self._legs, self._body.feet_m, strict=True):
+            load = foot.load
+            whole += load
+            x_of += load * x
+            y_of += load * y
+            arm2 += load * (x * x + y * y)
+        if whole == 0.0:
+            return ahead, left, up, 0.0
+        x_of, y_of = x_of / whole, y_of / whole
+        arm2 = arm2 / whole - x_of * x_of - y_of * y_of
+        spin = (moment - x_of * left + y_of * ahead) / arm2 if arm2 > LEAST_ARM2 else 0.0
+        return ahead + spin * y_of, left - spin * x_of, up, spin

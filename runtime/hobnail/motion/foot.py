@@ -10,6 +10,7 @@ from hobnail.motion.foot_path import FootPath
 from hobnail.motion.glide import AT_REST, Motion, settle
 from hobnail.motion.leg import LegKinematics
 from hobnail.motion.load import LegCorrection
+from hobnail.motion.swung import SwungLeg
 from hobnail.robot import Leg, Span, Vec2
 
 # Share of the swing at its end in which the aim is left alone: a new aim would
@@ -53,15 +54,16 @@ class Swing:
         """Whether the aim rests on the target."""
         return self.offset_x is AT_REST and self.offset_y is AT_REST
 
-    def at(self, path: FootPath, u: float) -> tuple[float, float, float, float]:
-        """(x, y, lift share, bend of the travel) at the share `u` of the swing."""
-        travel, lift, bend = path.at(u)
+    def at(self, path: FootPath, u: float) -> tuple[float, float, float, float, float]:
+        """(x, y, lift share, bends of travel and lift) at the share `u` of the swing."""
+        travel, lift, bend, rise = path.at(u)
         (x0, y0), (x1, y1) = self.start, self.target
         return (
             x0 + travel * (x1 + self.offset_x[0] - x0),
             y0 + travel * (y1 + self.offset_y[0] - y0),
             lift,
             bend,
+            rise,
         )
 
 
@@ -73,8 +75,8 @@ class Foot:
 
     `x`, `y` are the foot's place in the ground frame, `lift_m` its height above
     where it stands; `phase` is the share of the cycle since its touch-down;
-    `load` the share of the robot's weight that it is taken to carry; `swung_kg` the
-    mass that moves with the foot.
+    `load` the share of the robot's weight that it is taken to carry; `swung` says what
+    moves with the foot.
     """
 
     __slots__ = (
@@ -86,12 +88,13 @@ class Foot:
         "limits",
         "load",
         "neutral",
+        "neutral_rad",
         "offset",
         "phase",
         "radius_m",
         "stepped",
         "swing",
-        "swung_kg",
+        "swung",
         "x",
         "y",
     )
@@ -104,13 +107,12 @@ class Foot:
         self.hip = x, y, z = leg.hip_m
         at = (neutral[0] - x, neutral[1] - y, leg.foot_radius_m - height_m - z)
         self.from_hip = at  # the neutral foot relative to its hip
-        neutral_rad = self.kinematics.angles(*self.kinematics.nearest_reachable(*at))
-        self.correction = LegCorrection(leg, self.kinematics, neutral_rad)
+        self.neutral_rad = self.kinematics.angles(*self.kinematics.nearest_reachable(*at))
+        self.correction = LegCorrection(leg, self.kinematics, self.neutral_rad)
         self.radius_m = leg.foot_radius_m
         self.limits = limits
         self.neutral = neutral
-        knee_share = leg.upper_m / (leg.upper_m + leg.lower_m)  # of the foot's way
-        self.swung_kg = 0.5 * (leg.upper_kg * knee_share + leg.lower_kg * (1.0 + knee_share))
+        self.swung = SwungLeg(leg, self.kinematics, at, height_m)
         self.offset = 0.0  # the gait's relative phase
         self.phase = 0.0
         self.x, self.y = neutral

@@ -40,8 +40,8 @@ class FootPath:
             for start, end, along, up in zip(times[:-1], times[1:], travel, lift, strict=True)
         ]
 
-    def at(self, u: float) -> tuple[float, float, float]:
-        """(travel, lift, second derivative of the travel by u) at the share `u` (0..1) of the swing."""
+    def at(self, u: float) -> tuple[float, float, float, float]:
+        """(travel, lift, second derivatives of both by u) at the share `u` (0..1) of the swing."""
         start, per_time, (a0, a1, a3, a4, a5), (b0, b1, b3, b4, b5) = self._segments[
             bisect_right(self._starts, u)
         ]
@@ -51,6 +51,7 @@ class FootPath:
             a0 + a1 * s + s3 * (a3 + s * (a4 + s * a5)),
             b0 + b1 * s + s3 * (b3 + s * (b4 + s * b5)),
             per_time * per_time * s * (6.0 * a3 + s * (12.0 * a4 + s * 20.0 * a5)),
+            per_time * per_time * s * (6.0 * b3 + s * (12.0 * b4 + s * 20.0 * b5)),
         )
 
 

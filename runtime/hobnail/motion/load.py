@@ -26,9 +26,12 @@ from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.leg import LegKinematics
 from hobnail.robot import Joint, Leg, Vec3
 
-# What the ground does through all feet together: force ahead, left and up (N), and the
-# turning about the body, as force over arm for a foot that carries everything (N/m).
+# What the ground does through all feet together: force ahead, left and up (N), and the moment
+# about the vertical through the body origin (N m).
 Drive = tuple[float, float, float, float]
+# The same for a foot that carries everything: the force on it at the body origin, and how that
+# grows with its distance from there, across it (N/m).
+FootDrive = tuple[float, float, float, float]
 
 # Share of the stall torque from which on the side is sure to which a torque pushes a servo:
 # about the friction of its gears (common practice).
@@ -65,7 +68,9 @@ class LegCorrection:
         a, b, c = (bend.trail_s for bend in bends)
         self.trail_s = (a, b, c)
 
-    def command(self, angles: Vec3, before: Vec3, hz: float, foot_m: Vec3, load: float, drive: Drive) -> Vec3:
+    def command(
+        self, angles: Vec3, before: Vec3, hz: float, foot_m: Vec3, load: float, drive: FootDrive
+    ) -> Vec3:
         """What the servos must be sent for geometric angles (rad) that were `before` 1 / `hz`
         seconds ago, with the foot at `foot_m` (body frame) and its share `load` of what the
         ground does: all that the head of this file names."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
-from hobnail.motion.balance import GRAVITY_M_S2
+from hobnail.motion.balance import GRAVITY_M_S2, centre_of_mass
 from hobnail.motion.foot import Foot
 from hobnail.motion.foot_path import FootPath
 from hobnail.motion.pacing import (
@@ -20,16 +20,14 @@ from hobnail.motion.pacing import (
 )
 from hobnail.motion.planar import Twist
 from hobnail.motion.reach import CycleReach, fit_shift
+from hobnail.motion.schedule import load_ramp
 from hobnail.motion.steadiness import least_margin, steady_strides
 from hobnail.motion.support import support_centre
-from hobnail.motion.sway import PeriodicSway
+from hobnail.motion.sway import Inertia, PeriodicSway
 from hobnail.robot import Gait, Robot, Vec2, Vec3
 
 # Of a slow gait's margin on the spot, what speeding up and slowing down may use.
 SPEEDING_SHARE = 0.2
-# Share of a cycle over which a foot takes up and gives off its load: the time in
-# which both of two alternating sets of feet are down, within these bounds.
-LOAD_RAMP = (0.05, 0.1)
 
 
 class GaitPlan:
@@ -43,7 +41,7 @@ class GaitPlan:
         "_strides",
         "_table",
         "acceleration_m_s2",
-        "arm2_m2",
+        "com_m",
         "gait",
         "load_ramp",
         "path",
@@ -56,7 +54,7 @@ class GaitPlan:
         self.gait = gait
         self.path = FootPath(gait.swing)
         self._neutral: list[Vec2] = [foot.neutral for foot in feet]
-        self.load_ramp = max(min(gait.duty - 0.5, LOAD_RAMP[1]), LOAD_RAMP[0])
+        self.load_ramp = load_ramp(gait.duty)
         neutrals = [foot.from_hip for foot in feet]
         room = room_between_feet(self._neutral, [foot.radius_m for foot in feet])
         discs = [
@@ -65,16 +63,16 @@ class GaitPlan:
         ]
         self.reach_m = [min(disc, space) for disc, space in zip(discs, room, strict=True)]
         shifting = fit_shift(gait, self._neutral, robot.stance.height_m, discs)
-        self.sway = PeriodicSway(self._neutral, shifting, robot.stance.height_m)
+        com_x, com_y, com_z = centre_of_mass(robot, [foot.neutral_rad for foot in feet])
+        self.com_m: Vec2 = (com_x, com_y)
+        inertia = Inertia(robot.mass_kg, robot.stance.height_m + com_z, [foot.swung for foot in feet])
+        self.sway = PeriodicSway(self._neutral, shifting, inertia)
         self._cycle_reach = CycleReach(gait, self.path, self.sway, self._neutral, discs)
-        # Mean square distance of the feet from the body: a turning moment over it is the
-        # force over arm of each.
-        self.arm2_m2 = sum(x * x + y * y for x, y in self._neutral) / len(feet)
         self.acceleration_m_s2 = math.inf
         self._strides: Vec3 | None = None
         if self.sway.leads:
             longest = 2.0 * max(self.reach_m)
-            arm = math.sqrt(self.arm2_m2)
+            arm = math.sqrt(sum(x * x + y * y for x, y in self._neutral) / len(feet))
             centre = support_centre(self._neutral, robot.gaits[0].duty, robot.gaits[0].phases)
             self._strides = steady_strides(self._neutral, shifting, centre, (longest, longest, longest / arm))
             if self._strides:

@@ -14,7 +14,7 @@ import numpy as np
 
 from hobnail.motion.foot_path import FootPath
 from hobnail.motion.planar import Twist
-from hobnail.motion.sway import PeriodicSway
+from hobnail.motion.sway import Inertia, PeriodicSway
 from hobnail.robot import Gait, Vec2
 
 INSTANTS = 24  # of the cycle
@@ -31,7 +31,7 @@ def fit_shift(gait: Gait, feet: Sequence[Vec2], height_m: float, discs_m: Sequen
     """
     clocks = np.arange(INSTANTS) / INSTANTS
     rate_hz = 1.0 / (gait.cycle_s or gait.cycle_range_s[1])
-    x, y, *_ = PeriodicSway(feet, gait, height_m).over_cycle(clocks, rate_hz)
+    x, y = PeriodicSway(feet, gait, Inertia(1.0, height_m)).over_cycle(clocks, rate_hz)[0]
     farthest = float(np.hypot(x, y).max())
     most = SHIFT_SHARE * min(discs_m)
     return gait if farthest <= most else replace(gait, body_shift=gait.body_shift * most / farthest)
@@ -64,11 +64,13 @@ class CycleReach:
     def fit(self, twist: Twist, cycle_s: float) -> Twist:
         """A twist scaled as a whole so that every foot stays in its leg's disc for a cycle."""
         vx, vy, yaw_rate = twist
-        x, y, dragged, turned_x, turned_y = self._sway.over_cycle(self._clocks, 1.0 / cycle_s)
+        on_the_spot, *added = self._sway.over_cycle(self._clocks, 1.0 / cycle_s)
+        x, y = on_the_spot
+        moved_x, moved_y = sum(v * by for v, by in zip(twist, added, strict=True))
         stride_x = cycle_s * (vx - yaw_rate * self._neutral[:, 1:])
         stride_y = cycle_s * (vy + yaw_rate * self._neutral[:, :1])
-        by_x = stride_x * self._ahead - (vx * dragged + yaw_rate * turned_x)
-        by_y = stride_y * self._ahead - (vy * dragged + yaw_rate * turned_y)
+        by_x = stride_x * self._ahead - moved_x
+        by_y = stride_y * self._ahead - moved_y
         # The share s of the twist at which |s by - shift| meets the disc.
         size2 = by_x * by_x + by_y * by_y
         along = by_x * x + by_y * y

@@ -9,6 +9,24 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+from hobnail.motion.glide import minimum_jerk
+
+# Share of a cycle over which a foot takes up and gives off its load: the time in
+# which both of two alternating sets of feet are down, within these bounds.
+LOAD_RAMP = (0.05, 0.1)
+
+
+def load_ramp(duty: float) -> float:
+    """Share of the cycle over which a foot takes up its load, and gives it off."""
+    return max(min(duty - 0.5, LOAD_RAMP[1]), LOAD_RAMP[0])
+
+
+def carried(since: float, duty: float) -> float:
+    """How much a foot carries, 0 to 1, at a share of the cycle since its touch-down: taken up
+    and given off along minimum-jerk ramps."""
+    u = min(since, duty - since) / load_ramp(duty)
+    return minimum_jerk(min(max(u, 0.0), 1.0))
+
 
 def leg_phase(clock: float, phase: float) -> float:
     """Share of the cycle since the leg's touch-down, 0 <= p < 1."""

@@ -13,7 +13,7 @@ from collections.abc import Sequence
 
 from hobnail.motion.schedule import leg_phase
 from hobnail.motion.support import stability_margin
-from hobnail.motion.sway import PeriodicSway
+from hobnail.motion.sway import Inertia, PeriodicSway
 from hobnail.robot import Gait, Vec2, Vec3
 
 INSTANTS = 40  # of the cycle, at which the margin is taken
@@ -26,7 +26,7 @@ MARGIN_SHARE = 0.65
 def least_margin(feet: Sequence[Vec2], gait: Gait, centre: Vec2, stride: Vec3) -> float:
     """Least margin (m) over a cycle of the zero-moment point that the sway asks for, for
     neutral `feet` and a body whose mass is over `centre`; negative outside the feet."""
-    wanted = PeriodicSway(feet, gait, 0.0)  # without height the shift is the point itself
+    wanted = PeriodicSway(feet, gait, Inertia(1.0, 0.0))  # without height the shift is the point itself
     sx, sy, turn = stride
     least = math.inf
     for step in range(INSTANTS):

@@ -9,74 +9,92 @@ from __future__ import annotations
 import cmath
 import math
 from collections.abc import Sequence
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from hobnail.motion.balance import GRAVITY_M_S2
+from hobnail.motion.foot_path import FootPath
 from hobnail.motion.glide import AT_REST, Motion, settle
-from hobnail.motion.schedule import intervals, leg_phase
+from hobnail.motion.schedule import carried
+from hobnail.motion.swung import SwungLeg
 from hobnail.robot import Gait, Vec2
 
-HARMONICS = 4
+HARMONICS = 6
+SAMPLES = 240  # of a cycle, from which the series are taken
 NONE: Vec2 = (0.0, 0.0)
 # Step by which the speed of the planned shift is taken.
 INSTANT_S = 1e-4
 # A shift of less than this needs no time before the first foot lifts.
 LEAD_M = 0.002
-# Coefficients below this are rounding (m, or m per m/s).
+# Coefficients below this are rounding (m, or m for each m of stride).
 NOTHING = 1e-9
 
-
+Array = NDArray[np.float64]
+Series = NDArray[np.complex128]
 Shift = tuple[float, float, float, float]
 Wave = tuple[int, complex, complex, float]  # harmonic, its part that turns forth and back, its curvature
+
+
+class Inertia(NamedTuple):
+    """A robot's mass, the height of its centre over the ground, and its legs, foot by foot;
+    without legs they are taken to be light."""
+
+    mass_kg: float
+    height_m: float
+    legs: Sequence[SwungLeg] = ()
 
 
 class PeriodicSway:
     """The shift that belongs to a gait, periodic in the gait clock, for any velocity.
 
-    The wanted zero-moment point is the centroid of the standing feet, which the
-    gait moves about and the body's velocity drags along.  Its Fourier series,
-    term by term divided by 1 + (z/g) w^2, is the one periodic motion of the
-    linear inverted pendulum (Kajita et al. 2001) with that zero-moment point.
+    The wanted zero-moment point is the centroid of the feet, each as much as it carries,
+    which the gait moves about and the body's velocity drags along.  The legs move
+    that point too, by their weight and by their inertia, and what they do is taken
+    off.  The Fourier series of the rest, term by term divided by 1 + (z/g) w^2, is the
+    one periodic motion of the linear inverted pendulum (Kajita et al. 2001) with
+    that zero-moment point; what moves with the feet does not count as its mass.
+    `body_share` is what is left of the mass, along x and along y.
     """
 
-    __slots__ = ("_height_term", "_pace", "_terms", "_waves", "active", "leads")
+    __slots__ = ("_high", "_pace", "_terms", "_waves", "active", "body_share", "leads")
 
-    def __init__(self, feet: Sequence[Vec2], gait: Gait, height_m: float) -> None:
-        share, duty = gait.body_shift, gait.duty
-        base_x, base_y, sweep, turn_x, turn_y = ([0j] * (HARMONICS + 1) for _ in range(5))
-        for start, length, down in intervals(duty, gait.phases):
-            standing = [
-                (foot, 0.5 * duty - leg_phase(start + 1e-9, phase))
-                for foot, phase, is_down in zip(feet, gait.phases, down, strict=True)
-                if is_down
-            ]
-            mean = share / max(len(standing), 1)
-            for k in range(HARMONICS + 1):
-                # Integrals over the piece: of 1, and of the time since its start.
-                still, going = _integrals(k, start, length)
-                for (x, y), ahead in standing:
-                    swept = mean * (ahead * still - going)
-                    base_x[k] += mean * x * still
-                    base_y[k] += mean * y * still
-                    sweep[k] += swept
-                    turn_x[k] -= y * swept
-                    turn_y[k] += x * swept
+    def __init__(self, feet: Sequence[Vec2], gait: Gait, inertia: Inertia) -> None:
+        clocks = np.arange(SAMPLES) / SAMPLES
+        since = (clocks - np.array(gait.phases)[:, None]) % 1.0
+        wanted = _series(_centroid(feet, since, gait.duty))
         # The neutral stance has the mean of the centroids under the body already.
-        base_x[0] = base_y[0] = 0j
+        wanted[:2, 0] = 0.0
+        # Whether the body must be over its support before the first foot lifts.
+        self.leads = bool(gait.body_shift * np.abs(wanted[:2]).sum(axis=0).max() > LEAD_M)
+        hasty = np.zeros_like(wanted)  # what grows with the square of the rate, for 1 Hz
+        share, high = np.ones(2), np.full(2, inertia.height_m)
+        if inertia.legs:
+            ways = _foot_ways(since, gait)
+            for leg, (x, y), way in zip(inertia.legs, feet, ways, strict=True):
+                moved = np.array(leg.momentum_kg[:2]) / inertia.mass_kg
+                # Inertia that turns the robot about y moves the point along x, about x along y.
+                about_x, about_y, _ = np.array(leg.angular_kg_m) / inertia.mass_kg
+                tipped = np.stack((about_y, -about_x))
+                wanted -= _follow(moved, way, x, y)
+                hasty += _follow(tipped, way, x, y)
+                share -= np.diagonal(moved)
+                high -= np.diagonal(tipped)
+        turns = np.arange(HARMONICS + 1)
+        hasty *= -((2.0 * math.pi * turns) ** 2) / GRAVITY_M_S2
         # A gait of two alternating sets of feet has every second harmonic only.
         self._terms = [
-            term
-            for term in zip(range(HARMONICS + 1), base_x, base_y, sweep, turn_x, turn_y, strict=True)
-            if any(abs(part) > NOTHING for part in term[1:])
+            (int(k), (gait.body_shift * wanted[:, k]).tolist(), (gait.body_shift * hasty[:, k]).tolist())
+            for k in turns
+            if gait.body_shift * max(np.abs(wanted[:, k]).max(), np.abs(hasty[:, k]).max()) > NOTHING
         ]
-        self._height_term = height_m / GRAVITY_M_S2 * (2.0 * math.pi) ** 2
+        self.body_share: Vec2 = (float(share[0]), float(share[1]))
+        high *= (2.0 * math.pi) ** 2 / GRAVITY_M_S2
+        self._high: Vec2 = (float(high[0]), float(high[1]))
         self._pace: Sequence[float] = ()  # that the waves are for; never changed in place
         self._waves: list[Wave] = []
         self.active = bool(self._terms)
-        # Whether the body must be over its support before the first foot lifts.
-        self.leads = any(abs(x) + abs(y) > LEAD_M for x, y in zip(base_x, base_y, strict=True))
 
     def at(self, clock: float, pace: Sequence[float]) -> Shift:
         """Shift (m) and its acceleration (m/s^2), (x, y, ax, ay), at a time of the cycle for
@@ -94,44 +112,74 @@ class PeriodicSway:
 
     def _waves_at(self, vx: float, vy: float, yaw_rate: float, rate_hz: float) -> list[Wave]:
         """The harmonics of the shift at a pace."""
-        cycle_s = 1.0 / rate_hz
-        bend = (2.0 * math.pi * rate_hz) ** 2
-        stiff = self._height_term * rate_hz * rate_hz
+        ahead, left, turn = vx / rate_hz, vy / rate_hz, yaw_rate / rate_hz
+        rate2 = rate_hz * rate_hz
+        bend = (2.0 * math.pi) ** 2 * rate2
+        (share_x, share_y), (high_x, high_y) = self.body_share, self._high
         waves = []
-        for k, base_x, base_y, sweep, turn_x, turn_y in self._terms:
-            # Both signs of each harmonic but the mean.
-            share = (1.0 if k else 0.5) / (1.0 + stiff * k * k)
-            x = share * (base_x + cycle_s * (vx * sweep + yaw_rate * turn_x))
-            y = share * (base_y + cycle_s * (vy * sweep + yaw_rate * turn_y))
+        for k, wanted, hasty in self._terms:
+            x0, y0, x_ahead, y_ahead, x_left, y_left, x_turn, y_turn = (
+                slow + rate2 * fast for slow, fast in zip(wanted, hasty, strict=True)
+            )
+            k2 = rate2 * k * k
+            half = 1.0 if k else 0.5  # of both signs of each harmonic but the mean
+            x = half * (x0 + ahead * x_ahead + left * x_left + turn * x_turn) / (share_x + high_x * k2)
+            y = half * (y0 + ahead * y_ahead + left * y_left + turn * y_turn) / (share_y + high_y * k2)
             # Twice the real part of each, x + y i as one number.
             waves.append((k, x + 1j * y, x.conjugate() + 1j * y.conjugate(), bend * k * k))
         return waves
 
-    def over_cycle(self, clocks: NDArray[np.float64], rate_hz: float) -> NDArray[np.float64]:
-        """The shift (m) at many times of the cycle, shape (5, times), which is linear in the
-        velocity: on the spot along x and y, then what is added for each m/s along the way
-        to go, then for each rad/s along x and y."""
-        if not self._terms:
-            return np.zeros((5, len(clocks)))
-        turns = np.array([term[0] for term in self._terms])
-        weights = np.where(turns, 2.0, 1.0) / (1.0 + self._height_term * (rate_hz * turns) ** 2)
-        waves = weights[:, None] * np.exp(2j * math.pi * np.outer(turns, clocks))
-        cycle_s = 1.0 / rate_hz
-        scale = np.array([1.0, 1.0, cycle_s, cycle_s, cycle_s])
-        shifts: NDArray[np.float64] = (
-            (scale[:, None] * np.array([term[1:] for term in self._terms]).T) @ waves
-        ).real
+    def over_cycle(self, clocks: Array, rate_hz: float) -> Array:
+        """The shift (m) at many times of the cycle, which is linear in the velocity: on the
+        spot, and what is added for each m/s ahead, each m/s to the left and each rad/s;
+        shape (4, 2, times)."""
+        shifts = np.zeros((4, 2, len(clocks)))
+        for row, (vx, vy, yaw_rate) in zip(shifts, [(0.0, 0.0, 0.0), *np.eye(3).tolist()], strict=True):
+            for k, forth, back, _ in self._waves_at(vx, vy, yaw_rate, rate_hz):
+                turned = np.exp(2j * math.pi * k * clocks)
+                both = forth * turned + back * turned.conjugate()
+                row += both.real, both.imag
+        shifts[1:] -= shifts[0]
         return shifts
 
 
-def _integrals(k: int, start: float, length: float) -> tuple[complex, complex]:
-    """Integrals of exp(-2 pi i k t) and of (t - start) exp(-2 pi i k t) over a piece."""
-    if k == 0:
-        return complex(length), complex(0.5 * length * length)
-    turn = 2j * math.pi * k
-    first, last = cmath.exp(-turn * start), cmath.exp(-turn * (start + length))
-    still = (first - last) / turn
-    return still, (still - length * last) / turn
+# Rows of what follows: x and y on the spot, then for each m of stride ahead, each m to the
+# left, and each rad of turn in a cycle.
+
+
+def _centroid(feet: Sequence[Vec2], since: Array, duty: float) -> Array:
+    """Centroid of the feet over a cycle, each as much as it carries, about the body's pose;
+    `since` is the share of the cycle since touch-down, foot by foot."""
+    loads = np.array([[carried(share, duty) for share in foot] for foot in since.tolist()])
+    loads /= np.maximum(loads.sum(axis=0), NOTHING)
+    x, y = (np.array(feet).T[:, :, None] * loads).sum(axis=1)
+    swept = loads * (0.5 * duty - since)
+    by_x, by_y = np.array(feet).T @ swept
+    both, none = swept.sum(axis=0), np.zeros_like(x)
+    return np.stack((x, y, both, none, none, both, -by_y, by_x))
+
+
+def _foot_ways(since: Array, gait: Gait) -> Series:
+    """How each foot goes relative to the body over a cycle, along the way to go for each m of
+    stride, and up; shape (feet, 2, harmonics)."""
+    path = FootPath(gait.swing)
+    in_air = np.clip((since - gait.duty) / (1.0 - gait.duty), 0.0, 1.0)
+    flown = np.array([[path.at(u)[:2] for u in leg] for leg in in_air.tolist()])
+    along = 0.5 * gait.duty - since + np.where(in_air > 0.0, flown[..., 0], 0.0)
+    return _series(np.stack((along, gait.lift_m * flown[..., 1]), axis=1))
+
+
+def _follow(matrix: Array, way: Series, x: float, y: float) -> Series:
+    """What two rows of a leg's matrix (see `SwungLeg`) make of the ways of a foot at (x, y)."""
+    along, up = way
+    ahead, left, lift = matrix.T[:, :, None]
+    return np.concatenate((lift * up, ahead * along, left * along, (x * left - y * ahead) * along))
+
+
+def _series(samples: Array) -> Series:
+    """Fourier coefficients of samples over a cycle (the last axis), from the mean on."""
+    series: Series = np.fft.rfft(samples)[..., : HARMONICS + 1] / samples.shape[-1]
+    return series
 
 
 Ease = tuple[Motion, Motion]

@@ -28,6 +28,7 @@ from hobnail.motion.pacing import fit_stride
 from hobnail.motion.plan import GaitPlan
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist, point_speed
 from hobnail.motion.sway import NONE, BodyShift, SwayState
+from hobnail.motion.swung import SwungLeg
 from hobnail.motion.whole_body import WholeBody
 from hobnail.motion.yielding import Yielding
 from hobnail.robot import Gait, Robot, Span, Vec2, Vec3
@@ -89,8 +90,8 @@ class Walker:
         self._fitted: Twist = STILL  # the same, within what may be asked
         self._pace = Slew([0.0, 0.0, 0.0, 1.0])  # vx, vy, yaw rate, cycles a second
         self._shift = BodyShift()
-        # What drives the legs in the air: force (ground frame, N) and moment (N m).
-        self._swing_drive: Vec3 = (0.0, 0.0, 0.0)
+        # Legs in the air, and the accelerations of their feet (ground frame, m/s^2).
+        self._swinging: list[tuple[SwungLeg, float, float, float]] = []
         self._walking = False  # the gait clock runs
         self._checking = False  # feet may be led out of reach: look ahead every tick
         self._landing = False  # slow enough to change the gait: no foot may lift any more
@@ -271,8 +272,7 @@ class Walker:
         path = plan.path
         ramp = plan.load_ramp
         weights = []
-        push_x = push_y = spin = 0.0
-        x0, y0, _ = self._pose
+        swinging = []
         for foot in self._feet:
             old = foot.phase
             phase = foot.phase = (clock - foot.offset) % 1.0
@@ -293,15 +293,14 @@ class Walker:
                 swing = swing.re_aimed(target, time_s, left)
             foot.swing = swing
             if swing is not None:
-                x, y, lift, bend = swing.at(path, (phase - duty) / airtime)
+                x, y, lift, bend, rise = swing.at(path, (phase - duty) / airtime)
                 foot.x, foot.y, foot.lift_m = x, y, lift_m * lift
                 weight = 0.0
                 (from_x, from_y), (to_x, to_y) = swing.start, swing.target
-                thrust = foot.swung_kg * bend * hurry
-                thrust_x, thrust_y = thrust * (to_x - from_x), thrust * (to_y - from_y)
-                push_x += thrust_x
-                push_y += thrust_y
-                spin += (x - x0) * thrust_y - (y - y0) * thrust_x
+                bend *= hurry
+                swinging.append(
+                    (foot.swung, bend * (to_x - from_x), bend * (to_y - from_y), rise * hurry * lift_m)
+                )
             elif phase >= duty:
                 weight = 1.0
             elif phase < ramp:
@@ -311,7 +310,7 @@ class Walker:
             else:
                 weight = 1.0
             weights.append(weight)
-        self._swing_drive = (push_x, push_y, spin)
+        self._swinging = swinging
         self._share_load(time_s, weights)
 
     def _share_load(self, time_s: float, weights: Sequence[float]) -> None:
@@ -493,13 +492,20 @@ class Walker:
         (ahead, left), slope = self._shift.acceleration, self._pace.slope
         ahead, left = self._yielding.share * ahead, self._yielding.share * left
         c, s = math.cos(self._pose[2]), math.sin(self._pose[2])
-        x, y, spin = self._swing_drive
-        return (
-            mass * (ahead + slope[0]) + c * x + s * y,
-            mass * (left + slope[1]) + c * y - s * x,
-            mass * GRAVITY_M_S2,
-            spin / self._plan.arm2_m2,
-        )
+        share_x, share_y = self._plan.sway.body_share
+        force_x, force_y = mass * (share_x * ahead + slope[0]), mass * (share_y * left + slope[1])
+        force_z = mass * GRAVITY_M_S2
+        com_x, com_y = self._plan.com_m
+        moment = com_x * force_y - com_y * force_x
+        for leg, along, across, up in self._swinging:
+            of_x, of_y, of_z = leg.momentum_kg
+            _, _, of_turn = leg.angular_kg_m
+            x, y = c * along + s * across, c * across - s * along
+            force_x += of_x[0] * x + of_x[1] * y + of_x[2] * up
+            force_y += of_y[0] * x + of_y[1] * y + of_y[2] * up
+            force_z += of_z[0] * x + of_z[1] * y + of_z[2] * up
+            moment += of_turn[0] * x + of_turn[1] * y + of_turn[2] * up
+        return force_x, force_y, force_z, moment
 
     # -- trying a tick again -------------------------------------------------
 
