@@ -22,12 +22,14 @@ LEAST_ARM2 = 1e-6
 class FeedForward:
     """`commanded_rad` holds what the servos are sent, leg by leg."""
 
-    __slots__ = ("_body", "_legs", "commanded_rad")
+    __slots__ = ("_body", "_legs", "_turned", "_turned_s", "commanded_rad")
 
     def __init__(self, feet: Sequence[Foot], body: WholeBody, drive: Drive) -> None:
         """For a body that stands still."""
         self._body = body
         self._legs = [(foot, foot.correction.command, foot.limits) for foot in feet]
+        self._turned: list[Vec3] = [(0.0, 0.0, 0.0)] * len(feet)  # by the joints in the latest tick
+        self._turned_s = 1.0  # how long that was
         self.commanded_rad = body.joints_rad
         self.advance(body.joints_rad, drive, 1.0, [(inf, inf, inf)] * len(feet))
 
@@ -37,6 +39,7 @@ class FeedForward:
         hz = 1.0 / time_s
         body = self._body
         drive = self._about_the_carried(drive)
+        before = self._as_if_steady(before, time_s)
         commanded = []
         for (foot, command, limits), foot_m, old, angles, last, most in zip(
             self._legs, body.feet_m, before, body.joints_rad, self.commanded_rad, steps, strict=True
@@ -51,6 +54,25 @@ class FeedForward:
                 sent = clamp_steps(last, sent, most)
             commanded.append(sent)
         self.commanded_rad = tuple(commanded)
+
+    def _as_if_steady(self, before: Sequence[Vec3], time_s: float) -> list[Vec3]:
+        """Where the joints would have come from, had they had their speed at the end of the tick
+        all the time: its mean is half a tick old, in which a swing changes its speed a lot."""
+        old, scale = self._turned, time_s / self._turned_s
+        angles = self._body.joints_rad
+        self._turned = [(a - d, b - e, c - f) for (a, b, c), (d, e, f) in zip(angles, before, strict=True)]
+        self._turned_s = time_s
+        share = scale / (1.0 + scale)
+        return [
+            (
+                d - share * (a - scale * a0),
+                e - share * (b - scale * b0),
+                f - share * (c - scale * c0),
+            )
+            if a or b or c
+            else now
+            for (a, b, c), (a0, b0, c0), (d, e, f), now in zip(self._turned, old, before, angles, strict=True)
+        ]
 
     def _about_the_carried(self, drive: Drive) -> FootDrive:
         """The drive for each foot: the moment as a spin about the point that carries the robot."""
