@@ -139,11 +139,10 @@ def thistle() -> Robot:
         height_m=0.21,
         rest_height_m=0.052,
         belly_m=0.05,
-        # Rehearsed: with more duty or longer cycles it rocks; its feet stand a little behind.
+        # Rehearsed: with more duty or longer cycles it rocks.
         trot=Gait(
             name="trot", duty=0.5, phases=DIAGONAL, cycle_range_s=(0.38, 0.4), lift_m=0.015, body_shift=1.0
         ),
-        forward_m=-0.005,
         spread_m=0.01,
         envelope=Envelope(forward_m_s=0.25, sideways_m_s=0.12, turn_rad_s=0.8),
         supply_v=7.4,

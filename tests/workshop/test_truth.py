@@ -88,37 +88,29 @@ def test_juniper_is_true_along_the_axes(share: Vec3) -> None:
     assert max(found.values()) <= 1.0, found
 
 
-# Known to be less true than it should: walking diagonally juniper turns by up to 0.03 rad/s
-# without being asked to, and that adds to the turn when it does both.
-DIAGONAL_TURN = 2.0
-
-
 @pytest.mark.parametrize("share", MIXED, ids=str)
 def test_juniper_is_true_where_axes_mix(share: Vec3) -> None:
     found = walked(load_robot(CONFIG / "juniper.yaml"), share)
-    turn = found.pop("turn")
-    assert max(found.values()) <= 1.1, found
-    assert turn <= (DIAGONAL_TURN if share[0] and share[1] else 1.0)
+    assert max(found.values()) <= 1.0, found
 
 
 @pytest.mark.parametrize("robot", [thistle(), burdock()], ids=lambda robot: robot.name)
 def test_made_up_robots_are_nearly_as_true(robot: Robot) -> None:
-    """Tilt and fall as for juniper; speed and turn within twice of what juniper is allowed, on
-    average well within it."""
+    """Half of what juniper is allowed to tilt; speed, turn and drift on average well within what it
+    is allowed, and now and then a little over."""
     found = [walked(robot, share) for share in AXES + MIXED]
-    for name in ("speed", "turn"):
+    for name, most in (("speed", 1.8), ("turn", 1.4), ("drift", 1.2)):
         values = [each[name] for each in found]
-        assert max(values) <= 2.1, name
-        assert sum(values) / len(values) <= 0.75, name
-    assert max(each["tilt"] for each in found) <= 1.0
-    assert sum(each["drift"] for each in found[:5]) / 5 <= 1.5
+        assert max(values) <= most, name
+        assert sum(values) / len(values) <= 0.65, name
+    assert max(each["tilt"] for each in found) <= 0.5
 
 
 def test_bramble_is_true_and_level() -> None:
     robot = load_robot(CONFIG / "bramble.yaml")
     for share in (AXES[1], AXES[4], AXES[6], AXES[9], MIXED[4]):
         found = walked(robot, share)
-        assert max(found.values()) <= 1.1, found
+        assert max(found.values()) <= 1.0, found
 
 
 @pytest.mark.parametrize(
