@@ -28,9 +28,7 @@ class Listener:
     def __init__(self, told: list[Vec3]) -> None:
         self._told = told
 
-    def command(
-        self, angles: Vec3, _before: Vec3, _hz: float, foot_m: Vec3, load: float, drive: FootDrive
-    ) -> Vec3:
+    def command(self, angles: Vec3, _speeds: Vec3, foot_m: Vec3, load: float, drive: FootDrive) -> Vec3:
         """The angles as they are."""
         x, y, _ = foot_m
         ahead, left, up, spin = drive

@@ -66,7 +66,7 @@ def corrections(robot: Robot) -> list[LegCorrection]:
 
 def loaded(correction: LegCorrection, leg: Leg, angles: Vec3, force: Vec3) -> Vec3:
     """What a leg that stands still under a load is sent."""
-    return correction.command(angles, angles, 1.0, foot_of(leg, angles), 1.0, (*force, 0.0))
+    return correction.command(angles, STILL, foot_of(leg, angles), 1.0, (*force, 0.0))
 
 
 def foot_of(leg: Leg, angles: Vec3) -> Vec3:
@@ -277,8 +277,7 @@ def test_a_servo_that_trails_so_commanded_follows_its_path(robot: Robot) -> None
             command = np.array(wanted)
             if lead:
                 at, moving = vec3(wanted), vec3(speeds)
-                before = vec3(np.array(at) - 1e-3 * np.array(moving))
-                here = correction.command(at, before, 1e3, foot_of(robot.legs[0], at), 0.0, UNLOADED)
+                here = correction.command(at, moving, foot_of(robot.legs[0], at), 0.0, UNLOADED)
                 command += np.array(here) - np.array(loaded(correction, robot.legs[0], at, STILL))
             return np.asarray(stiffness * (command - angles) / slope)
 

@@ -17,34 +17,48 @@ from hobnail.robot import Vec3
 
 # Feet nearer together than this (m^2, mean square) have no arm to turn the body with.
 LEAST_ARM2 = 1e-6
+STILL: Vec3 = (0.0, 0.0, 0.0)
 
 
 class FeedForward:
     """`commanded_rad` holds what the servos are sent, leg by leg."""
 
-    __slots__ = ("_body", "_legs", "_turned", "_turned_s", "commanded_rad")
+    __slots__ = ("_body", "_legs", "_speeds", "_tick_s", "commanded_rad")
 
     def __init__(self, feet: Sequence[Foot], body: WholeBody, drive: Drive) -> None:
         """For a body that stands still."""
         self._body = body
         self._legs = [(foot, foot.correction.command, foot.limits) for foot in feet]
-        self._turned: list[Vec3] = [(0.0, 0.0, 0.0)] * len(feet)  # by the joints in the latest tick
-        self._turned_s = 1.0  # how long that was
+        self._speeds: list[Vec3] = [STILL] * len(feet)  # of the joints, mean of the latest tick, rad/s
+        self._tick_s = 1.0  # how long that was
         self.commanded_rad = body.joints_rad
         self.advance(body.joints_rad, drive, 1.0, [(inf, inf, inf)] * len(feet))
 
     def advance(self, before: Sequence[Vec3], drive: Drive, time_s: float, steps: Sequence[Vec3]) -> None:
         """Go on with the body, whose joints went from `before` in `time_s` along their path
         while the ground did `drive` to it; no joint by more than its step."""
-        hz = 1.0 / time_s
         body = self._body
         drive = self._about_the_carried(drive)
-        before = self._as_if_steady(before, time_s)
-        commanded = []
-        for (foot, command, limits), foot_m, old, angles, last, most in zip(
-            self._legs, body.feet_m, before, body.joints_rad, self.commanded_rad, steps, strict=True
+        hz = 1.0 / time_s
+        # The mean speed of a tick is half a tick old, in which a swing changes its speed a lot.
+        lead = time_s / (time_s + self._tick_s)
+        commanded, speeds = [], []
+        for (foot, command, limits), foot_m, (a0, b0, c0), angles, (u0, v0, w0), last, most in zip(
+            self._legs,
+            body.feet_m,
+            before,
+            body.joints_rad,
+            self._speeds,
+            self.commanded_rad,
+            steps,
+            strict=True,
         ):
-            sent = a, b, c = command(angles, old, hz, foot_m, foot.load, drive)
+            a, b, c = angles
+            speed = u, v, w = (a - a0) * hz, (b - b0) * hz, (c - c0) * hz
+            speeds.append(speed)
+            if u or v or w:
+                speed = u + lead * (u - u0), v + lead * (v - v0), w + lead * (w - w0)
+            sent = a, b, c = command(angles, speed, foot_m, foot.load, drive)
             (low_a, high_a), (low_b, high_b), (low_c, high_c) = limits
             if not (low_a <= a <= high_a and low_b <= b <= high_b and low_c <= c <= high_c):
                 sent = a, b, c = clamp_limits(sent, limits)
@@ -54,25 +68,7 @@ class FeedForward:
                 sent = clamp_steps(last, sent, most)
             commanded.append(sent)
         self.commanded_rad = tuple(commanded)
-
-    def _as_if_steady(self, before: Sequence[Vec3], time_s: float) -> list[Vec3]:
-        """Where the joints would have come from, had they had their speed at the end of the tick
-        all the time: its mean is half a tick old, in which a swing changes its speed a lot."""
-        old, scale = self._turned, time_s / self._turned_s
-        angles = self._body.joints_rad
-        self._turned = [(a - d, b - e, c - f) for (a, b, c), (d, e, f) in zip(angles, before, strict=True)]
-        self._turned_s = time_s
-        share = scale / (1.0 + scale)
-        return [
-            (
-                d - share * (a - scale * a0),
-                e - share * (b - scale * b0),
-                f - share * (c - scale * c0),
-            )
-            if a or b or c
-            else now
-            for (a, b, c), (a0, b0, c0), (d, e, f), now in zip(self._turned, old, before, angles, strict=True)
-        ]
+        self._speeds, self._tick_s = speeds, time_s
 
     def _about_the_carried(self, drive: Drive) -> FootDrive:
         """The drive for each foot: the moment as a spin about the point that carries the robot."""

@@ -68,14 +68,11 @@ class LegCorrection:
         a, b, c = (bend.trail_s for bend in bends)
         self.trail_s = (a, b, c)
 
-    def command(
-        self, angles: Vec3, before: Vec3, hz: float, foot_m: Vec3, load: float, drive: FootDrive
-    ) -> Vec3:
-        """What the servos must be sent for geometric angles (rad) that were `before` 1 / `hz`
-        seconds ago, with the foot at `foot_m` (body frame) and its share `load` of what the
-        ground does: all that the head of this file names."""
+    def command(self, angles: Vec3, speeds: Vec3, foot_m: Vec3, load: float, drive: FootDrive) -> Vec3:
+        """What the servos must be sent for geometric angles (rad) that move at `speeds` (rad/s),
+        with the foot at `foot_m` (body frame) and its share `load` of what the ground does: all
+        that the head of this file names."""
         roll, hip, knee = angles
-        roll0, hip0, knee0 = before
         x, y, z = foot_m
         ahead, left, up, spin = drive
         # The ground's force on this foot.
@@ -96,10 +93,11 @@ class LegCorrection:
         a += sin_roll * (at_knee * upper_down + at_foot * lower_down)
         # How far the shafts stand off while they bear that and move, and to which side of their
         # slack that takes them.
+        va, vb, vc = speeds
         give_a, give_b, give_c, ta, tb, tc, slack_a, slack_b, slack_c, sure_a, sure_b, sure_c = self._bends
-        a = give_a * a + ta * (roll - roll0) * hz
-        b = give_b * b + tb * (hip - hip0) * hz
-        c = give_c * c + tc * (knee - knee0) * hz
+        a = give_a * a + ta * va
+        b = give_b * b + tb * vb
+        c = give_c * c + tc * vc
         a += slack_a * a / (abs(a) + sure_a)
         b += slack_b * b / (abs(b) + sure_b)
         c += slack_c * c / (abs(c) + sure_c)
