@@ -33,12 +33,14 @@ class GaitPattern:
 
 # Hildebrand, Science 150:701 (1965): duty factor, and D, the lag of the fore foot after
 # the hind foot on the same side; the sides are half a cycle apart.  Then the cycle times:
-# a trot must be quick (our rehearsals), a crawl must not.
+# a trot must be quick (our rehearsals), a crawl must not.  Last, how far the body shifts over
+# its supports: in a pace not over the feet of one side altogether.  A little beyond them it
+# would fall over; a little short of them it comes down on the feet that are to land anyhow.
 _SYMMETRICAL = {
-    "trot": (0.6, 0.5, (3.0, 4.5)),
-    "crawl": (0.8, 0.25, (9.0, 30.0)),  # lateral sequence
-    "pace": (0.7, 0.0, (3.0, 4.5)),
-    "amble": (0.7, 0.25, (4.0, 9.0)),
+    "trot": (0.6, 0.5, (3.0, 4.5), 1.0),
+    "crawl": (0.8, 0.25, (9.0, 30.0), 1.0),  # lateral sequence
+    "pace": (0.7, 0.0, (3.0, 4.5), 0.8),
+    "amble": (0.7, 0.25, (4.0, 9.0), 1.0),
 }
 TRIPOD_TIMES = (4.0, 14.0)
 WAVE_TIMES = (14.0, 45.0)
@@ -59,12 +61,12 @@ def built_in_gait(name: str, hips: Sequence[Vec3]) -> GaitPattern:
     if name in _SYMMETRICAL:
         if len(left) != 2:
             raise ValueError(f"{name} is for four legs, two a side")
-        duty, lag, cycle_times = _SYMMETRICAL[name]
+        duty, lag, cycle_times, body_shift = _SYMMETRICAL[name]
         return GaitPattern(
             duty=duty,
             phases=_placed(len(hips), left, (0.0, lag), right, (0.5, (0.5 + lag) % 1.0)),
             cycle_times=cycle_times,
-            body_shift=1.0,
+            body_shift=body_shift,
         )
     if len(left) < 3:
         raise ValueError(f"{name} is for six legs or more, as many on either side")
