@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from scipy.integrate import solve_ivp
 from scipy.optimize import minimize, root
 
-from hobnail.controller import Controller
+from hobnail.controller import Controller, Tick
 from hobnail.motion.leg import LegKinematics
 from hobnail.motion.load import LegCorrection, half_dead_band_rad
 from hobnail.robot import Leg, Robot, Servo, Vec3
@@ -122,10 +122,9 @@ def test_a_springy_leg_so_commanded_rests_where_it_should(robot: Robot, off: Vec
     assert found.x == pytest.approx([roll, hip, knee], abs=1e-8)
 
 
-def resting_pose(robot: Robot, commanded: tuple[Vec3, ...]) -> Array:
-    """Where the body comes to rest (x, y, height; roll, pitch, yaw), feet held where they stand,
+def resting_pose(robot: Robot, tick: Tick, commanded: tuple[Vec3, ...]) -> Array:
+    """Where the body of that tick comes to rest (x, y, height; roll, pitch, yaw), feet held where they stand,
     every servo a spring: the least of spring and gravity's energy, by scipy."""
-    tick = Controller(robot).tick(robot.period_s)
     ground = np.array(tick.feet_m) + np.array([0.0, 0.0, robot.stance.height_m])
     judge = judge_of(robot)
     legs = [LegKinematics(leg) for leg in robot.legs]
@@ -159,13 +158,31 @@ def test_a_springy_robot_so_commanded_stands_level_at_its_height(robot: Robot) -
     it several times farther down."""
     robot = plain(robot)
     tick = Controller(robot).tick(robot.period_s)
-    helped = resting_pose(robot, tick.commanded_rad)
-    bare = resting_pose(robot, tick.joints_rad)
+    helped = resting_pose(robot, tick, tick.commanded_rad)
+    bare = resting_pose(robot, tick, tick.joints_rad)
     print(f"{robot.name}: sags {-bare[2]:.2f} mm, with feed-forward {-helped[2]:.3f} mm")
     assert bare[2] < -0.3
     assert abs(helped[2]) < 0.1
     assert np.abs(helped[:2]).max() < 0.2
     assert np.abs(helped[3:]).max() < math.radians(0.1)
+
+
+@ROBOTS
+def test_a_springy_robot_that_leans_stays_level(robot: Robot) -> None:
+    """Leaning ahead and to the left, feet there carry more: the body tilts by a fifth at most of what
+    it would without feed-forward."""
+    robot = plain(robot)
+    controller = Controller(robot)
+    lean = 0.6 * robot.posture_limits.lean_m
+    controller.posture(lean_m=(lean, lean))
+    tick = controller.tick(robot.period_s)
+    while not tick.settled:
+        tick = controller.tick(robot.period_s)
+    helped = resting_pose(robot, tick, tick.commanded_rad)
+    bare = resting_pose(robot, tick, tick.joints_rad)
+    tilts = [math.degrees(float(np.hypot(*pose[3:5]))) for pose in (helped, bare)]
+    print(f"{robot.name} leans: tilts {tilts[1]:.3f} deg, with feed-forward {tilts[0]:.3f} deg")
+    assert tilts[0] < 0.2 * tilts[1]
 
 
 def test_unknown_stiffness_is_left_alone() -> None:

@@ -111,6 +111,7 @@ def test_bramble_is_true_and_level() -> None:
     for share in (AXES[1], AXES[4], AXES[6], AXES[9], MIXED[4]):
         found = walked(robot, share)
         assert max(found.values()) <= 1.0, found
+        assert found["tilt"] <= 0.15
 
 
 @pytest.mark.parametrize(

@@ -51,6 +51,8 @@ LOAD_RATE_HZ = 40.0
 LOADING_M = 0.01
 # A body that goes no faster stands, when its gait is to change.
 STANDING_M_S = 1e-4
+# Spread of the feet across and along their line, below which they are one.
+LEAST_SPREAD = 1e-3
 RETRIES = 8
 SHORTEST_LOWERING_S = 0.3  # left for lying down, however long planting the feet has taken
 HEIGHTS = 32  # tried on the way down, when lying down
@@ -316,11 +318,47 @@ class Walker:
     def _share_load(self, time_s: float, weights: Sequence[float]) -> None:
         """Share the robot's weight over the feet as their weights say, without a jump."""
         most = LOAD_RATE_HZ * time_s
+        if not (self._walking and self._plan.sway.active):
+            weights = self._balanced(weights)
         total = sum(weights) or 1.0
         for foot, weight in zip(self._feet, weights, strict=True):
             share = weight / total
             change = share - foot.load
             foot.load = share if -most <= change <= most else foot.load + math.copysign(most, change)
+
+    def _balanced(self, weights: Sequence[float]) -> Sequence[float]:
+        """Weights with which the feet carry the body where it is, when no sway brings it to where
+        they carry alike: changed in proportion to how far ahead and to the left each stands."""
+        x0, y0, yaw = self._pose
+        c, s = math.cos(yaw), math.sin(yaw)
+        com_x, com_y = self._plan.com_m
+        shift_x, shift_y = self._shift.value
+        *_, lean_x, lean_y = self._posture.value
+        com_x, com_y = com_x + shift_x + lean_x, com_y + shift_y + lean_y
+        total = x = y = xx = xy = yy = 0.0
+        places = []
+        for foot, weight in zip(self._feet, weights, strict=True):
+            dx, dy = foot.x - x0, foot.y - y0
+            at_x, at_y = c * dx + s * dy - com_x, c * dy - s * dx - com_y
+            places.append((at_x, at_y))
+            total += weight
+            x += weight * at_x
+            y += weight * at_y
+            xx += weight * at_x * at_x
+            xy += weight * at_x * at_y
+            yy += weight * at_y * at_y
+        if total == 0.0:
+            return weights
+        x, y, xx, xy, yy = x / total, y / total, xx / total, xy / total, yy / total
+        xx, xy, yy = xx - x * x, xy - x * y, yy - y * y
+        det = xx * yy - xy * xy
+        if det < LEAST_SPREAD * (xx + yy) ** 2:
+            return weights
+        by_x, by_y = (y * xy - x * yy) / det, (x * xy - y * xx) / det
+        return [
+            max(weight * (1.0 + by_x * (at_x - x) + by_y * (at_y - y)), 0.0)
+            for weight, (at_x, at_y) in zip(weights, places, strict=True)
+        ]
 
     def _foothold(self, foot: Foot, until_touch_down_s: float) -> Vec2:
         """Where on the ground the foot must land: under its neutral place at the body's
