@@ -253,8 +253,8 @@ def render(calibration: Calibration) -> str:
     """The text of the calibration file; reading it gives the same calibration."""
     lines = [
         f"# {calibration.robot}: what was measured on the bench; goes before the configuration.",
-        "# Written by `hobnail calibrate`, which keeps no comments but these.  May be edited by hand:",
-        "# edit, `hobnail check`, restart.",
+        "# May be edited by hand: edit, `hobnail check`, restart.  When hobnail writes it, it keeps",
+        "# no comments but these.",
         f"version: {VERSION}",
         f'robot: "{calibration.robot}"',
     ]
