@@ -14,7 +14,8 @@ from typing import NamedTuple
 from hobnail.errors import CommandError
 from hobnail.motion.joint_steps import STEP_SHARE
 from hobnail.motion.plan import joint_speeds_rad_s
-from hobnail.motion.planar import to_origin
+from hobnail.motion.planar import compose, to_origin
+from hobnail.motion.recurrence import Recurrence
 from hobnail.motion.walker import Walker
 from hobnail.robot import Robot, Vec3
 from hobnail.servo import JointMap
@@ -67,6 +68,7 @@ class Controller:
         self._speeds = joint_speeds_rad_s(robot, self._supply_v)
         self._dt_s = 0.0
         self._steps: list[Vec3] = []
+        self._recurrence: Recurrence[Tick] = Recurrence()
 
     @property
     def supply_v(self) -> float:
@@ -77,6 +79,9 @@ class Controller:
     def supply_v(self, volts: float) -> None:
         if not (math.isfinite(volts) and volts > 0.0):
             raise CommandError(f"supply_v is {volts} V; allowed: more than 0 V")
+        if volts == self._supply_v:
+            return
+        self._take_over()
         self._supply_v = volts
         self._speeds = joint_speeds_rad_s(self.robot, volts)
         self._dt_s = 0.0
@@ -92,26 +97,29 @@ class Controller:
                 raise CommandError(f"{name} is {value}; allowed: a finite number, {GREATEST:g} at most")
         vx, vy, yaw_rate = to_origin(vx, vy, yaw_rate, pivot)
         # No robot moves so little, and squares of it would be rounded to nothing.
-        self._walker.walk(
-            (
-                vx if abs(vx) > LEAST else 0.0,
-                vy if abs(vy) > LEAST else 0.0,
-                yaw_rate if abs(yaw_rate) > LEAST else 0.0,
-            )
+        twist = (
+            vx if abs(vx) > LEAST else 0.0,
+            vy if abs(vy) > LEAST else 0.0,
+            yaw_rate if abs(yaw_rate) > LEAST else 0.0,
         )
+        if twist != self._walker.wanted:
+            self._take_over()
+        self._walker.walk(twist)
 
     def stand(self) -> None:
         """Stop walking: every foot steps to its neutral place, then stands."""
-        self._walker.walk((0.0, 0.0, 0.0))
+        self.walk(0.0, 0.0, 0.0)
 
     def gait(self, name: str) -> None:
         """Change the gait, at once when standing, else when the feet in the air are down.
         Raises CommandError for a gait that the robot does not have."""
         try:
-            self._walker.choose_gait(self.robot.gait(name))
+            gait = self.robot.gait(name)
         except KeyError:
             names = ", ".join(gait.name for gait in self.robot.gaits)
             raise CommandError(f"gait is {name!r}; allowed: {names}") from None
+        self._take_over()
+        self._walker.choose_gait(gait)
 
     def posture(
         self,
@@ -141,28 +149,36 @@ class Controller:
             if not low <= value <= high:
                 raise CommandError(f"{name} is {value} {unit}; allowed: {low:g} to {high:g} {unit}")
             target[index] = float(value)
+        self._take_over()
         self._walker.set_posture(target)
 
     def rise(self, within_s: float | None = None) -> None:
         """Raise the body, level, to stance height (within that time, as far as the servos can).
         Raises CommandError for a time that is none."""
         _check_time(within_s)
+        self._take_over()
         self._walker.set_posture([self.robot.stance.height_m, 0.0, 0.0, 0.0, 0.0, 0.0], within_s)
 
     def lower(self, within_s: float | None = None) -> None:
         """Plant the feet, then lower the body, level, to rest height (within that time, as
         far as the servos can).  Raises CommandError for a time that is none."""
         _check_time(within_s)
+        self._take_over()
         self._walker.lower(within_s)
 
     def tick(self, dt_s: float) -> Tick:
         """Go on by `dt_s` (s).  Raises CommandError unless 0 < dt_s <= 1."""
+        recurrence = self._recurrence
         if dt_s != self._dt_s:
             if not 0.0 < dt_s <= LONGEST_TICK_S:
                 raise CommandError(f"dt_s is {dt_s} s; allowed: more than 0 to {LONGEST_TICK_S:g} s")
+            self._take_over()
             self._dt_s = dt_s
             share = dt_s * STEP_SHARE
             self._steps = [(a * share, b * share, c * share) for a, b, c in self._speeds]
+        elif recurrence.turning:
+            tick, moved = recurrence.again()
+            return tick._replace(pose=compose(moved, tick.pose))
         walker = self._walker
         walker.tick(dt_s, self._steps)
         body, commanded = walker.body, walker.feed_forward.commanded_rad
@@ -173,7 +189,7 @@ class Controller:
             ]
         else:
             pulses = [m.pulse_us(angle) for angle, m in zip(angles, self._maps, strict=True)]
-        return Tick(
+        tick = Tick(
             body.joints_rad,
             commanded,
             body.feet_m,
@@ -190,6 +206,17 @@ class Controller:
             walker.clamped,
             body.out_of_reach,
         )
+        if walker.steady:
+            recurrence.keep(walker.start, tick, walker.cycle_s / dt_s)
+        else:
+            recurrence.clear()
+        return tick
+
+    def _take_over(self) -> None:
+        """Something changes: no tick recurs any more, they are worked out again."""
+        if self._recurrence.turning:
+            self._walker.go_on_from(self._recurrence.state())
+        self._recurrence.clear()
 
 
 def _check_time(within_s: float | None) -> None:

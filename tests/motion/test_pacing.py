@@ -246,13 +246,28 @@ def test_cycle_is_the_shortest_that_the_servos_can_follow(robot: Robot, name: st
 
 @ROBOTS
 def test_a_slower_supply_gives_longer_cycles(robot: Robot) -> None:
-    """In proportion, up to the longest allowed."""
+    """In proportion, up to the longest allowed, but for the tick that each is rounded up to."""
     gait = replace(robot.gaits[0], cycle_range_s=(0.1, 10.0))
     plan = GaitPlan(robot, gait, feet_of(robot))
     asked = (0.1 * robot.envelope.forward_m_s, 0.0, 0.0)
     _, quick = plan.fit(asked, 1.0)
     _, slow = plan.fit(asked, 1.5)
-    assert quick / slow == pytest.approx(1.5, rel=1e-9)
+    assert -1.5 * robot.period_s < 1.0 / slow - 1.5 / quick < robot.period_s
+
+
+@ROBOTS
+def test_automatic_cycles_are_whole_ticks(robot: Robot) -> None:
+    """So that a steady walk recurs; but no longer than the gait's longest."""
+    gait = replace(robot.gaits[0], cycle_range_s=(0.1, 10.0))
+    plan = GaitPlan(robot, gait, feet_of(robot))
+    for share in (0.1, 0.2, 0.3, 0.5):
+        _, rate_hz = plan.fit((share * robot.envelope.forward_m_s, 0.0, 0.0), 1.0)
+        ticks = 1.0 / rate_hz / robot.period_s
+        assert ticks == pytest.approx(round(ticks), abs=1e-9)
+    longest_s = 10.5 * robot.period_s
+    short = replace(robot.gaits[0], cycle_range_s=(0.5 * longest_s, longest_s))
+    _, rate_hz = GaitPlan(robot, short, feet_of(robot)).fit((robot.envelope.forward_m_s, 0.0, 0.0), 1.0)
+    assert 1.0 / rate_hz <= longest_s * (1.0 + 1e-12)
 
 
 def test_joint_speeds_by_hand() -> None:

@@ -19,6 +19,8 @@ from hobnail.robot import Vec3
 LEAST_ARM2 = 1e-6
 STILL: Vec3 = (0.0, 0.0, 0.0)
 
+FeedForwardState = tuple[tuple[Vec3, ...], list[Vec3], float]
+
 
 class FeedForward:
     """`commanded_rad` holds what the servos are sent, leg by leg."""
@@ -69,6 +71,14 @@ class FeedForward:
             commanded.append(sent)
         self.commanded_rad = tuple(commanded)
         self._speeds, self._tick_s = speeds, time_s
+
+    def state(self) -> FeedForwardState:
+        """A snapshot for `restore`."""
+        return self.commanded_rad, self._speeds, self._tick_s
+
+    def restore(self, state: FeedForwardState) -> None:
+        """Go back to a snapshot."""
+        self.commanded_rad, self._speeds, self._tick_s = state
 
     def _about_the_carried(self, drive: Drive) -> FootDrive:
         """The drive for each foot: the moment as a spin about the point that carries the robot."""

@@ -26,6 +26,8 @@ from hobnail.motion.support import support_centre
 from hobnail.motion.sway import Inertia, PeriodicSway
 from hobnail.robot import Gait, Robot, Vec2, Vec3
 
+# Of a tick: that much is no reason to take one more.
+ROUNDING = 1e-6
 # Of a slow gait's margin on the spot, what speeding up and slowing down may use.
 SPEEDING_SHARE = 0.2
 
@@ -112,7 +114,11 @@ class GaitPlan:
             return self.gait.cycle_s
         vx, vy, yaw_rate = twist
         velocities = [(vx - yaw_rate * y, vy + yaw_rate * x) for x, y in self._neutral]
-        return self._table.cycle_s(velocities, slow_supply)
+        cycle_s = self._table.cycle_s(velocities, slow_supply)
+        # In whole ticks, a steady walk recurs.
+        ticks = cycle_s / self._robot.period_s
+        whole = math.ceil(ticks - ROUNDING) * self._robot.period_s
+        return whole if whole <= self._table.range_s[1] else cycle_s
 
 
 def joint_speeds_rad_s(robot: Robot, supply_v: float) -> list[Vec3]:

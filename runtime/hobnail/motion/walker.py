@@ -20,14 +20,15 @@ from operator import ne
 
 from hobnail.motion.balance import GRAVITY_M_S2, neutral_feet
 from hobnail.motion.feed_forward import FeedForward
-from hobnail.motion.foot import LAST_AIM, Foot, FootState, Swing
-from hobnail.motion.glide import AT_REST, Glide, GlideState, Slew, SlewState, minimum_jerk
+from hobnail.motion.foot import LAST_AIM, Foot, Swing
+from hobnail.motion.glide import AT_REST, Glide, Slew, minimum_jerk
 from hobnail.motion.joint_steps import clamp_steps, excess_step
 from hobnail.motion.load import Drive
 from hobnail.motion.pacing import fit_stride
 from hobnail.motion.plan import GaitPlan
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist, point_speed
-from hobnail.motion.sway import NONE, BodyShift, SwayState
+from hobnail.motion.recurrence import PlainState
+from hobnail.motion.sway import NONE, BodyShift
 from hobnail.motion.swung import SwungLeg
 from hobnail.motion.whole_body import WholeBody
 from hobnail.motion.yielding import Yielding
@@ -58,14 +59,12 @@ SHORTEST_LOWERING_S = 0.3  # left for lying down, however long planting the feet
 HEIGHTS = 32  # tried on the way down, when lying down
 RETRY_SHARE = 0.9995
 
-_Saved = tuple[tuple[Pose, float, float, float], SwayState, SlewState, GlideState, list[FootState]]
-
 
 class Walker:
     """The robot's motion.  A new one stands at its neutral stance, or lies at rest height.
 
     `body` holds the angles and feet of the latest tick, `feed_forward` what the servos
-    are to be sent for them.
+    are to be sent for them, `start` the state that it was taken from.
     """
 
     def __init__(
@@ -88,7 +87,7 @@ class Walker:
         self._pose: Pose = (0.0, 0.0, 0.0)  # of the walk: without shift and posture
         self._clock = 0.0
         self._hold = 0.0  # cycles until feet may lift
-        self._wanted: Twist = STILL  # the command, at the body origin, as it came
+        self.wanted: Twist = STILL  # the command, at the body origin, as it came
         self._fitted: Twist = STILL  # the same, within what may be asked
         self._pace = Slew([0.0, 0.0, 0.0, 1.0])  # vx, vy, yaw rate, cycles a second
         self._shift = BodyShift()
@@ -107,14 +106,15 @@ class Walker:
         self._yielding = Yielding(robot.stance.height_m)
         self._solve(0.0)
         self.feed_forward = FeedForward(self._feet, self.body, self._drive())
+        self.start = self._state()
 
     # -- what is asked of it -------------------------------------------------
 
     def walk(self, twist: Twist) -> None:
         """Command a twist at the body origin (m/s, m/s, rad/s)."""
         self._lowering = None
-        if twist != self._wanted:
-            self._wanted = twist
+        if twist != self.wanted:
+            self.wanted = twist
             self._planting = False
             if self._walking:
                 self._retarget()
@@ -171,6 +171,31 @@ class Walker:
         return self._walking
 
     @property
+    def cycle_s(self) -> float:
+        """Time of a cycle of the gait clock."""
+        return 1.0 / self._pace.value[3]
+
+    @property
+    def steady(self) -> bool:
+        """Whether it walks at one pace and posture, in full, so that the tick may recur."""
+        return self._walking and not (
+            self._pace.moving
+            or self._checking
+            or self._next_plan
+            or self.wanted == STILL
+            or self._posture.moving
+            or self._yielding.moving
+            or self.slowdown != 1.0
+            or self.clamped
+            or self.body.out_of_reach
+        )
+
+    def go_on_from(self, state: PlainState) -> None:
+        """Take up a steady walk at a state of it."""
+        self._restore(state)
+        self._solve(0.0)
+
+    @property
     def settled(self) -> bool:
         """Whether nothing moves and nothing is about to."""
         return not (
@@ -178,7 +203,7 @@ class Walker:
             or self._posture.moving
             or self._shift.moving
             or self._yielding.moving
-            or self._wanted != STILL
+            or self.wanted != STILL
             or self._next_plan
             or self._lowering
         )
@@ -193,7 +218,7 @@ class Walker:
             self._lowering = (max(self._lowering[0] - dt_s, SHORTEST_LOWERING_S),)
         body = self.body
         before = body.joints_rad
-        saved = self._save()
+        start = self.start = self._state()
         time_s = dt_s
         for attempt in range(RETRIES):
             self._advance(time_s)
@@ -202,7 +227,7 @@ class Walker:
             excess = excess_step(before, body.joints_rad, steps_rad)
             if excess <= 1.0 or attempt == RETRIES - 1:
                 break
-            self._restore(saved)
+            self._restore(start)
             # Nearly linear in time: one more try is the rule, and it leaves the slow-down a
             # smooth function of the path.  What is not linear is met by quartering; what is a
             # step in however short a time, by the clamp, so that the robot does not stand
@@ -222,13 +247,13 @@ class Walker:
     def _decide(self) -> None:
         """What takes no time: to start, to go over to another gait, to slow, to end."""
         if not self._walking:
-            if self._wanted == STILL:
+            if self.wanted == STILL:
                 if self._lowering:
                     self._posture.aim([self._lowest_m(), 0.0, 0.0, 0.0, 0.0, 0.0], self._lowering[0])
                     self._lowering = None
                 return
             self._start()
-        elif self._next_plan or self._wanted == STILL:
+        elif self._next_plan or self.wanted == STILL:
             self._change_or_stop()
         if self._checking:
             self._look_ahead()
@@ -383,7 +408,7 @@ class Walker:
     def _may_lift(self, foot: Foot) -> bool:
         if self._hold > 0.0 or self._landing:
             return False
-        if self._pace.moving or self._wanted != STILL:
+        if self._pace.moving or self.wanted != STILL:
             return True
         return not self._planting and math.hypot(*self._excursion(foot)) > IN_PLACE_M
 
@@ -412,7 +437,7 @@ class Walker:
         gait = self._plan.gait
         lifts = [(phase + gait.duty) % 1.0 for phase in gait.phases]
         gaps = [min((lift - other) % 1.0 or 1.0 for other in lifts) for lift in lifts]
-        vx, vy, _ = self._wanted
+        vx, vy, _ = self.wanted
         _, first = min(
             (foot.neutral[0] * vx + foot.neutral[1] * vy, lift)
             for foot, lift, gap in zip(self._feet, lifts, gaps, strict=True)
@@ -437,7 +462,7 @@ class Walker:
     def _retarget(self) -> None:
         """Bring the command within what may be asked, and start to slew towards it."""
         self._checking = True
-        self._fitted, rate = self._plan.fit(self._wanted, self.slow_supply)
+        self._fitted, rate = self._plan.fit(self.wanted, self.slow_supply)
         if self._next_plan:
             self._fitted = self._slowed_for_change(self._next_plan, rate)
         self._aim_pace(self._fitted, rate)
@@ -445,7 +470,7 @@ class Walker:
     def _slowed_for_change(self, plan: GaitPlan, rate_hz: float) -> Twist:
         """As much of the command as leaves all feet in reach while those in the air land and
         the others wait for their turn in the next gait."""
-        _, next_hz = plan.fit(self._wanted, self.slow_supply)
+        _, next_hz = plan.fit(self.wanted, self.slow_supply)
         duty = self._plan.gait.duty
         wait_s = (0.5 * duty + 1.0 - duty) / rate_hz + (1.0 + START_SHIFT) / next_hz
         feet = [foot.neutral for foot in self._feet]
@@ -507,7 +532,7 @@ class Walker:
             if self._landing:
                 self._plan, self._next_plan = self._next_plan, None
                 self._start()
-        elif self._wanted == STILL and not self._pace.moving and self._pace.value[:3] == [0.0] * 3:
+        elif self.wanted == STILL and not self._pace.moving and self._pace.value[:3] == [0.0] * 3:
             if not self._planting and any(
                 math.hypot(*self._excursion(foot)) > IN_PLACE_M for foot in self._feet
             ):
@@ -547,23 +572,28 @@ class Walker:
 
     # -- trying a tick again -------------------------------------------------
 
-    def _save(self) -> _Saved:
+    def _state(self) -> PlainState:
         return (
-            (self._pose, self._clock, self._hold, self._yielding.share),
+            self._pose,
+            self._clock,
+            self._hold,
+            self._yielding.share,
             self._shift.state(),
             self._pace.state(),
             self._posture.state(),
             [foot.state() for foot in self._feet],
+            self.feed_forward.state(),
         )
 
-    def _restore(self, saved: _Saved) -> None:
-        place, shift, pace, posture, feet = saved
-        self._pose, self._clock, self._hold, self._yielding.share = place
+    def _restore(self, state: PlainState) -> None:
+        self._pose, self._clock, self._hold, share, shift, pace, posture, feet, feed_forward = state
+        self._yielding.share = share
         self._shift.restore(shift)
         self._pace.restore(pace)
         self._posture.restore(posture)
-        for foot, state in zip(self._feet, feet, strict=True):
-            foot.restore(state)
+        for foot, kept in zip(self._feet, feet, strict=True):
+            foot.restore(kept)
+        self.feed_forward.restore(feed_forward)
 
 
 def _share_within(ex: float, ey: float, dx: float, dy: float, limit: float) -> float:
