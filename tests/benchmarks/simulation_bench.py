@@ -2,7 +2,8 @@
 
     python tests/benchmarks/simulation_bench.py [--seconds N] [config/juniper.yaml ...]
 
-One process, one core, the clock injected; a new command every two seconds.  Times are
+One process, one core, the clock injected; a new command every two seconds, or one for all
+the time.  Times are
 the process's own (CPU), so that a busy machine does not slow them.  Nothing here is a test.
 """
 
@@ -27,7 +28,7 @@ CONFIG = Path(__file__).parents[2] / "config"
 PERIOD_S = 0.01  # 100 Hz for all
 
 
-def simulate(robot: Robot, gait: str, seconds: float, *, driven: bool) -> float:
+def simulate(robot: Robot, gait: str, seconds: float, *, driven: bool, changing: bool) -> float:
     """CPU time (s) for that many seconds of walking."""
     now_s = 0.0
     kind = cast(type[Driver], partial(SimulatedDriver, clock=lambda: now_s))
@@ -39,7 +40,7 @@ def simulate(robot: Robot, gait: str, seconds: float, *, driven: bool) -> float:
     ticks = round(seconds / PERIOD_S)
     start = time.process_time()
     for tick in range(ticks):
-        if tick % 200 == 0:
+        if tick % 200 == 0 and (changing or tick == 0):
             angle = 0.7 * tick / 200
             controller.walk(
                 0.6 * envelope.forward_m_s * math.cos(angle),
@@ -61,16 +62,19 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument("--seconds", type=float, default=60.0, help="simulated, for each line")
     options = parser.parse_args(arguments)
     print(f"{options.seconds:g} s of walking at {1.0 / PERIOD_S:g} Hz, best of three")
-    print(f"  {'robot':12}{'gait':12}{'times real time':>18}{'controller alone':>18}")
+    print(f"  {'robot':12}{'gait':12}{'times real time':>18}{'controller alone':>18}{'one command':>18}")
     for path in options.config:
         robot = load_robot(path)
         for gait in robot.gaits:
-            whole, alone = (
+            whole, alone, steady = (
                 options.seconds
-                / min(simulate(robot, gait.name, options.seconds, driven=driven) for _ in range(3))
-                for driven in (True, False)
+                / min(
+                    simulate(robot, gait.name, options.seconds, driven=driven, changing=changing)
+                    for _ in range(3)
+                )
+                for driven, changing in ((True, True), (False, True), (True, False))
             )
-            print(f"  {robot.name:12}{gait.name:12}{whole:17.0f}x{alone:17.0f}x")
+            print(f"  {robot.name:12}{gait.name:12}{whole:17.0f}x{alone:17.0f}x{steady:17.0f}x")
     return 0
 
 

@@ -2,10 +2,12 @@
 
     python tests/benchmarks/tick_bench.py [--rounds N] [config/juniper.yaml ...]
 
-The peer is `ik_LM` of roboticstoolbox-python (the extra `benchmarks`), Levenberg-Marquardt
-in C++: the legs of the same robot alone, random targets near the stance, started from
-the last solution.  Its tolerance and iterations are its own defaults.  All rows are
-measured by turns in one run; the ratio of medians is what counts.  Nothing here is a test.
+Once with a new command every 200 ticks, which has to be worked out, and once with one
+that stays: a steady walk recurs.  The peer is `ik_LM` of roboticstoolbox-python (the extra
+`benchmarks`), Levenberg-Marquardt in C++: the legs of the same robot alone, random targets
+near the stance, started from the last solution.  Its tolerance and iterations are its own
+defaults.  All rows are measured by turns in one run; the ratio of medians is what counts.
+Nothing here is a test.
 """
 
 from __future__ import annotations
@@ -35,6 +37,7 @@ from hobnail_drivers.i2c import SmBus
 
 CONFIG = Path(__file__).parents[2] / "config"
 NEAR_M = 0.03  # how far targets are from the stance
+WARM_UP = 10  # batches
 BATCH = 50  # calls of one kind before the next kind's turn
 
 
@@ -102,14 +105,15 @@ def quiet_driver(robot: Robot) -> tuple[Driver, list[CountingBus]]:
     return driver, buses
 
 
-def whole_tick(robot: Robot, controller: Controller, driver: Driver) -> Callable[[], None]:
-    """A command, a tick and a frame; the command goes slowly round the envelope."""
+def whole_tick(robot: Robot, driver: Driver, *, changing: bool) -> Callable[[], None]:
+    """A command, a tick and a frame; a changing command goes slowly round the envelope."""
+    controller = Controller(robot)
     envelope = robot.envelope
     count = 0
 
     def once() -> None:
         nonlocal count
-        if count % 200 == 0:
+        if count % 200 == 0 and (changing or count == 0):
             angle = 0.7 * count / 200
             controller.walk(
                 0.6 * envelope.forward_m_s * math.cos(angle),
@@ -198,22 +202,23 @@ def numeric(robot: Robot) -> Callable[[], None] | None:
 def measure(robot: Robot, rounds: int) -> None:
     """Print one robot's table."""
     driver, buses = quiet_driver(robot)
-    controller = Controller(robot)
     rows = [
-        Row("whole tick: command, motion, pulses, bus bytes", whole_tick(robot, controller, driver)),
+        Row("whole tick: command, motion, pulses, bus bytes", whole_tick(robot, driver, changing=True)),
+        Row("the same, of a steady walk", whole_tick(robot, driver, changing=False)),
         Row(f"closed form, {len(robot.legs)} legs alone", closed_form(robot)),
     ]
     peer = numeric(robot)
     if peer is not None:
         rows.append(Row(f"ik_LM in C++, {len(robot.legs)} legs alone", peer))
     for row in rows:
-        row.run()
+        for _ in range(WARM_UP):
+            row.run()
         row.times_ns.clear()
     sent = sum(bus.bytes for bus in buses)
     for _ in range(rounds):
         for row in rows:
             row.run()
-    frames = rounds * BATCH
+    frames = 2 * rounds * BATCH
     print(f"\n{robot.name}: {len(robot.legs)} legs, {rounds * BATCH} calls each")
     print(f"  {'':48}{'median':>10}{'99 %':>10}{'to ik_LM':>10}")
     for row in rows:

@@ -55,7 +55,7 @@ class Recurrence(Generic[T]):
     __slots__ = ("_kept", "_lap", "_moved", "_next", "turning")
 
     def __init__(self) -> None:
-        self._kept: list[tuple[WalkState, T]] = []
+        self._kept: list[tuple[PlainState, T]] = []
         self._next = 0
         self._lap: Pose = (0.0, 0.0, 0.0)  # how a cycle moves what stands on the ground
         self._moved: Pose = (0.0, 0.0, 0.0)  # all cycles since those that were kept
@@ -71,31 +71,34 @@ class Recurrence(Generic[T]):
         length = round(ticks_a_cycle)
         if length > LONGEST or abs(ticks_a_cycle - length) > ROUNDING * ticks_a_cycle:
             return
-        kept, before = self._kept, WalkState._make(start)
+        kept = self._kept
         if len(kept) == length:
             first, _ = kept[0]
-            if comes_round(first, before):
-                self._lap = self._moved = motion_between(first.pose, before.pose)
+            # The first leg's angles tell as a rule.
+            if _near(first[-1][0][0], start[-1][0][0]) and comes_round(
+                WalkState._make(first), WalkState._make(start)
+            ):
+                self._lap = self._moved = motion_between(first[0], start[0])
                 self._next = 1
                 self.turning = True
                 return
             del kept[0]
-        kept.append((before, tick))
+        kept.append((start, tick))
 
     def again(self) -> tuple[T, Pose]:
         """The next tick as it was kept, and by what to move it over the ground."""
-        at = self._next
-        if at == len(self._kept):
-            self._moved = compose(self._lap, self._moved)
-            at = 0
-        self._next = at + 1
-        return self._kept[at][1], self._moved
+        if self._next == len(self._kept):
+            self._next, self._moved = 0, compose(self._lap, self._moved)
+        _, tick = self._kept[self._next]
+        self._next += 1
+        return tick, self._moved
 
     def state(self) -> WalkState:
         """Where the walk is now, as if every tick had been worked out."""
         if self._next == len(self._kept):
-            return moved_over_ground(self._kept[0][0], compose(self._lap, self._moved))
-        return moved_over_ground(self._kept[self._next][0], self._moved)
+            self._next, self._moved = 0, compose(self._lap, self._moved)
+        start, _ = self._kept[self._next]
+        return moved_over_ground(WalkState._make(start), self._moved)
 
 
 def comes_round(first: WalkState, later: WalkState) -> bool:
@@ -131,8 +134,8 @@ def _alike(first: FootState, first_pose: Pose, later: FootState, later_pose: Pos
 
 
 def _near(a: object, b: object) -> bool:
-    """Whether two nests of sequences have the same shape and nearly the same numbers."""
-    if isinstance(a, Sequence) and isinstance(b, Sequence):
+    """Whether two nests of tuples and lists have the same shape and nearly the same numbers."""
+    if isinstance(a, tuple | list) and isinstance(b, tuple | list):
         return len(a) == len(b) and all(map(_near, a, b))
     return isinstance(a, float) and isinstance(b, float) and abs(a - b) <= ROUNDING
 
