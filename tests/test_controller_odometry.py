@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from hobnail.controller import Tick
+from hobnail.motion.plan import joint_speeds_rad_s
 from hobnail.robot import Gait, Robot, Vec3
 from robots import anvil, bramble, examples, juniper, stilt
 from walks import Walk, record
@@ -218,3 +219,24 @@ def test_odometry_counts_what_was_done_and_not_what_was_asked(robot: Robot) -> N
     time_s = walked_s(walk, twist)
     assert walk.ticks[-1].pose == pytest.approx((twist[0] * time_s, 0.0, 0.0), abs=1e-9)
     assert time_s < 6.0
+
+
+@ROBOTS
+@pytest.mark.parametrize("supply", [1.0, 0.6])
+def test_it_slows_no_more_than_a_joint_needs(robot: Robot, supply: float) -> None:
+    """In every slowed tick of every gait some joint goes nearly as fast as it may: a tick that is
+    cut shorter than that jolts the robot."""
+    slowed = 0
+    for gait in robot.gaits:
+        walk = Walk(robot)
+        walk.controller.gait(gait.name)
+        walk.walk(0.6, 0.5, 0.6).go(50)
+        walk.controller.supply_v = supply * robot.supply.nominal_v
+        walk.go(300)
+        found = record(walk)
+        speeds = np.array(joint_speeds_rad_s(robot, walk.controller.supply_v)) * walk.dt_s
+        shares = (np.abs(np.diff(found.joints_rad, axis=0)) / speeds).max(axis=(1, 2))[50:]
+        slow = found.slowdown[51:] < 1.0
+        slowed += slow.sum()
+        assert (shares[slow] > 0.85).all()
+    assert slowed or supply == 1.0

@@ -57,7 +57,8 @@ LEAST_SPREAD = 1e-3
 RETRIES = 8
 SHORTEST_LOWERING_S = 0.3  # left for lying down, however long planting the feet has taken
 HEIGHTS = 32  # tried on the way down, when lying down
-RETRY_SHARE = 0.9995
+RETRY_EXCESS = 0.9995
+LEAST_SHARE = 0.25  # of a try's time that the next one takes
 
 
 class Walker:
@@ -220,6 +221,7 @@ class Walker:
         before = body.joints_rad
         start = self.start = self._state()
         time_s = dt_s
+        tried = (0.0, 0.0)  # time and excess of the try before
         for attempt in range(RETRIES):
             self._advance(time_s)
             # What comes back of a posture must not slow a walk.
@@ -228,12 +230,15 @@ class Walker:
             if excess <= 1.0 or attempt == RETRIES - 1:
                 break
             self._restore(start)
-            # Nearly linear in time: one more try is the rule, and it leaves the slow-down a
-            # smooth function of the path.  What is not linear is met by quartering; what is a
-            # step in however short a time, by the clamp, so that the robot does not stand
-            # still for good.  The feed-forward has no say: it follows as the servos can.
-            share = RETRY_SHARE / excess
-            time_s *= share if attempt < 2 else min(share, 0.25)
+            # Along the line through this try and the one before it (at first, no time and no
+            # step): one or two are the rule, and leave the slow-down a smooth function of the
+            # path.  What is a step in however short a time is met by the clamp, so that the
+            # robot does not stand still for good.  The feed-forward has no say: it follows
+            # as the servos can.
+            tried, (last_s, last_excess) = (time_s, excess), tried
+            rise = (excess - last_excess) / (time_s - last_s)
+            shorter_s = time_s - (excess - RETRY_EXCESS) / rise if rise > 0.0 else 0.0
+            time_s = max(shorter_s, LEAST_SHARE * time_s)
         self.clamped = 0
         if excess > 1.0:
             on_path = body.joints_rad
