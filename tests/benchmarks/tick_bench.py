@@ -2,8 +2,8 @@
 
     python tests/benchmarks/tick_bench.py [--rounds N] [config/juniper.yaml ...]
 
-Once with a new command every 200 ticks, which has to be worked out, and once with one
-that stays: a steady walk recurs.  The peer is `ik_LM` of roboticstoolbox-python (the extra
+With a new command every 200 ticks, with one in every tick, which is worked out throughout,
+and with one that stays: a steady walk recurs.  The peer is `ik_LM` of roboticstoolbox-python (the extra
 `benchmarks`), Levenberg-Marquardt in C++: the legs of the same robot alone, random targets
 near the stance, started from the last solution.  Its tolerance and iterations are its own
 defaults.  All rows are measured by turns in one run; the ratio of medians is what counts.
@@ -105,15 +105,16 @@ def quiet_driver(robot: Robot) -> tuple[Driver, list[CountingBus]]:
     return driver, buses
 
 
-def whole_tick(robot: Robot, driver: Driver, *, changing: bool) -> Callable[[], None]:
-    """A command, a tick and a frame; a changing command goes slowly round the envelope."""
+def whole_tick(robot: Robot, driver: Driver, *, every: int) -> Callable[[], None]:
+    """A command, a tick and a frame; a command every so many ticks goes slowly round the
+    envelope, with 0 there is only the first."""
     controller = Controller(robot)
     envelope = robot.envelope
     count = 0
 
     def once() -> None:
         nonlocal count
-        if count % 200 == 0 and (changing or count == 0):
+        if count == 0 or (every and count % every == 0):
             angle = 0.7 * count / 200
             controller.walk(
                 0.6 * envelope.forward_m_s * math.cos(angle),
@@ -203,8 +204,9 @@ def measure(robot: Robot, rounds: int) -> None:
     """Print one robot's table."""
     driver, buses = quiet_driver(robot)
     rows = [
-        Row("whole tick: command, motion, pulses, bus bytes", whole_tick(robot, driver, changing=True)),
-        Row("the same, of a steady walk", whole_tick(robot, driver, changing=False)),
+        Row("whole tick: command, motion, pulses, bus bytes", whole_tick(robot, driver, every=200)),
+        Row("the same, a new command in every tick", whole_tick(robot, driver, every=1)),
+        Row("the same, of a steady walk", whole_tick(robot, driver, every=0)),
         Row(f"closed form, {len(robot.legs)} legs alone", closed_form(robot)),
     ]
     peer = numeric(robot)
@@ -218,7 +220,7 @@ def measure(robot: Robot, rounds: int) -> None:
     for _ in range(rounds):
         for row in rows:
             row.run()
-    frames = 2 * rounds * BATCH
+    frames = 3 * rounds * BATCH
     print(f"\n{robot.name}: {len(robot.legs)} legs, {rounds * BATCH} calls each")
     print(f"  {'':48}{'median':>10}{'99 %':>10}{'to ik_LM':>10}")
     for row in rows:

@@ -11,13 +11,17 @@ from collections.abc import Sequence
 from dataclasses import replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from hobnail.motion.foot_path import FootPath
 from hobnail.motion.planar import Twist
 from hobnail.motion.sway import Inertia, PeriodicSway
 from hobnail.robot import Gait, Vec2
 
+Array = NDArray[np.float64]
+
 INSTANTS = 24  # of the cycle
+CYCLES_KEPT = 64
 # Of the disc, what the shift on the spot may take: the rest is for strides.
 SHIFT_SHARE = 0.6
 # Of the disc, what may be planned with: instants lie between those that are looked at.
@@ -40,7 +44,7 @@ def fit_shift(gait: Gait, feet: Sequence[Vec2], height_m: float, discs_m: Sequen
 class CycleReach:
     """How far a cycle leads the feet, and the twists with which every leg reaches all of it."""
 
-    __slots__ = ("_ahead", "_clocks", "_discs2", "_neutral", "_sway")
+    __slots__ = ("_ahead", "_clocks", "_discs2", "_neutral", "_shifts", "_sway")
 
     def __init__(
         self,
@@ -60,11 +64,12 @@ class CycleReach:
         in_air = np.clip((since - gait.duty) / (1.0 - gait.duty), 0.0, 1.0)
         travel = [[path.at(float(u))[0] if u > 0.0 else 0.0 for u in leg] for leg in in_air]
         self._ahead = 0.5 * gait.duty - since + np.array(travel)
+        self._shifts: dict[float, Array] = {}  # over a cycle, by its time
 
     def fit(self, twist: Twist, cycle_s: float) -> Twist:
         """A twist scaled as a whole so that every foot stays in its leg's disc for a cycle."""
         vx, vy, yaw_rate = twist
-        on_the_spot, *added = self._sway.over_cycle(self._clocks, 1.0 / cycle_s)
+        on_the_spot, *added = self._shifts_of(cycle_s)
         x, y = on_the_spot
         moved_x, moved_y = sum(v * by for v, by in zip(twist, added, strict=True))
         stride_x = cycle_s * (vx - yaw_rate * self._neutral[:, 1:])
@@ -79,3 +84,12 @@ class CycleReach:
             shares = (along + np.sqrt(along * along + size2 * spare)) / size2
         share = min(1.0, float(np.nanmin(shares, initial=1.0)))
         return twist if share == 1.0 else (vx * share, vy * share, yaw_rate * share)
+
+    def _shifts_of(self, cycle_s: float) -> Array:
+        """The shift over a cycle (see `PeriodicSway.over_cycle`); cycles of whole ticks are few."""
+        shifts = self._shifts.get(cycle_s)
+        if shifts is None:
+            if len(self._shifts) == CYCLES_KEPT:
+                self._shifts.clear()
+            shifts = self._shifts[cycle_s] = self._sway.over_cycle(self._clocks, 1.0 / cycle_s)
+        return shifts
