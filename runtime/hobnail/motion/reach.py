@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hobnail.motion.foot_path import FootPath
-from hobnail.motion.planar import Twist
+from hobnail.motion.planar import Twist, point_speed
 from hobnail.motion.sway import Inertia, PeriodicSway
 from hobnail.robot import Gait, Vec2
 
@@ -44,7 +44,7 @@ def fit_shift(gait: Gait, feet: Sequence[Vec2], height_m: float, discs_m: Sequen
 class CycleReach:
     """How far a cycle leads the feet, and the twists with which every leg reaches all of it."""
 
-    __slots__ = ("_ahead", "_clocks", "_discs2", "_neutral", "_shifts", "_sway")
+    __slots__ = ("_ahead", "_clocks", "_discs2", "_feet", "_neutral", "_shifts", "_sway")
 
     def __init__(
         self,
@@ -64,12 +64,23 @@ class CycleReach:
         in_air = np.clip((since - gait.duty) / (1.0 - gait.duty), 0.0, 1.0)
         travel = [[path.at(float(u))[0] if u > 0.0 else 0.0 for u in leg] for leg in in_air]
         self._ahead = 0.5 * gait.duty - since + np.array(travel)
-        self._shifts: dict[float, Array] = {}  # over a cycle, by its time
+        farthest = np.abs(self._ahead).max(axis=1)
+        self._feet = [
+            (x, y, far, disc)
+            for (x, y), far, disc in zip(feet, farthest.tolist(), discs.tolist(), strict=True)
+        ]
+        self._shifts: dict[float, tuple[Array, list[float]]] = {}  # by time of the cycle
 
     def fit(self, twist: Twist, cycle_s: float) -> Twist:
         """A twist scaled as a whole so that every foot stays in its leg's disc for a cycle."""
         vx, vy, yaw_rate = twist
-        on_the_spot, *added = self._shifts_of(cycle_s)
+        (on_the_spot, *added), (most, *most_added) = self._shifts_of(cycle_s)
+        shifted = most + sum(abs(v) * by for v, by in zip(twist, most_added, strict=True))
+        if all(
+            shifted + point_speed(twist, x, y) * cycle_s * farthest <= disc
+            for x, y, farthest, disc in self._feet
+        ):
+            return twist  # as a rule
         x, y = on_the_spot
         moved_x, moved_y = sum(v * by for v, by in zip(twist, added, strict=True))
         stride_x = cycle_s * (vx - yaw_rate * self._neutral[:, 1:])
@@ -85,11 +96,14 @@ class CycleReach:
         share = min(1.0, float(np.nanmin(shares, initial=1.0)))
         return twist if share == 1.0 else (vx * share, vy * share, yaw_rate * share)
 
-    def _shifts_of(self, cycle_s: float) -> Array:
-        """The shift over a cycle (see `PeriodicSway.over_cycle`); cycles of whole ticks are few."""
-        shifts = self._shifts.get(cycle_s)
-        if shifts is None:
+    def _shifts_of(self, cycle_s: float) -> tuple[Array, list[float]]:
+        """The shift over a cycle (see `PeriodicSway.over_cycle`) and the farthest of each of its
+        four; cycles of whole ticks are few."""
+        kept = self._shifts.get(cycle_s)
+        if kept is None:
             if len(self._shifts) == CYCLES_KEPT:
                 self._shifts.clear()
-            shifts = self._shifts[cycle_s] = self._sway.over_cycle(self._clocks, 1.0 / cycle_s)
-        return shifts
+            shifts = self._sway.over_cycle(self._clocks, 1.0 / cycle_s)
+            most = np.hypot(shifts[:, 0], shifts[:, 1]).max(axis=1).tolist()
+            kept = self._shifts[cycle_s] = shifts, most
+        return kept
