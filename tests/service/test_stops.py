@@ -70,6 +70,10 @@ def test_category_1_plants_every_foot_and_lies_low_before_it_cuts(robot: Robot, 
     assert last is not None
     assert last.tick is not None
     assert all(last.tick.stance)
+    # It is cut because it is down and still, not because the time has run out.
+    assert rig.frame is not None
+    assert rig.frame.tick is not None
+    assert rig.frame.tick.settled
     stance = robot.stance
     assert last.tick.height_m - stance.rest_height_m < 0.1 * (stance.height_m - stance.rest_height_m)
 
