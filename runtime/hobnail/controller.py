@@ -2,7 +2,8 @@
 
 It reads no clock and touches no device: time comes in as `dt_s`, and the same
 calls give bit-identical results.  Motion is `hobnail.motion.walker`; this adds
-the pulses of the calibrated servos and checks what it is asked.
+the pulses of the calibrated servos, makes the feet do what truly gives the motion
+that is asked, and checks what it is asked.
 """
 
 from __future__ import annotations
@@ -14,9 +15,10 @@ from typing import NamedTuple
 from hobnail.errors import CommandError
 from hobnail.motion.joint_steps import STEP_SHARE
 from hobnail.motion.plan import joint_speeds_rad_s
-from hobnail.motion.planar import compose, to_origin
+from hobnail.motion.planar import Pose, compose, to_origin
 from hobnail.motion.recurrence import Recurrence
 from hobnail.motion.walker import Walker
+from hobnail.response import AS_MADE, TrueOdometry, feet_twist, true_twist
 from hobnail.robot import Robot, Vec3
 from hobnail.servo import JointMap
 
@@ -64,11 +66,12 @@ class Controller:
         self._lines = [m.pieces[0] for m in self._maps] if straight else None
         limits = [tuple(JointMap(joint).reachable_rad for joint in leg.joints) for leg in robot.legs]
         self._walker = Walker(robot, limits, at_rest=at_rest)
+        self._odometry = None if robot.walk == AS_MADE else TrueOdometry(robot.walk)
         self._supply_v = robot.supply.nominal_v
         self._speeds = joint_speeds_rad_s(robot, self._supply_v)
         self._dt_s = 0.0
         self._steps: list[Vec3] = []
-        self._recurrence: Recurrence[Tick] = Recurrence()
+        self._recurrence: Recurrence[tuple[Tick, Pose]] = Recurrence()  # by the feet's own odometry
 
     @property
     def supply_v(self) -> float:
@@ -96,6 +99,8 @@ class Controller:
             if not -GREATEST <= value <= GREATEST:
                 raise CommandError(f"{name} is {value}; allowed: a finite number, {GREATEST:g} at most")
         vx, vy, yaw_rate = to_origin(vx, vy, yaw_rate, pivot)
+        if self._odometry is not None:
+            vx, vy, yaw_rate = feet_twist(self._odometry.response, (vx, vy, yaw_rate))
         # No robot moves so little, and squares of it would be rounded to nothing.
         twist = (
             vx if abs(vx) > LEAST else 0.0,
@@ -177,8 +182,11 @@ class Controller:
             share = dt_s * STEP_SHARE
             self._steps = [(a * share, b * share, c * share) for a, b, c in self._speeds]
         elif recurrence.turning:
-            tick, moved = recurrence.again()
-            return tick._replace(pose=compose(moved, tick.pose))
+            (tick, walked), moved = recurrence.again()
+            tick = tick._replace(pose=compose(moved, tick.pose))
+            return (
+                tick if self._odometry is None else _truly(tick, compose(moved, walked), self._odometry)
+            )
         walker = self._walker
         walker.tick(dt_s, self._steps)
         body, commanded = walker.body, walker.feed_forward.commanded_rad
@@ -207,16 +215,24 @@ class Controller:
             body.out_of_reach,
         )
         if walker.steady:
-            recurrence.keep(walker.start, tick, walker.cycle_s / dt_s)
+            recurrence.keep(walker.start, (tick, walker.pose), walker.cycle_s / dt_s)
         else:
             recurrence.clear()
-        return tick
+        return tick if self._odometry is None else _truly(tick, walker.pose, self._odometry)
 
     def _take_over(self) -> None:
         """Something changes: no tick recurs any more, they are worked out again."""
         if self._recurrence.turning:
             self._walker.go_on_from(self._recurrence.state())
         self._recurrence.clear()
+
+
+def _truly(tick: Tick, walked: Pose, odometry: TrueOdometry) -> Tick:
+    """The tick with what truly happens in place of what the feet make; `walked` is their odometry
+    without shift and posture."""
+    return tick._replace(
+        pose=odometry.pose(walked, tick.pose), velocity=true_twist(odometry.response, tick.velocity)
+    )
 
 
 def _check_time(within_s: float | None) -> None:

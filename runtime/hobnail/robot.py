@@ -231,6 +231,19 @@ class Board:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class WalkResponse:
+    """What the robot truly does of the motion that its feet make, from measured walks.
+
+    Of one metre ahead or to the left by the feet: (ahead m, left m, turn to the
+    left rad); `turn` is the share of a turn that comes about.
+    """
+
+    ahead: Vec3 = (1.0, 0.0, 0.0)
+    sideways: Vec3 = (0.0, 1.0, 0.0)
+    turn: float = 1.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Robot:
     """Everything hobnail knows about one machine."""
 
@@ -245,6 +258,7 @@ class Robot:
     posture_limits: PostureLimits
     supply: Supply
     safety: Safety = field(default_factory=Safety)
+    walk: WalkResponse = field(default_factory=WalkResponse)
     source: str = ""  # the configuration file
     digest: str = ""  # SHA-256 over configuration and calibration
 

@@ -25,12 +25,12 @@ from hobnail.config.calibration import (
     JointCalibration,
     apply_calibration,
     calibration_path,
-    changed,
     interpret,
     read_calibration,
     render,
     write_calibration,
 )
+from hobnail.config.calibration_history import changed
 from hobnail.config.strict_yaml import Report
 from hobnail.errors import CalibrationError, ConfigError
 from hobnail.robot import Robot

@@ -13,7 +13,7 @@ from random import Random
 import yaml
 
 from corpus.damage import SURPRISES
-from hobnail.config.fields import Choice, Field, Group, Integer, Kind, Number, NumberOr, Pair, Several
+from hobnail.config.fields import Choice, Field, Group, Integer, Kind, Number, NumberOr, Row, Several
 from hobnail.config.tables import ROBOT
 from hobnail.service.route_file import ROUTE
 
@@ -69,9 +69,9 @@ def _collect(key: str, kind: Kind, found: Bounds) -> None:
             _collect(key, kind.number, found)
         case Several():
             _collect(key, kind.item, found)
-        case Pair():
-            _collect(key, kind.first, found)
-            _collect(key, kind.second, found)
+        case Row():
+            for each in kind.kinds:
+                _collect(key, each, found)
         case Group():
             for each in kind.fields:
                 _collect(each.key, each.kind, found)

@@ -2,9 +2,9 @@
 
 `juniper.calibration.yaml` goes before `juniper.yaml`.  Four things are kept
 apart: trim (how the horn sits), direction, pulse map (what pulse gives what
-angle) and hard pulse limits; and for a board its true clock.  SI units inside,
-degrees and MHz in the file, to 0.0001 degree and 0.01 us.  Nothing here
-measures: that is for `hobnail.workshop`.
+angle) and hard pulse limits; and for a board its true clock, for the whole robot
+what it truly walks.  SI units inside, degrees, mm and MHz in the file, to 0.0001
+degree, 0.001 mm and 0.01 us.  Nothing here measures: that is for `hobnail.workshop`.
 """
 
 from __future__ import annotations
@@ -22,20 +22,35 @@ from hobnail.config.checks import FRAME_SHARE, check_pulse_map
 from hobnail.config.fields import Field, Group, Integer, Named, Section, Several, Text, nearest
 from hobnail.config.strict_yaml import Mapping as YamlMapping
 from hobnail.config.strict_yaml import Node, Report, parse, read_file
-from hobnail.config.tables import DIRECTION, OSCILLATOR, PULSE_LIMITS, PULSE_MAP, TRIM
+from hobnail.config.tables import (
+    AHEAD,
+    DIRECTION,
+    OSCILLATOR,
+    PULSE_LIMITS,
+    PULSE_MAP,
+    SIDEWAYS,
+    TRIM,
+    TURN,
+)
 from hobnail.errors import CalibrationError, Problem
-from hobnail.robot import Board, Joint, Robot, Span, Vec2
+from hobnail.robot import Board, Joint, Robot, Span, Vec2, Vec3
 
 VERSION = 1
 MAX_CHANGES = 5000
+WALK = "walk"  # the part that is the whole robot; a joint's name has a dot
 
-_JOINT = (
+JOINT = (
     Field("trim_deg", "trim_rad", TRIM, "Measured error of the horn's seat.", required=False),
     Field("direction", "direction", DIRECTION, "-1: the shaft turns against the joint.", required=False),
     Field("pulse_map_deg_us", "pulse_map", PULSE_MAP, "Shaft angle and pulse.", required=False),
     Field("pulse_limits_us", "pulse_limits_us", PULSE_LIMITS, "Pulses never to be left.", required=False),
 )
-_BOARD = (Field("oscillator_mhz", "oscillator_hz", OSCILLATOR, "The chip's true clock.", required=False),)
+BOARD = (Field("oscillator_mhz", "oscillator_hz", OSCILLATOR, "The chip's true clock.", required=False),)
+WALK_RESPONSE = (
+    Field("ahead_mm_mm_deg", "ahead", AHEAD, "What a metre ahead by the feet is.", required=False),
+    Field("sideways_mm_mm_deg", "sideways", SIDEWAYS, "What a metre to the left is.", required=False),
+    Field("turn_deg", "turn", TURN, "What a full turn by the feet is.", required=False),
+)
 _WHEN = Text(
     r"\d{4}-\d\d-\d\d[T ]\d\d:\d\d(:\d\d)?(Z|[+-]\d\d:\d\d)?",
     'a date and time such as "2026-03-01T14:30:00Z"',
@@ -53,8 +68,15 @@ _CHANGE = (
 _FILE = (
     Field("version", "", Integer(VERSION, VERSION), "Version of this file's format."),
     Field("robot", "robot", Text(), "Name of the robot that it was measured on."),
-    Field("boards", "", Named(Group(_BOARD), "boards"), "By name of the board.", required=False),
-    Field("joints", "", Named(Group(_JOINT), "joints"), "By name of the joint.", required=False),
+    Field("boards", "", Named(Group(BOARD), "boards"), "By name of the board.", required=False),
+    Field("joints", "", Named(Group(JOINT), "joints"), "By name of the joint.", required=False),
+    Field(
+        "walk",
+        "",
+        Group(WALK_RESPONSE),
+        "By measured walks: ahead, to the left, turned left.",
+        required=False,
+    ),
     # Required and written last, so that a file cut short is not taken for a whole one.
     Field("history", "", Several(Group(_CHANGE), 0, MAX_CHANGES, "changes"), "Oldest first."),
 )
@@ -78,6 +100,18 @@ class BoardCalibration:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class WalkCalibration:
+    """What measured walks gave; None where nothing was measured.  As in `robot.WalkResponse`."""
+
+    ahead: Vec3 | None = None
+    sideways: Vec3 | None = None
+    turn: float | None = None
+
+
+Measured = JointCalibration | BoardCalibration | WalkCalibration
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Change:
     """One entry of the history; `old` and `new` as the file shows them."""
 
@@ -95,6 +129,7 @@ class Calibration:
     robot: str
     joints: Mapping[str, JointCalibration] = field(default_factory=dict)
     boards: Mapping[str, BoardCalibration] = field(default_factory=dict)
+    walk: WalkCalibration = field(default_factory=WalkCalibration)
     history: tuple[Change, ...] = ()
 
 
@@ -139,6 +174,9 @@ def interpret(data: bytes, robot: Robot | None, report: Report) -> Calibration |
         **section.arguments(),
         joints={name: JointCalibration(**joint.arguments()) for name, joint in joints.items()},
         boards={name: BoardCalibration(**board.arguments()) for name, board in boards.items()},
+        walk=WalkCalibration(**walk.arguments())
+        if (walk := section.values.get("walk"))
+        else WalkCalibration(),
         history=tuple(Change(**change.arguments()) for change in section.values.get("history", ())),
     )
 
@@ -173,58 +211,23 @@ def apply_calibration(robot: Robot, calibration: Calibration) -> Robot:
     """The robot with what was measured in place of what was configured."""
 
     def measured(joint: Joint) -> Joint:
-        return replace(joint, **_given(calibration.joints.get(joint.name)))
+        return replace(joint, **given(calibration.joints.get(joint.name)))
 
     legs = []
     for leg in robot.legs:
         roll, hip, knee = leg.joints
         legs.append(replace(leg, joints=(measured(roll), measured(hip), measured(knee))))
-    boards = (replace(board, **_given(calibration.boards.get(board.name))) for board in robot.boards)
-    return replace(robot, legs=tuple(legs), boards=tuple(boards))
+    boards = (replace(board, **given(calibration.boards.get(board.name))) for board in robot.boards)
+    walk = replace(robot.walk, **given(calibration.walk))
+    return replace(robot, legs=tuple(legs), boards=tuple(boards), walk=walk)
 
 
-def _given(measured: JointCalibration | BoardCalibration | None) -> dict[str, Any]:
+def given(measured: Measured | None) -> dict[str, Any]:
+    """Attribute -> value of what was measured."""
     if measured is None:
         return {}
     values = {each.name: getattr(measured, each.name) for each in fields(measured)}
     return {name: value for name, value in values.items() if value is not None}
-
-
-def changed(
-    calibration: Calibration, robot: Robot, name: str, *, when: str, who: str, **values: Any
-) -> Calibration:
-    """The calibration with new values for the joint or board `name`, and the history of it.
-
-    `values` are attributes of JointCalibration or BoardCalibration; `robot` is
-    as loaded, so that the history can tell the old values.  `when` is an ISO
-    8601 date and time.  Raises CalibrationError when the result would not make
-    a good file, KeyError when no joint or board has that name.
-    """
-    now = apply_calibration(robot, calibration)
-    parts: dict[str, Joint | Board] = {joint.name: joint for joint in now.joints}
-    parts |= {board.name: board for board in now.boards}
-    part = parts[name]
-    joints, boards = dict(calibration.joints), dict(calibration.boards)
-    if isinstance(part, Joint):
-        joints[name] = replace(joints.get(name, JointCalibration()), **values)
-    else:
-        boards[name] = replace(boards.get(name, BoardCalibration()), **values)
-    changes = tuple(
-        Change(
-            when=when,
-            who=who,
-            what=f"{name} {_WRITTEN[attribute][0]}",
-            old=_WRITTEN[attribute][1](getattr(part, attribute)),
-            new=_WRITTEN[attribute][1](value),
-        )
-        for attribute, value in values.items()
-    )
-    new = replace(calibration, joints=joints, boards=boards, history=calibration.history + changes)
-    report = Report(f"{robot.name}.calibration.yaml, as it would be")
-    read_back = interpret(render(new).encode(), robot, report)
-    if read_back is None:
-        raise CalibrationError(report.problems())
-    return read_back
 
 
 def _number(value: float, decimals: int = 4) -> str:
@@ -239,14 +242,27 @@ def _pairs(points: tuple[Vec2, ...]) -> str:
     return f"[{', '.join(pairs)}]"
 
 
+def _true_metre(value: Vec3) -> str:
+    ahead, left, turned = value
+    return f"[{_number(1000 * ahead, 3)}, {_number(1000 * left, 3)}, {_number(math.degrees(turned))}]"
+
+
 # Attribute -> its key in the file, and how a value of it is written there.
-_WRITTEN: dict[str, tuple[str, Callable[[Any], str]]] = {
+WRITTEN: dict[str, tuple[str, Callable[[Any], str]]] = {
     "trim_rad": ("trim_deg", lambda value: _number(math.degrees(value))),
     "direction": ("direction", str),
     "pulse_map": ("pulse_map_deg_us", _pairs),
     "pulse_limits_us": ("pulse_limits_us", lambda value: f"[{_number(value[0], 2)}, {_number(value[1], 2)}]"),
     "oscillator_hz": ("oscillator_mhz", lambda value: _number(value / 1e6, 6)),
+    "ahead": ("ahead_mm_mm_deg", _true_metre),
+    "sideways": ("sideways_mm_mm_deg", _true_metre),
+    "turn": ("turn_deg", lambda value: _number(360.0 * value)),
 }
+
+
+def _written(measured: Measured) -> str:
+    values = (f"{WRITTEN[key][0]}: {WRITTEN[key][1](value)}" for key, value in given(measured).items())
+    return f"{{{', '.join(values)}}}"
 
 
 def render(calibration: Calibration) -> str:
@@ -265,11 +281,9 @@ def render(calibration: Calibration) -> str:
     for title, measured in parts:
         if measured:
             lines.append(f"{title}:")
-        for name, values in measured.items():
-            written = (
-                f"{_WRITTEN[key][0]}: {_WRITTEN[key][1](value)}" for key, value in _given(values).items()
-            )
-            lines.append(f"  {name}: {{{', '.join(written)}}}")
+        lines += [f"  {name}: {_written(values)}" for name, values in measured.items()]
+    if given(calibration.walk):
+        lines.append(f"walk: {_written(calibration.walk)}")
     lines.append("history:" if calibration.history else "history: []")
     for change in calibration.history:
         entries = (

@@ -31,6 +31,7 @@ SI: dict[str, Callable[[float], float]] = {
     "kgf cm": lambda value: value * KGF_CM_NM,
     "ms": lambda value: value / 1000.0,
     "MHz": lambda value: value * 1e6,
+    "deg a turn": lambda value: value / 360.0,
 }
 
 _NAME = r"[A-Za-z][A-Za-z0-9_-]{0,39}"
@@ -211,29 +212,27 @@ class Several:
 
 
 @dataclass(frozen=True, slots=True)
-class Pair:
-    """A list of two values of different kinds, such as (deg, us)."""
+class Row:
+    """A list of values of different kinds, such as (deg, us)."""
 
-    first: Kind
-    second: Kind
+    kinds: tuple[Kind, ...]
 
-    def read(self, node: Node, report: Report) -> tuple[Any, Any] | None:
-        if not isinstance(node, Listing) or len(node.items) != 2:
+    def read(self, node: Node, report: Report) -> tuple[Any, ...] | None:
+        if not isinstance(node, Listing) or len(node.items) != len(self.kinds):
             report.add(node, shown(node), self.allowed())
             return None
-        first = self.first.read(node.items[0], report)
-        second = self.second.read(node.items[1], report)
-        return None if first is None or second is None else (first, second)
+        values = tuple(kind.read(item, report) for kind, item in zip(self.kinds, node.items, strict=True))
+        return None if None in values else values
 
     def allowed(self) -> str:
-        return f"[{self.first.allowed()}, {self.second.allowed()}]"
+        return f"[{', '.join(kind.allowed() for kind in self.kinds)}]"
 
     def schema(self) -> dict[str, Any]:
         return {
             "type": "array",
-            "prefixItems": [self.first.schema(), self.second.schema()],
-            "minItems": 2,
-            "maxItems": 2,
+            "prefixItems": [kind.schema() for kind in self.kinds],
+            "minItems": len(self.kinds),
+            "maxItems": len(self.kinds),
         }
 
 

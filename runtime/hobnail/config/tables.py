@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
-from hobnail.config.fields import Choice, Field, Group, Integer, Number, NumberOr, Pair, Several, Text
+from hobnail.config.fields import Choice, Field, Group, Integer, Number, NumberOr, Row, Several, Text
 
 MIN_LEGS = 4
 MAX_LEGS = 16
@@ -19,11 +19,18 @@ _PULSE = Number(200, 3500, "us")
 
 NAME = Field("name", "name", Text(), "What it is called in messages and logs.")
 
-PULSE_MAP = Several(Pair(_SERVO_TRAVEL, _PULSE), 2, 64, "[deg, us]")
+PULSE_MAP = Several(Row((_SERVO_TRAVEL, _PULSE)), 2, 64, "[deg, us]")
 PULSE_LIMITS = Several(_PULSE, 2, 2, "lowest, highest", ascending=True)
 DIRECTION = Choice({"1": 1, "-1": -1})
 TRIM = Number(-45, 45, "deg")
 OSCILLATOR = Number(20, 30, "MHz")
+# What a metre or a turn of the feet truly is.  Beyond these it is no trim that is wanted.
+_TRUE = Number(700, 1400, "mm")
+_DRIFT = Number(-300, 300, "mm")
+_VEER = Number(-40, 40, "deg")
+AHEAD = Row((_TRUE, _DRIFT, _VEER))
+SIDEWAYS = Row((_DRIFT, _TRUE, _VEER))
+TURN = Number(252, 504, "deg a turn")
 _GPIO_CHIP = Text(r"(/dev/)?gpiochip[0-9]{1,3}", "a GPIO chip such as gpiochip0")
 _GPIO_LINE = Integer(0, 511)
 

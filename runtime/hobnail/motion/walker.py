@@ -111,6 +111,11 @@ class Walker:
 
     # -- what is asked of it -------------------------------------------------
 
+    @property
+    def pose(self) -> Pose:
+        """Odometry of the walk: the body without its shift and posture over the feet."""
+        return self._pose
+
     def walk(self, twist: Twist) -> None:
         """Command a twist at the body origin (m/s, m/s, rad/s)."""
         self._lowering = None

@@ -10,14 +10,14 @@ from __future__ import annotations
 
 import time
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
 
 from hobnail.controller import Tick
 from hobnail.errors import FaultError, HobnailError, StateError
-from hobnail.robot import Robot, Vec3
+from hobnail.robot import Robot, Vec3, WalkResponse
 from hobnail.service.machine import Machine
 from hobnail.service.states import NO_PULSES, Frame, State
 from hobnail.workshop.rehearse.backend import RehearsalDriver, connect
@@ -89,6 +89,8 @@ def run(robot: Robot, scenario: Scenario, disturbances: Disturbances | None = No
     request that does not fit the state), HobnailError (the physics became unstable),
     DriverUnavailableError (no physics engine).
     """
+    # What the robot's own floor makes of its steps is no part of these physics.
+    robot = replace(robot, walk=WalkResponse())
     disturbances = disturbances or Disturbances()
     plant = Plant(robot, disturbances)
     driver = connect(robot, plant)
