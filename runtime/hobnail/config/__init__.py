@@ -22,8 +22,10 @@ from hobnail.errors import CalibrationError, ConfigError
 from hobnail.robot import Robot
 
 
-def load_robot(path: str | Path) -> Robot:
+def load_robot(path: str | Path, *, calibrated: bool = True) -> Robot:
     """The robot that the file describes, with its calibration if that is beside it.
+
+    Not `calibrated`: as configured, whatever is beside it.
 
     Raises ConfigError with all problems of both files; CalibrationError when
     only the calibration has any.
@@ -36,7 +38,8 @@ def load_robot(path: str | Path) -> Robot:
 
     beside = calibration_path(path)
     beside_report = Report(str(beside))
-    measured = read_file(beside, beside_report) if os.path.lexists(beside) else None
+    present = calibrated and os.path.lexists(beside)
+    measured = read_file(beside, beside_report) if present else None
     calibration = interpret(measured, robot, beside_report) if measured is not None else None
     if robot is not None and calibration is not None:
         robot = apply_calibration(robot, calibration)
