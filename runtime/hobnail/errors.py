@@ -9,6 +9,7 @@
     |   `-- StoppedError              a stop is latched; `reset` comes first
     |-- CommanderError                somebody else holds the claim to command
     |-- FaultError                    a latched fault forbids the request
+    |-- InputEndedError (EOFError)    the answers of a dialogue ended before its questions did
     |-- DriverUnavailableError        no such driver, or its library or device is missing
     `-- ServiceError
         |-- ServiceUnavailableError (ConnectionError)   nothing answers on the socket
@@ -119,6 +120,13 @@ class FaultError(HobnailError):
 
     exit_code = EX_TEMPFAIL
     cause = "fault"
+
+
+class InputEndedError(HobnailError, EOFError):
+    """The answers of a dialogue ended before its questions did; what was accepted is kept."""
+
+    exit_code = EX_DATAERR
+    cause = "input"
 
 
 class DriverUnavailableError(HobnailError):

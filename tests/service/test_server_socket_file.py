@@ -116,7 +116,7 @@ def test_a_directory_that_anybody_may_write_to_is_refused_unless_sticky(tmp_path
 def test_two_services_that_start_at_once_do_not_both_win(tmp_path: Path) -> None:
     lock = os.open(tmp_path, os.O_RDONLY)
     fcntl.flock(lock, fcntl.LOCK_EX)
-    with pytest.raises(ServiceError, match="another service is starting"):
+    with pytest.raises(ServiceError, match="another program is starting or calibrating"):
         listen(tmp_path / "h.sock")
     os.close(lock)
     listen(tmp_path / "h.sock").close()

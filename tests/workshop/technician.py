@@ -120,7 +120,9 @@ class Technician:
         if topic == "trim":
             name = self._joint()
             off = self._wanted_deg - self.robot.angle_deg(name)
-            return "ok" if abs(off) < 0.6 * self.robot.count_deg(name) else f"{min(max(off, -10.0), 10.0):+.3f}"
+            return (
+                "ok" if abs(off) < 0.6 * self.robot.count_deg(name) else f"{min(max(off, -10.0), 10.0):+.3f}"
+            )
         if topic == "map":
             return f"is {self.robot.angle_deg(self._joint()):.3f}"
         if topic in ("limit-low", "limit-high"):

@@ -25,6 +25,8 @@ EX_PIPE = 141
 # name -> what it does; the module has the same name.
 COMMANDS = {
     "check": "tell whether a configuration is right, and what the robot can do",
+    "calibrate": "measure trims, directions, pulse maps, limits and clocks on the bench",
+    "trim": "make the robot walk as it is told, from a walk measured with a tape",
     "rehearse": "walk a configuration in a physics engine",
     "run": "be the robot's service: take commands on the socket and drive the servos",
     "state": "print what the running robot is doing",

@@ -67,6 +67,17 @@ def number(
     return read
 
 
+def whole(name: str, low: int, high: int) -> Callable[[str], int]:
+    """An argparse type: a whole number between `low` and `high`."""
+
+    def read(text: str) -> int:
+        if not re.fullmatch(r"[0-9]{1,9}", text, re.ASCII) or not low <= int(text) <= high:
+            raise argparse.ArgumentTypeError(f"{name} is {text!r}, allowed a whole number, {low} to {high}")
+        return int(text)
+
+    return read
+
+
 def add_socket(parser: argparse.ArgumentParser) -> None:
     """`--socket PATH`, and `--timeout SECONDS` for the answer."""
     parser.add_argument(

@@ -65,6 +65,35 @@ def listen(path: Path, *, group: str | None = None) -> socket.socket:
         raise failure from error
 
 
+def answers(path: Path) -> bool:
+    """Whether a service answers there.  Raises OSError when that cannot be found out."""
+    with socket.socket(socket.AF_UNIX, socket.SOCK_STREAM) as probe:
+        probe.setblocking(False)
+        failed = probe.connect_ex(str(path))
+    if failed in (0, errno.EAGAIN):  # EAGAIN: it listens, and more wait than it takes in
+        return True
+    if failed not in (errno.ECONNREFUSED, errno.ENOENT, errno.ENOTDIR):
+        raise OSError(failed, os.strerror(failed), str(path))
+    return False
+
+
+@contextmanager
+def kept_free(path: Path) -> Iterator[None]:
+    """No service starts at `path` while this lasts: for whoever drives the servos without one.
+
+    Makes the directory where it is missing.  Raises ServiceError: a service
+    answers there, or is about to; OSError when that cannot be found out.
+    """
+    _make_directory(path.parent, -1)
+    with _locked(path.parent):
+        if answers(path):
+            raise ServiceError(
+                f"the robot's service answers on {path}, and two programs must not drive the servos: end it "
+                "first, with `systemctl stop hobnail`, or with Ctrl-C where `hobnail run` runs"
+            )
+        yield
+
+
 def _advice(error: OSError, group: str | None) -> str:
     if not isinstance(error, PermissionError):
         return ""
@@ -121,7 +150,9 @@ def _locked(directory: Path) -> Iterator[None]:
         try:
             fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except BlockingIOError:
-            raise ServiceError(f"another service is starting in {directory}: try again") from None
+            raise ServiceError(
+                f"another program is starting or calibrating a robot in {directory}: end it, or try again"
+            ) from None
         yield
     finally:
         os.close(lock)
@@ -134,13 +165,8 @@ def _refuse_living(path: Path) -> None:
         return
     if not stat.S_ISSOCK(kind):
         raise ServiceError(f"{path} is there already and is no socket: remove it, or choose another path")
-    with socket.socket(socket.AF_UNIX, socket.SOCK_STREAM) as probe:
-        probe.setblocking(False)
-        failed = probe.connect_ex(str(path))
-    if failed in (0, errno.EAGAIN):  # EAGAIN: it listens, and more wait than it takes in
+    if answers(path):
         raise ServiceError(f"a service already answers on {path}: stop it first, or choose another path")
-    if failed not in (errno.ECONNREFUSED, errno.ENOENT):
-        raise OSError(failed, os.strerror(failed))
 
 
 def _bound(path: Path, temporary: Path, group_id: int) -> socket.socket:

@@ -1,9 +1,10 @@
-"""The bench session over a simulated robot: errors that were made up are gone, nothing else moves; rad, us."""
+"""The bench session over a simulated robot: made-up errors are gone, nothing else moves; rad, us."""
 
 from __future__ import annotations
 
 import math
 from dataclasses import replace
+from functools import cache
 from itertools import pairwise
 
 import pytest
@@ -22,6 +23,7 @@ ROBOT = exact_servos(juniper())
 NAMES = [joint.name for joint in ROBOT.joints]
 
 
+@cache
 def rest_rad(robot: Robot) -> dict[str, float]:
     tick = Controller(robot, at_rest=True).tick(robot.period_s)
     angles = [angle for leg in tick.commanded_rad for angle in leg]
@@ -79,7 +81,7 @@ def test_a_joint_that_is_wrong_in_every_way_is_right_afterwards(name: str) -> No
     notebook = calibrated(bench, [name])
     found = notebook.joint(joint)
     assert found.direction == true.direction
-    assert found.pulse_limits_us == (pytest.approx(620, abs=13), pytest.approx(2380, abs=13))
+    assert found.pulse_limits_us == pytest.approx((620, 2380), abs=13)
     assert worst_deg(found, true) < 0.25  # two counts of this board, 0.8 us each, are 0.2 deg
     assert bench.awake == []
 
@@ -108,7 +110,7 @@ def test_all_joints_in_order_one_awake_at_a_time(robot: Robot) -> None:
     notebook = calibrated(bench, names)
     assert [name for name, values in notebook.kept if "trim_rad" in values] == names
     assert [name for name, values in notebook.kept if "direction" in values] == names
-    woken = []
+    woken: list[int] = []
     for frame in bench.driver.transitions:
         on = [k for k, pulse in enumerate(frame.pulses_us) if pulse is not None]
         assert len(on) <= 1
@@ -268,7 +270,7 @@ def test_a_horn_two_teeth_off_is_to_be_seated_anew() -> None:
     bench = BenchRobot(ROBOT, {name: wrong(joint_of(ROBOT, name), trim_deg=30.0)})
     technician = Technician(bench)
     calibrated(bench, [name], technician, ("trim",))
-    (text,) = [text for text in technician.told if "horn" in text and "tooth" in text or "teeth" in text]
+    (text,) = [text for text in technician.told if "The horn sits wrong" in text]
     # 25 teeth of 14.4 deg: two of them are 28.8.  The leg hangs 30 deg inward of where it should.
     assert "wrong by 2 teeth of a spline of 25" in text
     assert "by 28.8 deg, outward" in text

@@ -10,11 +10,12 @@ import math
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager, suppress
+from dataclasses import replace
 from types import TracebackType
 from typing import Self
 
 from hobnail.errors import DriverUnavailableError
-from hobnail.robot import Robot
+from hobnail.robot import Joint, Robot
 from hobnail.servo import JointMap
 from hobnail_drivers.contract import Driver
 from hobnail_drivers.errors import DriverError, NotOpenError
@@ -122,6 +123,21 @@ class JointBench:
             health = self._driver.health()
         if not health.settings_kept:
             raise DriverUnavailableError(f"the calibration ended: {health.detail}; what was kept stays kept")
+
+
+def with_limits_of_both(calibrated: Robot, configured: Robot) -> Robot:
+    """The calibrated robot with pulse limits that hold those of its configuration too: hard limits
+    are measured anew within these."""
+
+    def widened(joint: Joint, other: Joint) -> Joint:
+        (low, high), (other_low, other_high) = joint.pulse_limits_us, other.pulse_limits_us
+        return replace(joint, pulse_limits_us=(min(low, other_low), max(high, other_high)))
+
+    legs = []
+    for leg, other in zip(calibrated.legs, configured.legs, strict=True):
+        roll, hip, knee = (widened(*pair) for pair in zip(leg.joints, other.joints, strict=True))
+        legs.append(replace(leg, joints=(roll, hip, knee)))
+    return replace(calibrated, legs=tuple(legs))
 
 
 @contextmanager

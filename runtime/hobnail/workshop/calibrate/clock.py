@@ -7,8 +7,12 @@ periods of the oscillator.  25 MHz is typical only; 24 to 27 MHz have been seen
 
 from __future__ import annotations
 
+import re
+
 from hobnail.errors import CommandError
-from hobnail.robot import Board
+from hobnail.robot import Board, Joint
+from hobnail.servo import JointMap
+from hobnail.workshop.calibrate.effects import Keep, Quit, Say, Skip, Sleep, Steps, Wake, agree, ask, shown
 from hobnail_drivers.registers import COUNTS, pre_scale, true_frame_hz
 
 OSCILLATOR_RANGE_HZ = (23e6, 27e6)
@@ -39,3 +43,48 @@ def true_oscillator_hz(board: Board, measured_hz: float) -> float:
             f"{high:.2f} Hz here: measure from one rise of the pulse to the next, on this very board"
         )
     return measured_hz * COUNTS * (pre_scale(board.oscillator_hz, board.frame_hz) + 1)
+
+
+def clock_session(board: Board, joint: Joint, start_rad: float) -> Steps[None]:
+    """Let one joint of the board pulse, ask for its measured frame rate, keep the clock."""
+    low, high = frame_range_hz(board)
+    yield Say(
+        f"Clock of board {board.name}. One joint gets pulses, {joint.name} on channel {joint.channel}: it "
+        "may jump to its rest posture at full speed, so the robot must be on a stand, hands clear, a switch "
+        "in the servo supply within reach. Put an oscilloscope or a frequency counter to that channel's "
+        "signal and measure the frame rate: from one rise to the next. If the chip's clock were "
+        f"{board.oscillator_hz / 1e6:g} MHz, that would be {expected_frame_hz(board):.2f} Hz; "
+        f"{low:.2f} to {high:.2f} Hz is plausible."
+    )
+    try:
+        if not (yield from agree("wake", "Send the pulses?")):
+            return
+        least, most = joint.pulse_limits_us
+        yield Wake(joint.name, min(max(JointMap(joint).pulse_us(start_rad), least), most))
+        yield from _measure(board)
+    except (Quit, Skip):
+        yield Say("Ended.")
+    yield Sleep()
+
+
+def _measure(board: Board) -> Steps[None]:
+    while True:
+        answer = yield from ask("frame-rate", "Measured frame rate, Hz?", ("HERTZ", "skip", "quit"))
+        found = re.fullmatch(r"(\d{1,5}(?:\.\d{0,6})?)\s*(?:hz)?", answer, re.ASCII)
+        if not found:
+            yield Say(f"{shown(answer)} is no frame rate; allowed: a number of Hz, such as 305.17")
+            continue
+        try:
+            oscillator_hz = true_oscillator_hz(board, float(found[1]))
+        except CommandError as error:
+            yield Say(str(error))
+            continue
+        off = oscillator_hz / board.oscillator_hz - 1.0
+        yield Say(
+            f"That is a clock of {oscillator_hz / 1e6:.4f} MHz, {off:+.2%} of what it was taken for: "
+            "pulses were off by as much."
+        )
+        if (yield from agree("clock-keep", "Keep it?")):
+            yield Keep(board.name, {"oscillator_hz": oscillator_hz})
+            yield Say("kept")
+            return

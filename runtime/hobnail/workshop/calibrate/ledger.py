@@ -106,6 +106,11 @@ class Ledger:
             changed(self.calibration, self.configured, name, when=self._stamp(), who=self.who, **values)
         )
 
+    def forget(self, name: str) -> None:
+        """Let the configuration stand again for everything measured at a part."""
+        measured = measured_at(self.calibration, name, part_named(self.configured, name))
+        self.keep(name, dict.fromkeys(given(measured)))
+
     def set(self, name: str, settings: list[str]) -> None:
         """Keep values typed as `key=value`, in the words of the file."""
         lines = []

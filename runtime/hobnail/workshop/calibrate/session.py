@@ -31,13 +31,14 @@ from hobnail.workshop.calibrate.words import Place
 
 STEP_NAMES = ("direction", "trim", "map", "limits")
 
-CAUTION = """\
-The robot must be on a stand, its feet clear of everything and its body level; hands, hair and leads
-out of the legs. Have a switch in the servo supply within reach: this program is no substitute for it.
-One joint at a time gets pulses. Its first one cannot be made gentle, for a servo does not tell where it
-stands: fold each leg to about its rest posture by hand before, and the jump is small. After that it moves
-slowly, when you say so. Ctrl-C ends the pulses at once. Answers: skip leaves out a step, quit ends; what
-was kept stays kept."""
+CAUTION = (
+    "The robot must be on a stand, its feet clear of everything and its body level; hands, hair and leads "
+    "out of the legs. Have a switch in the servo supply within reach: this program is no substitute for it.\n"
+    "One joint at a time gets pulses. Its first one cannot be made gentle, for a servo does not tell where "
+    "it stands: fold each leg to about its rest posture by hand before, and the jump is small. After that it "
+    "moves slowly, when you say so. Ctrl-C ends the pulses at once.\n"
+    "Answers: a few first letters will do; skip leaves out a step, quit ends; what was kept stays kept."
+)
 
 
 def session(
@@ -63,7 +64,8 @@ def session(
     widest = {joint.name: joint.pulse_limits_us for joint in configured.joints}
     yield Say(CAUTION)
     try:
-        ready = yield from choose("ready", f"{len(joints)} joint(s) to calibrate. Ready?", ("yes", "no"))
+        count = f"{len(joints)} joint{'' if len(joints) == 1 else 's'}"
+        ready = yield from choose("ready", f"{count} to calibrate. Ready?", ("yes", "no"))
         if ready == "no":
             return
         for number, name in enumerate(joints, start=1):

@@ -63,8 +63,9 @@ def direction(work: Work) -> Steps[None]:
 def trim(work: Work, teeth: int = TEETH) -> Steps[None]:
     """How the horn sits: at a posture that can be judged, jog or measure, keep the difference."""
     posture = reference(work.place, work.joint)
+    way_deg = abs(math.degrees(posture.angle_rad - work.angle_rad))
     yield Say(
-        f"Trim. The joint moves slowly by {math.degrees(posture.angle_rad - work.angle_rad):+.0f} deg, to "
+        f"Trim. The joint moves slowly by {way_deg:.0f} deg, to "
         f"{math.degrees(posture.angle_rad):g} deg. There, the body being level, it should be so:\n"
         f"  {posture.words}"
     )

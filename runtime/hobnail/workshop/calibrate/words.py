@@ -65,7 +65,7 @@ def looks(place: Place, angle_rad: float) -> str:
     size = f"{abs(degrees):g} deg"
     if place.number == ROLL:
         if not degrees:
-            return "the leg is plumb, seen from the front: the foot straight below the roll axis's arm"
+            return "the leg is plumb, seen from the front, neither outward nor inward"
         return f"the leg stands {size} {plus if degrees > 0 else minus} from plumb, seen from the front"
     if place.number == HIP:
         if not degrees:
