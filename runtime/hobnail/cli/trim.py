@@ -65,8 +65,8 @@ def configure(parser: Parser) -> None:
     parser.epilog = (
         f"{parser.epilog}\n\n"
         "Calibrate the joints first. One walk of each kind is enough: straight ahead, straight sideways, a\n"
-        "turn on the spot; at least 500 mm, or 90 degrees. Each further walk improves on what is in use, so\n"
-        "start the service again before a second of a kind. From then on commands and odometry tell the true motion; what a\n"
+        "turn on the spot; at least 500 mm, or 90 degrees. A second walk of a kind improves on what is in\n"
+        "use: start the service again before it. Commands and odometry then mean the true motion; what a\n"
         "metre and a turn truly are is kept, dated, in <robot>.calibration.yaml.\n"
         "Exit codes: 0 kept; 64 not plausible, or wrong usage; 65 the answers ended early; 69 no service;\n"
         "75 the robot does not stand; 78 a file cannot be used."

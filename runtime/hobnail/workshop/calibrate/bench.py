@@ -18,7 +18,7 @@ from hobnail.errors import DriverUnavailableError
 from hobnail.robot import Joint, Robot
 from hobnail.servo import JointMap
 from hobnail_drivers.contract import Driver
-from hobnail_drivers.errors import DriverError, NotOpenError
+from hobnail_drivers.errors import DriverError
 
 PACE_RAD_S = math.radians(20.0)  # and never more than a tenth of what the servo can
 PACE_SHARE = 0.1
@@ -60,30 +60,28 @@ class JointBench:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        try:
-            self._end()
-        except (KeyboardInterrupt, SystemExit):  # once more, for it may have come in the middle
-            self._end()
-            raise
-
-    def _end(self) -> None:
         self._awake = None
         try:
-            for left in reversed(range(RELEASE_TRIES)):
-                try:
-                    self._driver.release()
-                    break
-                except NotOpenError:
-                    break
-                except DriverError as error:
-                    if not left:
-                        raise DriverUnavailableError(
-                            f"driver: {error}: the pulses could not be ended. Switch the servo supply off, "
-                            "then run `hobnail-release`"
-                        ) from error
+            self._release()
+        except (KeyboardInterrupt, SystemExit):  # once more, for it may have come in the middle
+            self._release()
+            raise
         finally:
             with suppress(DriverError):
                 self._driver.close()
+
+    def _release(self) -> None:
+        """End every pulse, patiently.  Raises DriverUnavailableError."""
+        for left in reversed(range(RELEASE_TRIES)):
+            try:
+                self._driver.release()
+                return
+            except DriverError as error:
+                if not left:
+                    raise DriverUnavailableError(
+                        f"driver: {error}: the pulses could not be ended. Switch the servo supply off, then "
+                        "run `hobnail-release`"
+                    ) from error
 
     def wake(self, joint: str, pulse_us: float) -> None:
         """Give the joint, and no other, a pulse."""
