@@ -184,9 +184,7 @@ class Controller:
         elif recurrence.turning:
             (tick, walked), moved = recurrence.again()
             tick = tick._replace(pose=compose(moved, tick.pose))
-            return (
-                tick if self._odometry is None else _truly(tick, compose(moved, walked), self._odometry)
-            )
+            return tick if self._odometry is None else _truly(tick, compose(moved, walked), self._odometry)
         walker = self._walker
         walker.tick(dt_s, self._steps)
         body, commanded = walker.body, walker.feed_forward.commanded_rad
