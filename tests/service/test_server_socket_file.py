@@ -13,7 +13,7 @@ import pytest
 
 from hobnail.errors import EX_NOPERM, ServiceError
 from hobnail.service import socket_file
-from hobnail.service.socket_file import default_path, identity, listen, remove
+from hobnail.service.socket_file import answers, default_path, identity, kept_free, listen, remove
 
 
 def _connects(path: Path) -> bool:
@@ -173,3 +173,17 @@ def test_where_the_socket_is_when_nobody_says(monkeypatch: pytest.MonkeyPatch, t
     assert default_path(everything) == tmp_path / "hobnail.sock"
     (tmp_path / "hobnail.sock").unlink()
     assert default_path({"HOBNAIL_SOCKET": ""}) == Path(f"/tmp/hobnail-{os.getuid()}/hobnail.sock")
+
+
+def test_kept_free_no_service_starts_there_and_afterwards_one_does(tmp_path: Path) -> None:
+    path = tmp_path / "run" / "h.sock"
+    with kept_free(path):
+        with pytest.raises(ServiceError, match="starting or calibrating"):
+            listen(path)
+        with pytest.raises(ServiceError, match="starting or calibrating"), kept_free(path):
+            pass
+    with listen(path), pytest.raises(ServiceError, match="two programs must not"), kept_free(path):
+        pass
+    assert not answers(path)  # what is left of a service that has gone does not count
+    with kept_free(path):
+        pass

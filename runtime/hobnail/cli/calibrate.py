@@ -131,10 +131,11 @@ def run(arguments: Namespace) -> int:
     if arguments.clock:
         check_known("--clock", arguments.clock, [board.name for board in configured.boards])
     if arguments.measured_hz is not None:
-        from hobnail.workshop.calibrate.clock import true_oscillator_hz
+        from hobnail.workshop.calibrate.clock import check_fresh, true_oscillator_hz
 
         board = next(board for board in ledger.robot.boards if board.name == arguments.clock)
         oscillator_hz = true_oscillator_hz(board, arguments.measured_hz)
+        check_fresh(board, arguments.measured_hz)
         ledger.keep(board.name, {"oscillator_hz": oscillator_hz})
         return _kept(ledger, arguments, f"kept for {board.name}: a clock of {oscillator_hz / 1e6:.4f} MHz")
     joints = _joints(arguments, configured)

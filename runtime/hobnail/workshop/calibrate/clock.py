@@ -16,6 +16,7 @@ from hobnail.workshop.calibrate.effects import Keep, Quit, Say, Skip, Sleep, Ste
 from hobnail_drivers.registers import COUNTS, pre_scale, true_frame_hz
 
 OSCILLATOR_RANGE_HZ = (23e6, 27e6)
+SAME_RATE = 0.002  # chips drift by less, warm or cold (common practice)
 
 
 def expected_frame_hz(board: Board) -> float:
@@ -43,6 +44,20 @@ def true_oscillator_hz(board: Board, measured_hz: float) -> float:
             f"{high:.2f} Hz here: measure from one rise of the pulse to the next, on this very board"
         )
     return measured_hz * COUNTS * (pre_scale(board.oscillator_hz, board.frame_hz) + 1)
+
+
+def check_fresh(board: Board, measured_hz: float) -> None:
+    """A clock that is kept may change the prescale, and with it the frame rate: a rate measured before
+    that, typed once more, would be taken for another clock.  Raises CommandError for one that looks so.
+    """
+    present = pre_scale(board.oscillator_hz, board.frame_hz)
+    for prescale in (present - 1, present + 1):
+        if abs(measured_hz / true_frame_hz(board.oscillator_hz, prescale) - 1.0) < SAME_RATE:
+            raise CommandError(
+                f"{measured_hz:g} Hz is what board {board.name} had at prescale {prescale}; set up as it is "
+                f"now, for {board.oscillator_hz / 1e6:g} MHz, it has prescale {present} and should have "
+                f"{expected_frame_hz(board):.2f} Hz. Measure again, with --clock {board.name} alone"
+            )
 
 
 def clock_session(board: Board, joint: Joint, start_rad: float) -> Steps[None]:
