@@ -155,22 +155,23 @@ def test_steps_legs_and_joints_are_chosen(
 
 
 def test_interrupted_from_the_keyboard_the_pulses_end(
-    config: str, bench: BenchRobot, answer: Answer, monkeypatch: pytest.MonkeyPatch
+    config: str, bench: BenchRobot, answer: Answer, monkeypatch: pytest.MonkeyPatch, capsys: Output
 ) -> None:
-    answer("yes\nyes\noutward\nyes\n")
+    answer("yes\nyes\noutward\nyes\n+10\n")
     writes = 0
 
     def sleep(seconds: float) -> None:
         nonlocal writes
         bench.sleep(seconds)
         writes += 1
-        if writes == 8:
+        if calibration_path(config).exists() and writes > 0:
             assert bench.awake == [ROLL]
             os.kill(os.getpid(), signal.SIGINT)
 
     monkeypatch.setattr(calibrate, "sleep", sleep)
     before = signal.getsignal(signal.SIGINT)
     assert main(["calibrate", config, "--joint", ROLL]) == 130
+    assert "ended, no pulses are sent; 1 value kept, in " in capsys.readouterr().err
     assert bench.awake == []
     assert signal.getsignal(signal.SIGINT) is before
 

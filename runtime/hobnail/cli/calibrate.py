@@ -140,9 +140,17 @@ def run(arguments: Namespace) -> int:
         return _kept(ledger, arguments, f"kept for {board.name}: a clock of {oscillator_hz / 1e6:.4f} MHz")
     joints = _joints(arguments, configured)
     before = len(ledger.calibration.history)
-    _bench(arguments, ledger, joints)
-    count = len(ledger.calibration.history) - before
-    return _kept(ledger, arguments, f"{count} value{'' if count == 1 else 's'} kept")
+
+    def kept() -> str:
+        count = len(ledger.calibration.history) - before
+        return f"{count} value{'' if count == 1 else 's'} kept"
+
+    try:
+        _bench(arguments, ledger, joints)
+    except (KeyboardInterrupt, SystemExit):
+        print(f"\nhobnail: ended, no pulses are sent; {kept()}, in {ledger.path}", file=sys.stderr)
+        raise
+    return _kept(ledger, arguments, kept())
 
 
 def login() -> str:

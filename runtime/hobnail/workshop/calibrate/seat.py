@@ -43,5 +43,6 @@ def advice(seat: Seat, ways: tuple[str, str], teeth: int = TEETH) -> str:
         f"The horn sits wrong by {count} {'tooth' if count == 1 else 'teeth'} of a spline of {teeth}: switch "
         f"the servo supply off, take the horn off its shaft, turn the link that it drives by "
         f"{degrees:.1f} deg, {way.get(turned, turned)}, and put it on again. The trim left would be "
-        f"{math.degrees(seat.left_rad):+.1f} deg. (For another spline: --teeth.)"
+        f"{math.degrees(seat.left_rad):+.1f} deg. Then measure "
+        "it again. (For another spline: --teeth.)"
     )
