@@ -122,8 +122,8 @@ def test_the_odometry_tells_the_true_motion(response: WalkResponse, command: Vec
     matrix, place = as_matrix(response), np.eye(3)
     for before, after in pairwise(plain):
         x, y, _ = np.linalg.solve(placed(before.pose), np.array([after.pose[0], after.pose[1], 1.0]))
-        twist = matrix @ np.array(log_pose((x, y, after.pose[2] - before.pose[2])))
-        place = place @ placed(exp_twist(*twist, 1.0))
+        vx, vy, yaw_rate = matrix @ np.array(log_pose((x, y, after.pose[2] - before.pose[2])))
+        place = place @ placed(exp_twist(vx, vy, yaw_rate, 1.0))
     assert placed(trimmed[-1].pose) == pytest.approx(place, abs=1e-4)
 
 

@@ -70,8 +70,8 @@ def _collect(key: str, kind: Kind, found: Bounds) -> None:
         case Several():
             _collect(key, kind.item, found)
         case Row():
-            for each in kind.kinds:
-                _collect(key, each, found)
+            for part in kind.kinds:
+                _collect(key, part, found)
         case Group():
             for each in kind.fields:
                 _collect(each.key, each.kind, found)

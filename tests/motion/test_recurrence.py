@@ -38,7 +38,7 @@ from walks import (
 SAME = 1e-9
 
 
-class WorkedOut(Recurrence[Tick]):
+class WorkedOut(Recurrence[Any]):
     """Keeps nothing, so that every tick is worked out."""
 
     def keep(self, *_: Any) -> None:
