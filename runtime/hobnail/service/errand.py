@@ -9,8 +9,8 @@ from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 from hobnail.errors import EX_TEMPFAIL, HobnailError
-from hobnail.service.machine import LOCAL_CLIENT, Machine
-from hobnail.service.states import State
+from hobnail.service.machine import Machine
+from hobnail.service.states import LOCAL_CLIENT, State
 
 if TYPE_CHECKING:
     from hobnail.service.route_steps import Step

@@ -220,10 +220,10 @@ class Loop:
             )
         if self._log is None:
             return
+        for line in machine.faults.drain():  # before the states that they lead to
+            self._log.event("fault", line, now_s)
         for before, after, reason in machine.passages:
             self._log.event("state", f"{before} -> {after}{reason and f': {reason}'}", now_s)
-        for line in machine.faults.drain():
-            self._log.event("fault", line, now_s)
 
     def _housekeep(self, frame: Frame, now_s: float) -> None:
         if frame.state is not self._state:

@@ -22,6 +22,7 @@ from hobnail.service.requests import Params, Requests
 from hobnail.service.snapshot import snapshot
 from hobnail.service.states import (
     CARRYING,
+    LOCAL_CLIENT,
     LYING,
     NEXT,
     NO_PULSES,
@@ -38,8 +39,6 @@ from hobnail.service.states import (
 if TYPE_CHECKING:
     from hobnail.service.route import RouteRunner
     from hobnail.service.route_steps import Step
-
-LOCAL_CLIENT = 0  # the service's own errand, as `run --route` has one; sockets count from 1
 
 
 class Machine:
@@ -81,6 +80,7 @@ class Machine:
         self.on_cut: Callable[[], object] | None = None
         self.passages: tuple[Passage, ...] = ()
         self._passing: list[Passage] = []
+        self._own_reason = ""  # why the robot lies down where nobody asked for that
         self._load = LoadWatch(robot)
         self._requests = Requests(self)
         self._route_client = LOCAL_CLIENT
@@ -127,7 +127,7 @@ class Machine:
         elif severity is Severity.STOP:
             self.stop(1, f"fault {name}", now_s)
         elif severity is Severity.REST:
-            self.power_down()
+            self.power_down(reason=f"fault {name}")
         elif severity is Severity.HOLD:
             if name == "commander-lost" and self._lost_s is None:
                 self._lost_s = now_s
@@ -164,6 +164,7 @@ class Machine:
     def head_for(self, goal: State, now_s: float) -> None:
         """Be on the way to off, resting or standing; whatever was walked is over."""
         self.goal = goal
+        self._own_reason = ""
         self._halt()
         self.commanded(now_s)
 
@@ -199,6 +200,7 @@ class Machine:
         elif category < self.stop_record.category:
             self.stop_record = self.stop_record.graver(category)
         self.goal = State.OFF
+        self._own_reason = ""
         errors = self._cut(now_s) if category == 0 else []
         errors += run_each((self._halt, self.commander.drop, lambda: self._requests.streams.hold_all(now_s)))
         if category == 1:
@@ -221,9 +223,11 @@ class Machine:
             self.body.renew()
             self._enter(State.OFF, now_s)
 
-    def power_down(self, closing: str = "") -> None:
-        """Lie down, then go off; with `closing`, a reason, no request to move is taken any more."""
+    def power_down(self, closing: str = "", *, reason: str = "") -> None:
+        """Lie down, then go off, for a `reason`; with `closing`, which is one, no request to move is
+        taken any more."""
         self.closing = self.closing or closing
+        self._own_reason = closing or reason or self._own_reason
         self.goal = State.OFF
         self._halt()
         self.commander.drop()
@@ -246,8 +250,9 @@ class Machine:
             self._lost_s = None
             if self.goal is State.STANDING:
                 self.goal = State.RESTING
+                self._own_reason = f"commander lost for {safety.lost_rest_s:g} s"
         if self.goal is not State.OFF and now_s - self._active_s >= safety.idle_rest_s:
-            self.power_down()
+            self.power_down(reason=f"no command for {safety.idle_rest_s:g} s")
         if self.state is State.STOPPING and self.stop_record and now_s >= self.stop_record.until_s:
             self._cut(now_s)
 
@@ -378,6 +383,6 @@ class Machine:
     def _enter(self, state: State, now_s: float) -> None:
         if state not in TRANSITIONS[self.state]:
             raise RuntimeError(f"no way from {self.state} to {state}")
-        reason = self.stop_record.reason if self.stop_record else ""
+        reason = self.stop_record.reason if self.stop_record else self._own_reason
         self._passing.append(Passage(self.state, state, reason))
         self.state, self.since_s = state, now_s

@@ -20,6 +20,9 @@ if TYPE_CHECKING:
     from hobnail.controller import Tick
 
 
+LOCAL_CLIENT = 0  # the service's own errand, as `run --route` has one; sockets count from 1
+
+
 class State(StrEnum):
     """Where the robot is between no pulses and walking."""
 
@@ -82,7 +85,7 @@ NEXT: dict[State, str] = {
 
 
 class Passage(NamedTuple):
-    """A change of state, and the reason of the stop that it belongs to, if it does to one."""
+    """A change of state, and its reason where nobody asked for it, or it belongs to a stop."""
 
     before: State
     after: State
