@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import json
 import math
 import os
+import zlib
 from dataclasses import replace
 from pathlib import Path
 
@@ -211,3 +213,67 @@ def test_an_orderly_end_is_no_interruption(tmp_path: Path) -> None:
     after = Recorder(tmp_path, juniper())
     after.close()
     assert not after.was_interrupted
+
+
+def test_what_is_cut_or_damaged_is_counted(five_rows: bytes, tmp_path: Path) -> None:
+    path = tmp_path / "ring"
+    path.write_bytes(five_rows)
+    ring = read_ring(path)
+    assert (ring.damaged, ring.missing_bytes) == (0, 0)
+    path.write_bytes(five_rows[:-10])
+    ring = read_ring(path)
+    assert (len(ring.rows), ring.damaged, ring.missing_bytes) == (4, 0, 10)
+    path.write_bytes(five_rows[:-1] + bytes((five_rows[-1] ^ 1,)))
+    ring = read_ring(path)
+    assert (len(ring.rows), ring.damaged, ring.missing_bytes) == (4, 1, 0)
+
+
+def with_header(data: bytes, **changes: object) -> bytes:
+    """The same ring with another header, its checksum right."""
+    _, length, _ = module._HEADER.unpack_from(data)
+    header = json.loads(data[module._HEADER.size :][:length])
+    text = json.dumps({**header, **changes}).encode()
+    head = module._HEADER.pack(module.MAGIC, len(text), zlib.crc32(text)) + text
+    return head.ljust(HEADER_BYTES, b"\0") + data[HEADER_BYTES:]
+
+
+def test_states_and_faults_are_those_of_the_program_that_wrote_them(five_rows: bytes, tmp_path: Path) -> None:
+    path = tmp_path / "ring"
+    states = [str(state) for state in State]
+    walking, off = states.index("walking"), states.index("off")
+    states[walking], states[off] = states[off], states[walking]
+    path.write_bytes(with_header(five_rows, states=states))
+    assert {row.state for row in read_ring(path).rows} == {State.OFF}
+
+
+@pytest.mark.parametrize(
+    "changes",
+    [
+        {"joints": None},
+        {"joints": [1, 2]},
+        {"states": "x" * 3, "run": 7},
+        {"period_s": 0},
+        {"period_s": "fast"},
+        {"wall_offset_s": None},
+    ],
+)
+def test_a_header_that_makes_no_sense_is_no_recording(
+    changes: dict[str, object], five_rows: bytes, tmp_path: Path
+) -> None:
+    path = tmp_path / "ring"
+    path.write_bytes(with_header(five_rows, **changes))
+    with pytest.raises(ServiceError, match="not a recording"):
+        read_ring(path)
+
+
+def test_rows_in_a_state_that_nobody_knows_are_left_out(five_rows: bytes, tmp_path: Path) -> None:
+    path = tmp_path / "ring"
+    path.write_bytes(with_header(five_rows, states=["dancing"] * 9))
+    ring = read_ring(path)
+    assert (ring.rows, ring.damaged) == ((), 5)
+
+
+def test_the_ring_names_its_run_and_its_log(tmp_path: Path) -> None:
+    Recorder(tmp_path, juniper(), "a1b2", tmp_path / "log").close()
+    header = read_ring(tmp_path / RING_NAME).header
+    assert (header["run"], header["log_dir"]) == ("a1b2", str(tmp_path / "log"))

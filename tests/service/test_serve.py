@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import errno
 import json
+import os
 import signal
 import socket
 import subprocess
@@ -144,6 +145,10 @@ def test_a_life_over_the_socket(tmp_path: Path, plan: FaultInjector, monkeypatch
     stopped = next(entry["text"] for entry in log if "stopped" in entry["text"])
     assert stopped == "walking -> stopped: a test (client 1)"
     assert log[-1]["text"] == "the test is over"
+    asked = [(entry["text"], entry["pid"]) for entry in log if entry["kind"] == "command"]
+    assert [text.split()[0] for text, _ in asked] == ["stand", "walk", "stop,", "reset", "stand"]
+    assert {pid for _, pid in asked} == {os.getpid()}
+    assert {entry["run"] for entry in log} == {read_ring(recording).header["run"]}
     assert shown[-1]["state"] == "off"
     assert plan.injected == 0
 

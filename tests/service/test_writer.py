@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import json
+import os
+import pwd
 from pathlib import Path
 from threading import Event
 
-import pytest
-
-from hobnail.service import writer as module
+from hobnail.service.link import Peer
+from hobnail.service.states import LOCAL_CLIENT
 from hobnail.service.writer import LOG_NAME, EventLog, Writer
 
 WAIT_S = 10.0  # a bound for a broken test, not a time that anything takes
@@ -80,10 +81,9 @@ def test_a_line_that_cannot_be_written_is_shown_all_the_same(tmp_path: Path) -> 
     assert seen == ["disk full"]
 
 
-def test_a_long_log_is_begun_anew(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(module, "LOG_BYTES", 1000)
+def test_a_long_log_is_begun_anew(tmp_path: Path) -> None:
     writer = Writer("test")
-    log = EventLog(writer, tmp_path)
+    log = EventLog(writer, tmp_path, limit_bytes=1000)
     for number in range(30):
         log.event("test", f"line {number}", 0.0)
     assert writer.close(WAIT_S)
@@ -100,3 +100,35 @@ def test_close_does_not_wait_for_a_job_that_hangs() -> None:
     assert not writer.close(0.01)
     let_go.set()
     assert writer.close(WAIT_S)
+
+
+def test_a_line_that_was_cut_costs_no_other(tmp_path: Path) -> None:
+    whole = '{"text": "whole"}\n'
+    (tmp_path / LOG_NAME).write_text(whole + '{"text": "cut by a cra')
+    writer = Writer("test")
+    log = EventLog(writer, tmp_path)
+    log.event("test", "after", 1.0)
+    log.event("test", "and another", 2.0)
+    assert writer.close(WAIT_S)
+    lines = (tmp_path / LOG_NAME).read_text().splitlines()
+    assert [json.loads(lines[k])["text"] for k in (0, 2, 3)] == ["whole", "after", "and another"]
+    assert len(lines) == 4
+
+
+def test_a_line_says_in_which_run_and_for_whom(tmp_path: Path) -> None:
+    seen: list[str] = []
+    writer = Writer("test")
+    log = EventLog(writer, tmp_path, (seen.append,), run="a1b2")
+    log.event("command", "stand", 1.0, client=3, peer=Peer(42, os.getuid(), os.getgid()))
+    log.event("command", "stand", 1.0, client=4, peer=Peer(43, 3_999_999_999 % 2**31, 0))
+    log.event("command", "walk a route", 1.0, client=LOCAL_CLIENT)
+    assert writer.close(WAIT_S)
+    user = pwd.getpwuid(os.getuid()).pw_name
+    assert seen == [
+        f"client 3 (user {user}, pid 42): stand",
+        f"client 4 (user {3_999_999_999 % 2**31}, pid 43): stand",
+        "the service itself: walk a route",
+    ]
+    entry = json.loads((tmp_path / LOG_NAME).read_text().splitlines()[0])
+    told = {key: entry[key] for key in ("run", "text", "client", "pid", "user")}
+    assert told == {"run": "a1b2", "text": "stand", "client": 3, "pid": 42, "user": user}

@@ -45,7 +45,7 @@ def configure(parser: Parser) -> None:
         "--log-dir",
         metavar="DIR",
         default=_first(os.environ.get("LOGS_DIRECTORY")),
-        help="keep events.log here (default: $LOGS_DIRECTORY, else only on stderr)",
+        help="keep events.log here (default: $LOGS_DIRECTORY, else the socket's directory)",
     )
     parser.add_argument(
         "--no-color", action="store_true", help="no colours (NO_COLOR in the environment does the same)"

@@ -9,6 +9,7 @@ here (`hobnail.service.writer`).
 
 from __future__ import annotations
 
+import contextlib
 import json
 import math
 import mmap
@@ -16,7 +17,7 @@ import os
 import struct
 import time
 import zlib
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -62,12 +63,17 @@ class Row:
 class Ring:
     """A ring file as read: its header and every whole row, oldest first.
 
-    `header` has robot, digest, source, period_s, joints (names) and
-    `wall_offset_s`, which added to a row's time gives seconds since 1970.
+    `header` has robot, digest, source, period_s, joints (names), run (the same
+    as in the log), log_dir (empty: beside it), rows (places for them) and `wall_offset_s`, which added to a
+    row's time gave seconds since 1970 when the run began.  `damaged` counts
+    rows that were begun and are not whole: where the writer is alive, one may be
+    the newest.  `missing_bytes` are cut off the end.
     """
 
-    header: dict[str, object]
+    header: dict[str, Any]
     rows: tuple[Row, ...]
+    damaged: int
+    missing_bytes: int
 
 
 class Recorder:
@@ -76,8 +82,9 @@ class Recorder:
     `was_interrupted`: the ring before this one, kept as the previous one, does not end at rest.
     """
 
-    def __init__(self, directory: Path, robot: Robot) -> None:
-        """Start a new ring; one with rows in it is kept as the previous one.
+    def __init__(self, directory: Path, robot: Robot, run: str = "", log_dir: Path | None = None) -> None:
+        """Start a new ring; one with rows in it is kept as the previous one.  `run` names
+        this life of the service in ring and log alike; the log is in `log_dir`, None: beside the ring.
 
         Raises OSError when there is no room, or no right to write there.
         """
@@ -109,6 +116,9 @@ class Recorder:
                 "digest": robot.digest,
                 "source": robot.source,
                 "period_s": robot.period_s,
+                "run": run,
+                "rows": self._rows,
+                "log_dir": str(log_dir.absolute()) if log_dir else "",
                 "joints": [joint.name for joint in robot.joints],
                 "wall_offset_s": time.time() - time.monotonic(),
                 "states": [str(state) for state in _STATES],
@@ -170,8 +180,15 @@ def read_ring(path: Path) -> Ring:
     data = path.read_bytes()
     header, joints = _read_header(data, path)
     form = _row_struct(joints)
-    rows = [_unpacked(form.unpack_from(data, start), joints) for start in _whole_rows(data, form)]
-    return Ring(header, tuple(rows))
+    rows = []
+    for start in _whole_rows(data, form):
+        with contextlib.suppress(IndexError, ValueError):  # a state that neither the header nor we know
+            rows.append(_unpacked(form.unpack_from(data, start), joints, header["states"], header["faults"]))
+    step = form.size + _CRC.size
+    places = range(HEADER_BYTES, len(data) - step + 1, step)
+    begun = sum(1 for start in places if any(data[start : start + step]))
+    whole = HEADER_BYTES + step * max(header["rows"], begun)
+    return Ring(header, tuple(rows), begun - len(rows), max(0, whole - len(data)))
 
 
 def last_posture(directory: Path, robot: Robot) -> tuple[float, ...] | None:
@@ -231,7 +248,7 @@ def _row_struct(joints: int) -> struct.Struct:
     return struct.Struct(f"<QddIB3x{_NUMBERS + 2 * joints}f")
 
 
-def _read_header(data: bytes, path: Path) -> tuple[dict[str, object], int]:
+def _read_header(data: bytes, path: Path) -> tuple[dict[str, Any], int]:
     """The header, and the number of joints in it."""
     problem = ServiceError(
         f"{path}: not a recording of hobnail, or its first {HEADER_BYTES} bytes are damaged"
@@ -242,18 +259,35 @@ def _read_header(data: bytes, path: Path) -> tuple[dict[str, object], int]:
     text = data[_HEADER.size : _HEADER.size + length]
     if magic != MAGIC or zlib.crc32(text) != checksum:
         raise problem
-    header = json.loads(text)
+    try:
+        header = {"run": "", "rows": 0, "log_dir": "", **json.loads(text)}
+        fits = (
+            all(isinstance(header[key], str) for key in ("robot", "digest", "source", "run", "log_dir"))
+            and all(isinstance(name, str) for key in ("joints", "states", "faults") for name in header[key])
+            and all(math.isfinite(header[key]) for key in ("period_s", "wall_offset_s", "rows"))
+            and header["period_s"] > 0.0
+        )
+    except (ValueError, TypeError, KeyError, RecursionError):
+        fits = False
+    if not fits:
+        raise problem
     return header, len(header["joints"])
 
 
-def _unpacked(values: tuple[Any, ...], joints: int) -> Row:
+def _unpacked(
+    values: tuple[Any, ...],
+    joints: int,
+    states: Sequence[str] = _STATES,
+    faults: Sequence[str] = _FAULTS,
+) -> Row:
+    """A row; `states` and `faults` are those of the program that wrote it."""
     number, time_s, dt_s, bits, state, *numbers = values
     return Row(
         number=number,
         time_s=time_s,
         dt_s=dt_s,
-        state=_STATES[state],
-        faults=tuple(name for bit, name in enumerate(_FAULTS) if bits >> bit & 1),
+        state=State(states[state]),
+        faults=tuple(name for bit, name in enumerate(faults) if bits >> bit & 1),
         lateness_us=numbers[0],
         command=tuple(numbers[1:4]),
         velocity=tuple(numbers[4:7]),

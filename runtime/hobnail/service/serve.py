@@ -10,6 +10,7 @@ unit runs `hobnail-release` afterwards.
 
 from __future__ import annotations
 
+import secrets
 import signal
 import sys
 import threading
@@ -20,10 +21,11 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Self
 
 from hobnail.config.calibration import calibration_path
-from hobnail.errors import DriverUnavailableError
+from hobnail.errors import DriverUnavailableError, HobnailError
 from hobnail.robot import Robot
 from hobnail.service.archive import load_posture
 from hobnail.service.bus import Bus
+from hobnail.service.chronicle import Chronicle
 from hobnail.service.drivers import open_contact, open_driver, open_monitor
 from hobnail.service.errand import Errand
 from hobnail.service.faults import Thinner, run_each
@@ -34,9 +36,10 @@ from hobnail.service.notify import Notifier
 from hobnail.service.power import StopInputWatch, SupplyWatch
 from hobnail.service.realtime import go_realtime, quiet_collector, usual_collector
 from hobnail.service.recorder import Recorder, last_posture
+from hobnail.service.requests import Params
 from hobnail.service.server import SocketServer
-from hobnail.service.states import NO_PULSES
-from hobnail.service.writer import EventLog, Writer
+from hobnail.service.states import LOCAL_CLIENT, NO_PULSES
+from hobnail.service.writer import LOG_BYTES, MEMORY_BYTES, EventLog, Writer
 from hobnail_drivers.board_notes import FILE_NAME as NOTE_NAME
 from hobnail_drivers.board_notes import note_boards
 from hobnail_drivers.errors import BusError
@@ -142,10 +145,10 @@ def run(
     colon.  The last minute and the note for `hobnail-release` are kept in the
     socket's directory, which should be a tmpfs; what is to outlive a reboot, the
     last posture and the recordings of stops, in `state_dir`.  Log lines go to
-    stderr and, as JSON, to `log_dir`.  `route` is walked at once; the run then
-    ends lying down, pulses off, with 0 when every step was walked and 75 when
-    not.  `on_state` is called ten times a second, in a thread of its own, with
-    what `state` tells.
+    stderr and, as JSON, to `log_dir`, or to the socket's directory where that is
+    None.  `route` is walked at once; the run then ends lying down, pulses off,
+    with 0 when every step was walked and 75 when not.  `on_state` is called ten
+    times a second, in a thread of its own, with what `state` tells.
 
     Raises DriverUnavailableError, ServiceError (the socket), CommandError (a
     route that does not fit the robot), OSError (a directory).
@@ -174,6 +177,7 @@ class Running:
         self._log_dir = log_dir
         self._group = group
         self._thinner = Thinner()
+        self.chronicle = Chronicle(self._asked, ttl_s=robot.safety.command_ttl_s)
         self._closers: list[Callable[[], object]] = []
         self._end_pulses: Callable[[], object] = lambda: None
 
@@ -195,7 +199,11 @@ class Running:
                 folder.mkdir(mode=0o750, parents=True, exist_ok=True)
         writer = Writer("writer")
         self._closers.append(lambda: writer.close(CLOSE_S))
-        self.log = EventLog(writer, self._log_dir, (_to_stderr,))
+        run = secrets.token_hex(4)
+        limit_bytes = LOG_BYTES if self._log_dir else MEMORY_BYTES
+        self.log = EventLog(
+            writer, self._log_dir or self._runtime_dir, (_to_stderr,), run=run, limit_bytes=limit_bytes
+        )
         driver = open_driver(self._driver_name, robot)
         note_boards(self._runtime_dir / NOTE_NAME, driver.notes())
         monitor, contact = (None, None) if driver.is_model else (open_monitor(robot), open_contact(robot))
@@ -212,16 +220,17 @@ class Running:
             last = load_posture(self._state_dir, robot)
         self.machine = Machine(robot, now_s=now_s, last_joints_rad=last)
         self.machine.instruments["driver"] = self._describe_driver
-        self.recorder = Recorder(self._runtime_dir, robot)
+        self.recorder = Recorder(self._runtime_dir, robot, run, self._log_dir)
         self._closers.append(self.recorder.close)
         source = Path(robot.source)
         sources = (source, calibration_path(source)) if robot.source else ()
         self.keeper = Keeper(self.machine, writer, sources, self._runtime_dir, self._state_dir)
         if self.recorder.was_interrupted:
             self.keeper.keep_previous()
+            self.log.event("start", "the run before this one did not end at rest: see `hobnail log`", now_s)
         self.server = SocketServer(
             self._socket_path,
-            lambda method, params, client: self.machine.request(method, params, client, time.monotonic()),
+            self._answer,
             group=self._group,
             on_event=self._client_event,
             on_gone=lambda client: self.machine.client_gone(client, time.monotonic()),
@@ -264,7 +273,16 @@ class Running:
         quiet_collector()
         self._closers.append(usual_collector)
         name = self._robot.name
-        self.log.event("start", f"{name}: driver {self._driver_name}, socket {self._socket_path}", now_s)
+        self.log.event(
+            "start",
+            f"{name}: driver {self._driver_name}, socket {self._socket_path}",
+            now_s,
+            robot=name,
+            digest=self._robot.digest,
+            source=self._robot.source,
+        )
+        if route:
+            self.log.event("command", f"walk a route of {len(route)} steps", now_s, client=LOCAL_CLIENT)
         self.notifier.ready(f"off: {name} is ready, send `stand`")
         loop.run(attendant.finished)
         self.log.event("end", self.machine.closing, time.monotonic())
@@ -284,6 +302,20 @@ class Running:
             if not isinstance(error, BusError) or time.monotonic() + BUS_PAUSE_S > until_s:
                 raise DriverUnavailableError(f"driver {self._driver_name}: {error}") from error
             time.sleep(BUS_PAUSE_S)
+
+    def _answer(self, method: str, params: Params, client: int) -> object:
+        """Carry a client's request out, and have it in the log."""
+        now_s = time.monotonic()
+        try:
+            answer = self.machine.request(method, params, client, now_s)
+        except HobnailError as error:
+            self.chronicle.refused(method, error, client, now_s)
+            raise
+        self.chronicle.taken(method, params if isinstance(params, dict) else {}, client, now_s)
+        return answer
+
+    def _asked(self, text: str, now_s: float, client: int) -> None:
+        self.log.event("command", text, now_s, client=client, peer=self.server.peer(client))
 
     def _describe_driver(self) -> dict[str, object]:
         health = self.bus.health

@@ -8,15 +8,23 @@ from __future__ import annotations
 
 import json
 import os
+import pwd
 import threading
 import time
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Mapping
 from datetime import UTC, datetime
 from pathlib import Path
 from queue import SimpleQueue
+from typing import TYPE_CHECKING
+
+from hobnail.service.states import LOCAL_CLIENT
+
+if TYPE_CHECKING:
+    from hobnail.service.link import Peer
 
 LOG_NAME = "events.log"
 LOG_BYTES = 5_000_000  # then it becomes events.log.1, and a new one is begun
+MEMORY_BYTES = 1_000_000  # the same where the file is kept in memory
 QUEUE_LENGTH = 500
 
 Job = Callable[[], object]
@@ -66,41 +74,93 @@ class EventLog:
     """
 
     def __init__(
-        self, writer: Writer, directory: Path | None, sinks: Iterable[Callable[[str], object]] = ()
+        self,
+        writer: Writer,
+        directory: Path | None,
+        sinks: Iterable[Callable[[str], object]] = (),
+        *,
+        run: str = "",
+        limit_bytes: int = LOG_BYTES,
     ) -> None:
+        """`run` names this life of the service in every line; a file longer than
+        `limit_bytes` becomes events.log.1."""
         self._writer = writer
         self._path = directory / LOG_NAME if directory else None
         self._sinks = tuple(sinks)
+        self._run = run
+        self._limit_bytes = limit_bytes
         self._told = 0
 
-    def event(self, kind: str, text: str, now_s: float) -> None:
-        """Something happened at `now_s` (monotonic)."""
+    def event(
+        self,
+        kind: str,
+        text: str,
+        now_s: float,
+        *,
+        client: int | None = None,
+        peer: Peer | None = None,
+        **details: object,
+    ) -> None:
+        """Something happened at `now_s` (monotonic); `client` is who asked for it, `peer` the
+        process behind that; `details` are added to the line in the file."""
         wall_s = time.time()
         dropped = self._writer.dropped - self._told
-        if self._writer.put(lambda: self._write(kind, text, now_s, wall_s, dropped)):
+        entry = {"kind": kind, "text": text, **details}
+        if client is not None:
+            entry["client"] = client
+        if self._writer.put(lambda: self._write(entry, peer, now_s, wall_s, dropped)):
             self._told += dropped
 
-    def _write(self, kind: str, text: str, now_s: float, wall_s: float, dropped: int) -> None:
-        lines = [(kind, text)]
+    def _write(
+        self, entry: dict[str, object], peer: Peer | None, now_s: float, wall_s: float, dropped: int
+    ) -> None:
+        if peer is not None:
+            entry.update(pid=peer.pid, user=_user(peer.uid))
+        entries = [entry]
         if dropped:
-            lines.insert(
-                0, ("log", f"{dropped} lines were dropped: the log could not be written fast enough")
-            )
+            told = f"{dropped} lines were dropped: the log could not be written fast enough"
+            entries.insert(0, {"kind": "log", "text": told})
         try:
             if self._path is not None:
-                self._append(lines, now_s, wall_s)
+                self._append(self._path, entries, now_s, wall_s)
         finally:
-            for _, line in lines:
+            for each in entries:
                 for sink in self._sinks:
-                    sink(line)
+                    sink(plain(each))
 
-    def _append(self, lines: list[tuple[str, str]], now_s: float, wall_s: float) -> None:
-        assert self._path is not None
+    def _append(self, path: Path, entries: list[dict[str, object]], now_s: float, wall_s: float) -> None:
         stamp = datetime.fromtimestamp(wall_s, UTC).isoformat(timespec="milliseconds")
-        with self._path.open("ab") as file:
-            for kind, text in lines:
-                entry = {"time": stamp, "monotonic_s": round(now_s, 6), "kind": kind, "text": text}
-                file.write(json.dumps(entry).encode() + b"\n")
-            full = file.tell() > LOG_BYTES
+        with path.open("a+b") as file:
+            if file.seek(0, os.SEEK_END):
+                file.seek(-1, os.SEEK_END)
+                if file.read(1) != b"\n":  # cut by a crash or a full disk: no line may be lost with it
+                    file.write(b"\n")
+            for entry in entries:
+                whole = {"time": stamp, "monotonic_s": round(now_s, 6), "run": self._run, **entry}
+                file.write(json.dumps(whole).encode() + b"\n")
+            full = file.tell() > self._limit_bytes
         if full:
-            os.replace(self._path, self._path.with_name(LOG_NAME + ".1"))
+            os.replace(path, path.with_name(LOG_NAME + ".1"))
+
+
+def plain(entry: Mapping[str, object]) -> str:
+    """An entry of the log as one line for people, without its time."""
+    if "client" not in entry:
+        return str(entry["text"])
+    return f"{asker(entry)}: {entry['text']}"
+
+
+def asker(entry: Mapping[str, object]) -> str:
+    """Who asked for what an entry tells, as far as it says."""
+    if entry.get("client") == LOCAL_CLIENT:
+        return "the service itself"
+    known = [f"user {entry['user']}"] if "user" in entry else []
+    known += [f"pid {entry['pid']}"] if "pid" in entry else []
+    return f"client {entry['client']}" + (f" ({', '.join(known)})" if known else "")
+
+
+def _user(uid: int) -> str:
+    try:
+        return pwd.getpwuid(uid).pw_name
+    except KeyError:
+        return str(uid)
