@@ -10,6 +10,7 @@
     |-- CommanderError                somebody else holds the claim to command
     |-- FaultError                    a latched fault forbids the request
     |-- InputEndedError (EOFError)    the answers of a dialogue ended before its questions did
+    |-- RecordError                 there is nothing to read of what the robot did, or it is damaged
     |-- DriverUnavailableError        no such driver, or its library or device is missing
     `-- ServiceError
         |-- ServiceUnavailableError (ConnectionError)   nothing answers on the socket
@@ -127,6 +128,13 @@ class InputEndedError(HobnailError, EOFError):
 
     exit_code = EX_DATAERR
     cause = "input"
+
+
+class RecordError(HobnailError):
+    """What a robot has recorded cannot be found or read."""
+
+    exit_code = EX_NOINPUT
+    cause = "record"
 
 
 class DriverUnavailableError(HobnailError):

@@ -40,6 +40,7 @@ COMMANDS = {
     "off": "lie down, then end the pulses",
     "stop": "emergency stop; latches",
     "reset": "unlatch a stop; moves nothing",
+    "log": "explain afterwards: what was asked, what was sent, what went wrong",
 }
 
 
