@@ -59,6 +59,18 @@ class Health:
     frame_hz: dict[str, float] = field(default_factory=dict)
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Sight:
+    """One board as it was found: `problem` is empty when it can be used, `next` what to do about it;
+    `pulsing`: some output sends pulses now."""
+
+    board: str
+    found: str
+    problem: str = ""
+    next: str = ""
+    pulsing: bool = False
+
+
 CHANNELS = 16  # of one board
 
 
@@ -189,6 +201,13 @@ class Driver(ABC):
         if self._is_open:
             self._is_open = False
             self._close()
+
+    def survey(self) -> tuple[Sight, ...]:
+        """Look at every board without `open`: only read, change nothing; none by default.
+
+        What is wrong with a board is in its sight.  Raises MissingLibraryError.
+        """
+        return ()
 
     def notes(self) -> tuple[str, ...]:
         """Where the boards are, a line each, for the release helper (see `board_notes`); none by default."""

@@ -56,6 +56,19 @@ class GpiodOutputLine(OutputLine):
         self._request.release()
 
 
+def line_user(chip: str, line: int) -> str | None:
+    """Who holds a line, None when it is free; it is not taken.  Raises BusError, MissingLibraryError."""
+    gpiod = load("gpiod", "gpiod")
+    try:
+        with gpiod.Chip(device(chip)) as opened:
+            info = opened.get_line_info(line)
+    except OSError as error:
+        raise line_error(error, chip, line) from error
+    except ValueError as error:  # the library's word for a line that the chip does not have
+        raise line_error(OSError(errno.EINVAL, str(error)), chip, line) from error
+    return (info.consumer or "somebody without a name") if info.used else None
+
+
 OpenLine = Callable[[str, int], OutputLine]
 
 

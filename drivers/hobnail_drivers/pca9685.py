@@ -13,11 +13,12 @@ import time
 from collections.abc import Callable, Sequence
 from contextlib import suppress
 
-from hobnail_drivers.contract import BoardSettings, Driver, Health, Output, Pulses
+from hobnail_drivers.contract import BoardSettings, Driver, Health, Output, Pulses, Sight
 from hobnail_drivers.errors import BusError, DriverError, SetupError
 from hobnail_drivers.gpio import GpiodOutputLine, OpenLine, OutputLine
 from hobnail_drivers.i2c import OpenBus, SmBus, open_bus
 from hobnail_drivers.pca9685_board import Board
+from hobnail_drivers.pca9685_survey import survey
 
 
 class Pca9685Driver(Driver):
@@ -54,6 +55,9 @@ class Pca9685Driver(Driver):
     def frame_hz(self) -> dict[str, float]:
         """The true frame rate of each board, Hz."""
         return {board.settings.name: board.frame_hz for board in self._wired}
+
+    def survey(self) -> tuple[Sight, ...]:
+        return survey(self._wired, self._open_bus)
 
     def notes(self) -> tuple[str, ...]:
         return tuple(f"i2c {board.bus} 0x{board.address:02x}" for board in self.boards)

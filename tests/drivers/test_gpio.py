@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import sys
 from datetime import timedelta
+from types import SimpleNamespace
 from typing import Any
 
 import gpiod
@@ -12,7 +13,7 @@ from gpiod.line import Bias, Direction, Value
 
 from hobnail_drivers.contact import GpioContact, SimulatedContact
 from hobnail_drivers.errors import BusError, MissingLibraryError, NotOpenError
-from hobnail_drivers.gpio import GpiodOutputLine
+from hobnail_drivers.gpio import GpiodOutputLine, line_user
 
 
 class Request:
@@ -114,3 +115,36 @@ def test_a_simulated_contact_is_as_it_is_told() -> None:
     assert contact.is_closed()
     contact.closed = False
     assert not contact.is_closed()
+
+
+class OpenChip:
+    """What `gpiod.Chip` gives: a chip whose line 4 is free, 17 is held, 5 is held by nobody's name."""
+
+    def __init__(self, path: str) -> None:
+        if path != "/dev/gpiochip0":
+            raise FileNotFoundError(2, "No such file or directory")
+
+    def __enter__(self) -> OpenChip:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        pass
+
+    def get_line_info(self, line: int) -> SimpleNamespace:
+        if line > 30:
+            raise ValueError("line offset out of range")
+        return SimpleNamespace(used=line != 4, consumer={17: "hobnail-stop"}.get(line, ""))
+
+
+def test_who_holds_a_line_is_told_without_taking_it(
+    request_: Request, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(gpiod, "Chip", OpenChip)
+    assert line_user("gpiochip0", 4) is None
+    assert line_user("/dev/gpiochip0", 17) == "hobnail-stop"
+    assert line_user("gpiochip0", 5) == "somebody without a name"
+    assert request_.asked == {}
+    with pytest.raises(BusError, match="no such GPIO chip"):
+        line_user("gpiochip9", 4)
+    with pytest.raises(BusError, match="has no such line"):
+        line_user("gpiochip0", 40)
