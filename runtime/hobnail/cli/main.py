@@ -41,6 +41,7 @@ COMMANDS = {
     "stop": "emergency stop; latches",
     "reset": "unlatch a stop; moves nothing",
     "log": "explain afterwards: what was asked, what was sent, what went wrong",
+    "doctor": "look the machine over: what keeps the robot from working, and what to do",
 }
 
 

@@ -27,6 +27,15 @@ def open_driver(name: str, robot: Robot) -> Driver:
     `name` is a name from the entry-point group, or `name:argument`.
     Raises DriverUnavailableError.
     """
+    kind, argument = find_driver(name)
+    try:
+        return make_driver(kind, robot, argument)
+    except DriverError as error:
+        raise DriverUnavailableError(f"driver {name.partition(':')[0]}: {error}") from error
+
+
+def find_driver(name: str) -> tuple[type[Driver], str]:
+    """The class of the driver of that name, and the argument in the name.  Raises DriverUnavailableError."""
     from importlib.metadata import entry_points  # slow to import, and needed only here
 
     key, _, argument = name.partition(":")
@@ -35,9 +44,10 @@ def open_driver(name: str, robot: Robot) -> Driver:
         known = ", ".join(sorted(found)) or "none: the package is not installed"
         raise DriverUnavailableError(f"there is no driver {key!r}; there are: {known}")
     try:
-        return make_driver(found[key].load(), robot, argument)
+        kind: type[Driver] = found[key].load()
     except (ImportError, AttributeError, DriverError) as error:
         raise DriverUnavailableError(f"driver {key}: {error}") from error
+    return kind, argument
 
 
 def make_driver(kind: type[Driver], robot: Robot, argument: str = "") -> Driver:
