@@ -187,3 +187,16 @@ def test_kept_free_no_service_starts_there_and_afterwards_one_does(tmp_path: Pat
     assert not answers(path)  # what is left of a service that has gone does not count
     with kept_free(path):
         pass
+
+
+def test_a_system_directory_that_is_closed_to_this_user_is_where_the_socket_is(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    """So that whoever opens it there is told which group may."""
+
+    class Closed(type(Path())):  # type: ignore[misc]
+        def exists(self) -> bool:
+            raise PermissionError(13, "Permission denied", str(self))
+
+    monkeypatch.setattr(socket_file, "SYSTEM_PATH", Closed("/run/hobnail/hobnail.sock"))
+    assert default_path({}) == Path("/run/hobnail/hobnail.sock")

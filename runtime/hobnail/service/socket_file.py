@@ -31,11 +31,18 @@ def default_path(environ: Mapping[str, str] = os.environ) -> Path:
         return Path(environ["HOBNAIL_SOCKET"])
     if environ.get("RUNTIME_DIRECTORY"):
         return Path(environ["RUNTIME_DIRECTORY"].split(":")[0]) / NAME
-    if SYSTEM_PATH.exists():
+    if _is_there(SYSTEM_PATH):
         return SYSTEM_PATH
     if environ.get("XDG_RUNTIME_DIR"):
         return Path(environ["XDG_RUNTIME_DIR"]) / NAME
     return Path(f"/tmp/hobnail-{os.getuid()}") / NAME
+
+
+def _is_there(path: Path) -> bool:
+    try:
+        return path.exists()
+    except PermissionError:  # a directory that is for others: whoever opens it is told which group
+        return True
 
 
 def listen(path: Path, *, group: str | None = None) -> socket.socket:
