@@ -518,6 +518,20 @@ def test_directories(world: World) -> None:
     assert "systemd-sysusers" in one(service.directories(case))[1]
 
 
+def test_a_service_whose_unit_is_not_known_is_not_judged_by_who_asks(world: World) -> None:
+    """As where the service manager answers root alone."""
+    stranger = User("gardener", 4711, frozenset())
+    case = Case(replace(world, find_user=lambda _: stranger, limit=lambda _: 0), state=snapshot())
+    case.socket = world.path("/run/hobnail/hobnail.sock")
+    assert one(service.directories(case))[0] == "fine"
+    assert one(machine.scheduling(case))[0] == "note"
+    assert list(machine.memory(case)) == []
+    case.state = None
+    grade, text = one(service.directories(case))
+    assert grade == "mend"
+    assert "chown" not in text
+
+
 def test_what_killed_programs_left(world: World) -> None:
     case = Case(world, unit=UNIT)
     assert list(service.leftovers(case)) == []

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import shlex
 from dataclasses import dataclass, field
 from itertools import pairwise
@@ -68,7 +69,7 @@ class Case:
         candidates.append(self.world.path(f"/etc/{self.unit_name}/robot.yaml"))
         # One that the unit names and that is not there has to be told.
         named = candidates[:-1] if self.words else []
-        return next((path for path in candidates if path.exists()), named[-1] if named else None)
+        return next((path for path in candidates if os.path.exists(path)), named[-1] if named else None)
 
     def driver_name(self) -> str:
         """The driver: as named, as running, as the unit has it, or what `hobnail run` takes."""

@@ -74,6 +74,9 @@ def scheduling(case: Case) -> Iterator[Finding]:
                 "`--realtime` in the unit's ExecStart and LimitRTPRIO=50 allow it",
             )
         return
+    if case.state is not None:
+        yield note("real time", "not known: nothing says which process the service is", "run this as root")
+        return
     allowed, who = _allowed(case, "LimitRTPRIO", resource.RLIMIT_RTPRIO)
     if allowed is None or allowed >= FIFO_PRIORITY or (not case.is_installed and _is_root(case)):
         yield fine("real time", f"{who} may use real-time scheduling")
@@ -88,6 +91,8 @@ def scheduling(case: Case) -> Iterator[Finding]:
 
 def memory(case: Case) -> Iterator[Finding]:
     """Memory that may be locked, so that no tick waits for a page."""
+    if case.state is not None and not case.is_installed:
+        return  # what this user may lock says nothing of the service
     allowed, who = _allowed(case, "LimitMEMLOCK", resource.RLIMIT_MEMLOCK)
     if allowed is None or (not case.is_installed and _is_root(case)):
         yield fine("memory", f"{who} may lock all its memory")

@@ -56,7 +56,7 @@ def calibration(case: Case) -> Iterator[Finding]:
         yield note(
             "calibration",
             f"there is no {beside.name}: horns and boards are taken to be as designed",
-            "measure trims, limits and the boards' clock on the bench before it walks",
+            f"`hobnail calibrate {path}`, on the bench, before it walks",
         )
     else:
         yield fine("calibration", f"{beside.name}, last changed {written:%Y-%m-%d %H:%M}")

@@ -21,6 +21,7 @@ from hobnail.workshop.doctor.findings import Finding, fine, mend, note
 from hobnail.workshop.doctor.world import User
 
 LITTLE_BYTES, TOO_LITTLE_BYTES = 200_000_000, 20_000_000  # of free space
+ANYBODY = User("somebody", 0, frozenset())
 _LEFT_OVER = re.compile(r"\.(\d+)|.*\.part|boards\.(\d+)")
 
 
@@ -168,8 +169,10 @@ def directories(case: Case) -> Iterator[Finding]:
     """Where the service writes: writable by its user, and with room."""
     if not case.is_installed:
         folder = case.socket_path().parent
+        # Whose a running service is, is not known here: that it may write there, its socket shows.
+        user = case.world.find_user(None) if case.state is None else ANYBODY
         if folder.is_dir():
-            yield _directory(case, folder, case.world.find_user(None))
+            yield _directory(case, folder, user)
         return
     try:
         user = case.world.find_user(case.unit.get("User") or None)
@@ -203,14 +206,15 @@ def _directory(case: Case, folder: Path, user: User) -> Finding:
         return mend(
             "directories",
             f"{user.name} may not write to {folder} ({stat.filemode(mode)})",
-            f"`chown -R {user.name}: {folder}`",
+            f"`chown -R {user.name}: {folder}`" if case.is_installed else "another place for it: --socket",
         )
     room = f"{free / 1e6:.0f} MB free"
     if free < TOO_LITTLE_BYTES:
         return mend("directories", f"{folder}: {room}: the record cannot be written", "make room there")
     if free < LITTLE_BYTES:
         return note("directories", f"{folder}: {room}", "make room there before it is full")
-    return fine("directories", f"{folder}: {user.name} may write, {room}")
+    who = "" if user is ANYBODY else f"{user.name} may write, "
+    return fine("directories", f"{folder}: {who}{room}")
 
 
 def leftovers(case: Case) -> Iterator[Finding]:

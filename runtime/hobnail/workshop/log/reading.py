@@ -76,7 +76,7 @@ def follow(material: Material) -> None:
     folders = {ring.header["log_dir"] for _, ring in material.rings} - {""}
     paths = [Path(folder) / name for folder in sorted(folders) for name in LOG_NAMES]
     for path in paths:
-        if path in material.sources or not path.exists():
+        if path in material.sources or not os.path.exists(path):
             continue
         try:
             _read_one(path, material)
