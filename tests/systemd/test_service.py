@@ -6,6 +6,7 @@ or the project promises, several times what is seen.
 
 from __future__ import annotations
 
+import json
 import re
 import time
 
@@ -130,6 +131,46 @@ def test_killed_in_mid_walk_every_channel_is_off_within_a_second(board: Board) -
         nothing_moves(board)
     assert took_s < DEAD_MEANS_OFF_S
     assert "all outputs off" in board.journal()
+
+
+def test_after_a_kill_in_mid_walk_the_log_explains_it(board: Board) -> None:
+    with board.walking():
+        end_main(board, "KILL")
+        wait_until(lambda: board.show("NRestarts") == "1", 10, "it is started again")
+        board.wait_active()
+    told = json.loads(board.run("hobnail log --json", user=USER).stdout)
+    (cut,) = told["incident"]["alarms"]
+    assert (cut["kind"], cut["name"]) == ("cut-off", "walking")
+    assert told["incident"]["tick"]["state"] == "walking"
+    asked = [(entry["who"], entry["text"]) for entry in told["entries"] if entry["kind"] == "command"]
+    assert any(f"user {USER}" in who and text.startswith("walk +0.100 m/s") for who, text in asked)
+    folders = {source.rpartition("/")[0] for source in told["sources"]}
+    assert folders >= {"/run/hobnail", "/var/log/hobnail", "/var/lib/hobnail/recordings"}
+    board.run("useradd -m stranger")
+    refused = board.run("hobnail log", user="stranger", check=False)
+    assert refused.returncode == errors.EX_NOPERM, refused.stderr
+    assert "usermod -aG hobnail" in refused.stderr
+
+
+def test_doctor_finds_a_healthy_service_and_what_is_wrong_with_a_broken_one(board: Board) -> None:
+    for user in ("root", USER):
+        told = json.loads(board.run("hobnail doctor --json", user=user).stdout)["findings"]
+        assert [each for each in told if each["grade"] == "mend"] == []
+        words = {each["subject"]: each["text"] for each in told}
+        assert "is off, nobody commands it" in words["socket"]
+        assert CONFIG in words["configuration"]
+        if user == "root":  # systemd answers no other user without a message bus, which is not installed here
+            is_on = "real-time scheduling: on" in board.journal()
+            assert "is active, enabled" in words["unit"]
+            assert words["real time"].startswith(f"the service runs with{'' if is_on else 'out'} real-time")
+    board.run("systemctl stop hobnail")
+    board.edit(CONFIG, *BROKEN)
+    fails_to_start(board)
+    done = board.run("hobnail doctor --json", check=False)
+    assert done.returncode == errors.EX_CONFIG
+    mends = [each for each in json.loads(done.stdout)["findings"] if each["grade"] == "mend"]
+    assert {each["subject"] for each in mends} == {"unit", "configuration"}
+    assert "the configuration is wrong" in mends[0]["text"]
 
 
 def test_hung_the_watchdog_ends_it_and_the_pulses(board: Board) -> None:
