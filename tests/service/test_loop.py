@@ -600,6 +600,19 @@ def test_a_stop_that_is_reset_before_the_next_tick_is_logged(tmp_path: Path) -> 
     assert log == ["off -> waking", "waking -> stopped: a shout (client 1)", "stopped -> off"]
 
 
+def test_a_fault_is_logged_before_the_states_that_it_leads_to(tmp_path: Path) -> None:
+    writer = Writer("test")
+    stage = Stage(log=EventLog(writer, tmp_path))
+    stage.machine.request("stand", {}, 1, stage.now_s)
+    stage.run(0.1)
+    stage.machine.report("settings-lost", stage.now_s, "MODE1 is 0x11")
+    stage.run(0.1)
+    assert writer.close(WAIT_S)
+    log = [json.loads(line)["text"] for line in (tmp_path / LOG_NAME).read_text().splitlines()]
+    assert log[1].startswith("fault settings-lost (cut): MODE1 is 0x11; next: ")
+    assert log[2:] == ["waking -> stopped: fault settings-lost"]
+
+
 def test_a_log_that_stalls_for_seconds_leaves_every_tick_on_time(tmp_path: Path) -> None:
     begun, let_go = Event(), Event()
 

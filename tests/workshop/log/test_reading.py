@@ -145,6 +145,13 @@ def test_damage_anywhere_in_a_log_costs_the_lines_that_it_hits(
     assert len(read_bytes(path, hurt).events) >= len(lines) - 1 - hit
 
 
+def test_damaged_lines_in_the_middle_are_told(record: Path, tmp_path: Path) -> None:
+    first, *rest = (record / LOG_NAME).read_bytes().splitlines(keepends=True)
+    material = read_bytes(tmp_path / LOG_NAME, b"".join([first, b"{?}\n", b"\n", *rest]))
+    assert len(material.events) == 1 + len(rest)
+    assert material.notes == [f"{tmp_path / LOG_NAME}: 1 damaged lines are left out"]
+
+
 def test_a_log_in_another_directory_is_found_by_the_ring(tmp_path: Path) -> None:
     life = Life(tmp_path)
     life.stand()

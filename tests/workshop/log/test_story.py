@@ -120,6 +120,8 @@ def test_a_program_that_was_killed_in_mid_walk_is_an_incident(tmp_path: Path) ->
     assert "its last state is walking" in cut.text
     found = incident(tmp_path)
     assert found.cause == cut
+    assert found.over is not None
+    assert (found.over.run, found.over.kind) == ("second", "start")
     row = tick_at(told(tmp_path)[0], cut)
     assert row is not None
     assert row.state == "walking"
@@ -146,6 +148,21 @@ def test_lying_down_without_being_asked_has_its_reason(tmp_path: Path) -> None:
     assert f"standing -> lowering: no command for {juniper().safety.idle_rest_s:g} s" in states
     assert "lowering -> rising" in states
     assert states[-1] == "standing -> lowering: SIGTERM"
+
+
+def test_a_stop_on_the_way_down_is_its_own_reason(tmp_path: Path) -> None:
+    life = Life(tmp_path)
+    life.stand()
+    life.rig.machine.power_down(reason="no command for 300 s")
+    life.go(0.1)
+    life.ask("stop", 2, category=0, reason="smoke")
+    life.ask("reset", 2)
+    life.go(0.1)
+    assert texts(told(tmp_path)[1], "state", "stop")[-3:] == [
+        "standing -> lowering: no command for 300 s",
+        "lowering -> stopped, a stop of category 0: smoke (client 2)",
+        "stopped -> off",
+    ]
 
 
 def test_skipped_ticks_are_counted_from_the_rows_and_told_together(tmp_path: Path) -> None:
