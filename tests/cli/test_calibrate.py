@@ -18,6 +18,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from command_line import hobnail, subprocess_environment
+from fast_service import FastService
 from hobnail.cli import calibrate
 from hobnail.cli.main import main
 from hobnail.config import load_robot
@@ -220,6 +221,34 @@ def test_the_service_holds_the_robot(config: str, answer: Answer, bench: BenchRo
     assert f"service answers on {path}, and two programs must not drive the servos" in err
     assert "systemctl stop hobnail" in err
     assert bench.driver.writes == 0
+
+
+def test_a_service_elsewhere_that_drives_this_robot_holds_it_too(
+    config: str,
+    answer: Answer,
+    bench: BenchRobot,
+    tmp_path: Path,
+    monkeypatch: pytest.MonkeyPatch,
+    capsys: Output,
+) -> None:
+    """The system's, while $HOBNAIL_SOCKET says otherwise; that of another robot is left alone."""
+    answer("yes\nno\n")
+    with FastService(tmp_path) as running:
+        monkeypatch.setattr(socket_file, "SYSTEM_PATH", running.path)
+        assert main(["calibrate", config, "--joint", ROLL]) == 69
+        assert "a service drives juniper already" in capsys.readouterr().err
+        other = Path(config).read_text().replace("name: juniper", "name: sorrel")
+        Path(config).write_text(other)
+        assert main(["calibrate", config, "--joint", ROLL]) == 0
+    assert bench.driver.writes == 0
+
+
+def test_with_no_input_at_all_it_ends(
+    config: str, bench: BenchRobot, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(sys, "stdin", None)  # as it is when descriptor 0 is closed
+    assert main(["calibrate", config, "--joint", ROLL]) == 65
+    assert bench.awake == []
 
 
 def test_while_it_calibrates_no_service_starts_and_nobody_else_calibrates(

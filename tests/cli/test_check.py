@@ -7,6 +7,7 @@ from dataclasses import replace
 
 import pytest
 
+from hobnail.cli.check import trimmed
 from hobnail.cli.main import main
 from hobnail.workshop import check as module
 from hobnail.workshop.check import Check, Look, check, zero_moment_margin
@@ -134,3 +135,22 @@ def test_problems_as_json(capsys: Output, tmp_path: object) -> None:
     told = json.loads(capsys.readouterr().out)
     assert told["ok"] is False
     assert told["problems"][0]["found"] == "no such file"
+
+
+def test_speeds_are_those_of_the_feet_and_what_they_truly_are_is_told() -> None:
+    assert trimmed(juniper()) == []
+    walk = replace(juniper().walk, ahead=(0.94, 0.012, -0.02))
+    first, ahead, *_ = trimmed(replace(juniper(), walk=walk))
+    assert first == "  trimmed   speeds here are those of the feet; by measured walks they are truly:"
+    assert ahead == "            a metre ahead by the feet: +940 mm ahead, +12 mm left, -1.1 deg"
+
+
+def test_the_envelope_is_walked_by_the_feet_whatever_the_floor_makes_of_it(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    """A trim changes nothing of reach, servo speed and balance."""
+    monkeypatch.setattr(module, "_border", lambda robot: [(robot.envelope.forward_m_s, 0.0, 0.0)])
+    monkeypatch.setattr(module, "_warnings", lambda *_: [])
+    plain = replace(juniper(), gaits=juniper().gaits[:1])
+    walk = replace(juniper().walk, ahead=(0.8, 0.05, -0.1))
+    assert check(replace(plain, walk=walk)).gaits[0].walks == check(plain).gaits[0].walks

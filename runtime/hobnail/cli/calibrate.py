@@ -320,18 +320,20 @@ def _session(
 
 
 def refuse_other_services(robot: Robot, socket_path: Path) -> None:
-    """Several services may run on one computer; none may hold this robot.  Raises ServiceError."""
+    """Several services may run on one computer; none may hold this robot.
+
+    Raises ServiceError, OSError where that cannot be found out.
+    """
     from hobnail.service.client import Client
-    from hobnail.service.socket_file import NAME, SYSTEM_PATH
+    from hobnail.service.socket_file import NAME, SYSTEM_PATH, answers
 
     places = {SYSTEM_PATH, *Path("/run").glob(f"hobnail*/{NAME}")} - {socket_path}
     for path in sorted(places):
-        try:
-            with Client(path) as client:
-                held = client.state().get("robot") == robot.name
-        except ServiceError:
+        if not answers(path):
             continue
-        if held:
+        with Client(path) as client:
+            held = client.state().get("robot")
+        if held == robot.name:
             raise ServiceError(
                 f"a service drives {robot.name} already, on {path}: end it first, with `systemctl stop`"
             )

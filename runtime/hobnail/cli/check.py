@@ -10,8 +10,10 @@ from typing import TYPE_CHECKING
 
 from hobnail.cli.options import Parser, add_json, print_json
 from hobnail.errors import ConfigError
+from hobnail.response import AS_MADE
 
 if TYPE_CHECKING:
+    from hobnail.robot import Robot
     from hobnail.workshop.check import Check
 
 
@@ -97,6 +99,7 @@ def lines(found: Check) -> list[str]:
         f"ahead, {found.standing_margin_m * 1000:.0f} mm inside the feet",
         f"  envelope  {envelope.forward_m_s:g} m/s ahead, {envelope.sideways_m_s:g} m/s sideways, "
         f"{math.degrees(envelope.turn_rad_s):.1f} deg/s",
+        *trimmed(robot),
         "",
         "  gait        ahead  sideways     turn   of the    fastest    least",
         "                m/s       m/s    deg/s  envelope    joint   margin",
@@ -114,3 +117,13 @@ def lines(found: Check) -> list[str]:
         "  least margin: zero-moment point inside the feet on the ground; two feet are a line, with none",
     ]
     return told + [f"warning: {warning}" for warning in found.warnings]
+
+
+def trimmed(robot: Robot) -> list[str]:
+    """What measured walks say that the speeds of the feet truly are; nothing where there were none."""
+    if robot.walk == AS_MADE:
+        return []
+    from hobnail.workshop.trim import in_words
+
+    told = ["speeds here are those of the feet; by measured walks they are truly:", *in_words(robot.walk)]
+    return [f"  {'trimmed' if number == 0 else '':<9} {line}" for number, line in enumerate(told)]

@@ -7,6 +7,7 @@ as a record.
 from __future__ import annotations
 
 import contextlib
+import io
 import shutil
 import signal
 import sys
@@ -28,8 +29,9 @@ class Dialogue:
     """Tells on stdout and asks on stdin."""
 
     def __init__(self) -> None:
-        self._source: IO[Any] = getattr(sys.stdin, "buffer", sys.stdin)
-        self._echo = not sys.stdin.isatty()
+        source = sys.stdin or io.StringIO()  # there is none where it was closed
+        self._source: IO[Any] = getattr(source, "buffer", source)
+        self._echo = not source.isatty()
 
     def say(self, text: str) -> None:
         """Tell."""

@@ -37,7 +37,7 @@ from hobnail.robot import Board, Joint, Robot, Span, Vec2, Vec3
 
 VERSION = 1
 MAX_CHANGES = 5000
-WALK = "walk"  # the part that is the whole robot; a joint's name has a dot
+WALK = "the walk"  # the part that is the whole robot; no joint or board can be called so
 
 JOINT = (
     Field("trim_deg", "trim_rad", TRIM, "Measured error of the horn's seat.", required=False),

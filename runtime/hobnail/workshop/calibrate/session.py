@@ -35,8 +35,9 @@ CAUTION = (
     "The robot must be on a stand, its feet clear of everything and its body level; hands, hair and leads "
     "out of the legs. Have a switch in the servo supply within reach: this program is no substitute for it.\n"
     "One joint at a time gets pulses. Its first one cannot be made gentle, for a servo does not tell where "
-    "it stands: fold each leg to about its rest posture by hand before, and the jump is small. After that it "
-    "moves slowly, when you say so. Ctrl-C ends the pulses at once.\n"
+    "it stands: fold each leg to about its rest posture by hand before, and the jump is small; a joint whose "
+    "direction was never measured may go the other way. After that it moves slowly, when you say so. Ctrl-C "
+    "ends the pulses at once.\n"
     "Answers: a few first letters will do; skip leaves out a step, quit ends; what was kept stays kept."
 )
 
