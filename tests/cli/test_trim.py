@@ -115,6 +115,7 @@ def test_answers_that_end_anywhere_keep_nothing(
             ["--ahead", "300", "--measured", "300", "0", "0"],
             "the way ahead is 300 mm; allowed: 500 mm or",
         ),
+        (["--ahead", "300", "--walk"], "the way ahead is 300 mm; allowed: 500 mm or"),
         (["--ahead", "2000", "--measured", "1000", "0", "0"], "a trim allows 700 to 1400 mm"),
         (["--turn", "30", "--measured", "30"], "the turn is 30 deg; allowed: 90 deg or more"),
         (["--turn", "360", "--measured", "0"], "by this walk, for a full turn by the feet"),
@@ -151,7 +152,7 @@ def service(tmp_path: Path, config: str, monkeypatch: pytest.MonkeyPatch) -> Ite
 
 
 def test_the_running_robot_walks_and_its_odometry_counts(
-    config: str, service: FastService, monkeypatch: pytest.MonkeyPatch
+    config: str, service: FastService, monkeypatch: pytest.MonkeyPatch, capsys: Output
 ) -> None:
     """The tape says 5 per cent less than the odometry."""
     asked: list[str] = []
@@ -167,6 +168,7 @@ def test_the_running_robot_walks_and_its_odometry_counts(
     main(["stand"])
     assert main(["trim", config, "--ahead", "1000", "--walk"]) == 0
     assert "It walks now, for about 8 s. Is the way free?" in asked[0]
+    assert "By its odometry: +" in capsys.readouterr().out
     found = load_robot(config).walk.ahead
     assert found[0] == pytest.approx(0.95, abs=1e-4)
     assert found[1:] == pytest.approx((0.0, 0.0), abs=1e-4)

@@ -36,6 +36,7 @@ from hobnail.config.calibration import (
     Calibration,
     Change,
     JointCalibration,
+    WalkCalibration,
     interpret,
     render,
 )
@@ -250,7 +251,8 @@ def measured(robot: Robot) -> Calibration:
         Change(when=f"2026-03-0{day}T14:30:00Z", who="bench", what="a.roll trim_deg", old="0", new="-1.2")
         for day in range(1, 4)
     )
-    return Calibration(robot=robot.name, joints=joints, boards=boards, history=history)
+    walk = WalkCalibration(ahead=(0.94, 0.012, -0.03), sideways=(0.02, 1.05, 0.1), turn=0.97)
+    return Calibration(robot=robot.name, joints=joints, boards=boards, walk=walk, history=history)
 
 
 def check_problems(problems: Sequence[Problem], file: Path, data: bytes) -> None:

@@ -15,7 +15,7 @@ from hobnail.motion.planar import Pose
 from hobnail.response import relative
 from hobnail.robot import Robot
 from hobnail.workshop.calibrate.effects import Ask, shown
-from hobnail.workshop.trim import KINDS, Walk
+from hobnail.workshop.trim import KINDS, Walk, check_walk
 
 UNITS = {"ahead": "mm", "sideways": "mm", "turn": "deg"}
 SPEED = 0.5  # of the envelope, for a walk of its own
@@ -30,7 +30,8 @@ HOW = (
 def measured_walk(arguments: Namespace, robot: Robot) -> Walk:
     """The walk as odometry and tape have it, from the options, the running robot and what is answered.
 
-    Raises InputEndedError, StateError (a robot that cannot walk now), ServiceError.
+    Raises InputEndedError, CommandError (too short a walk), StateError (the robot cannot walk
+    now), ServiceError.
     """
     kind = next((kind for kind in KINDS if getattr(arguments, kind) is not None), None)
     if kind is not None and arguments.measured:
@@ -42,6 +43,7 @@ def measured_walk(arguments: Namespace, robot: Robot) -> Walk:
     else:
         size = getattr(arguments, kind)
     odometry = _along(kind, size)
+    check_walk(Walk(kind, odometry, odometry))
     if arguments.walk:
         if kind != "turn":
             dialogue.say(HOW)
@@ -69,15 +71,17 @@ def _walked(arguments: Namespace, robot: Robot, dialogue: Dialogue, kind: str, w
                 f"the robot is {state.get('state')}, and must be standing: `hobnail stand` first"
             )
         twist, time_s = _command(robot, kind, wanted)
-        if dialogue.ask(
-            Ask("walk", f"It walks now, for about {time_s:.0f} s. Is the way free?", ("yes", "no"))
-        ).strip().lower() not in ("y", "yes"):
+        free = Ask("walk", f"It walks now, for about {time_s:.0f} s. Is the way free?", ("yes", "no"))
+        if dialogue.ask(free).lower() not in ("y", "yes"):
             raise StateError("nothing was walked, and nothing kept")
         before = _told_pose(state)
         after = _told_pose(stream(client, twist, (0.0, 0.0), time_s))
     moved: Pose = relative(before, after)
-    turned = moved[2] + math.tau * round((twist[2] * time_s - moved[2]) / math.tau)
-    return moved[0], moved[1], turned
+    dialogue.say(
+        f"By its odometry: {1000 * moved[0]:+.0f} mm ahead, {1000 * moved[1]:+.0f} mm left, turned "
+        f"{math.degrees(moved[2]):+.1f} deg."
+    )
+    return moved
 
 
 def _command(robot: Robot, kind: str, wanted: Pose) -> tuple[Pose, float]:

@@ -50,7 +50,7 @@ def improved(response: WalkResponse, walk: Walk) -> WalkResponse:
     leave what the others gave as it is.  Raises CommandError for a walk that
     cannot be used and a result that no good robot has.
     """
-    _check(walk)
+    check_walk(walk)
     number = KINDS.index(walk.kind)
     said, true = _twist(walk.kind, walk.odometry), _twist(walk.kind, walk.true)
     feet = feet_twist(response, said)[number]
@@ -74,7 +74,8 @@ def _twist(kind: str, pose: Pose) -> Twist:
     return (0.0, 0.0, pose[2]) if kind == "turn" else log_pose(pose)
 
 
-def _check(walk: Walk) -> None:
+def check_walk(walk: Walk) -> None:
+    """Raises CommandError for a walk in which an error could not be seen, and one that is not straight."""
     if walk.kind == "turn":
         if abs(walk.odometry[2]) < LEAST_RAD:
             raise CommandError(
