@@ -42,6 +42,14 @@ def test_the_same_rehearsal_gives_the_same_bits() -> None:
     assert other.odometry_error_m != first.odometry_error_m
 
 
+def test_what_the_robot_s_own_floor_makes_of_its_steps_is_no_part_of_these_physics() -> None:
+    robot = burdock()
+    trimmed = replace(robot, walk=replace(robot.walk, ahead=(0.8, 0.1, -0.2)))
+    plain, other = (run(each, walking(robot, 0.05, duration_s=1.0)) for each in (robot, trimmed))
+    assert (plain.pose == other.pose).all()
+    assert (plain.true_position_m == other.true_position_m).all()
+
+
 def test_a_category_1_stop_plants_crouches_and_cuts() -> None:
     robot = burdock()
     recording = run(robot, scenario("emergency-1", robot))
