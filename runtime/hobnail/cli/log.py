@@ -84,6 +84,7 @@ class Told:
     runs: list[Run]
     entries: list[Entry]  # all of them, not folded
     shown: list[Entry]  # chosen and folded
+    hidden: int  # how many of all were not chosen
     incident: Incident | None
     first_s: float  # wall clock, the earliest that was asked for; -inf: no time was
 
@@ -128,7 +129,8 @@ def _told(arguments: Namespace) -> Told:
         chosen = [entry for entry in entries if entry.wall_s >= first_s]
     else:
         chosen = incident.around(entries, happened)
-    return Told(material, found, entries, story.fold(chosen), happened, first_s)
+    hidden = len(entries) - len(chosen)
+    return Told(material, found, entries, story.fold(chosen), hidden, happened, first_s)
 
 
 def _first_s(arguments: Namespace, entries: Sequence[Entry]) -> float:

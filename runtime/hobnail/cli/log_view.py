@@ -7,7 +7,6 @@ from __future__ import annotations
 
 import math
 import textwrap
-from collections.abc import Iterable
 from typing import TYPE_CHECKING
 
 from hobnail.cli.view import PLAIN, STYLES, duration, printable
@@ -18,7 +17,6 @@ if TYPE_CHECKING:
     from hobnail.cli.log import Told
     from hobnail.service.recorder import Row
     from hobnail.workshop.log.runs import Run
-    from hobnail.workshop.log.story import Entry
 
 INDENT = 14  # of what follows a time
 LABEL = 11
@@ -121,19 +119,11 @@ def _story(page: _Page, told: Told) -> None:
             page.add(f"next: {entry.next}", indent=INDENT, first="", style="dim")
     if not told.shown:
         page.add("nothing is recorded of that time; --all shows all")
-    hidden = len(told.entries) - sum(1 for entry in told.entries if _is_shown(entry, told.shown))
-    if hidden and told.shown:
+    if told.hidden and told.shown:
         page.add(
-            f"{hidden} lines of other times are not shown: --all, --last SECONDS, --since TIME", style="dim"
+            f"{told.hidden} lines of other times are not shown: --all, --last SECONDS, --since TIME",
+            style="dim",
         )
-
-
-def _is_shown(entry: Entry, shown: Iterable[Entry]) -> bool:
-    return any(
-        each.run == entry.run
-        and each.wall_s <= entry.wall_s <= (each.until_s if math.isfinite(each.until_s) else each.wall_s)
-        for each in shown
-    )
 
 
 def _tick(page: _Page, told: Told) -> None:
