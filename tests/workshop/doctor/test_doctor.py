@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import errno
+import os
 import resource
 import shutil
 import subprocess
@@ -17,6 +18,7 @@ import pytest
 from hobnail.config import load_robot
 from hobnail.errors import DriverUnavailableError, ServiceTimeoutError, ServiceUnavailableError
 from hobnail.robot import Robot, StopInput
+from hobnail.service.socket_file import kept_free
 from hobnail.workshop.doctor import machine, robot, service
 from hobnail.workshop.doctor.case import Case
 from hobnail.workshop.doctor.examination import findings
@@ -498,6 +500,23 @@ def test_no_socket(world: World) -> None:
     assert case.is_mute
     world.path("/run/hobnail/hobnail.sock").write_text("no socket")
     assert "remove it" in one(service.answer(case))[1]
+
+
+def test_while_another_program_calibrates_the_boards_are_left_alone(world: World) -> None:
+    """By the real lock and the kernel's real list of locks."""
+    case = loaded(replace(world, find_driver=lambda _: (RealBoards, "")))
+    world.path("/proc").mkdir()
+    locks = world.path("/proc/locks")
+    with kept_free(world.path("/run/hobnail/hobnail.sock")):
+        locks.write_text(Path("/proc/locks").read_text())
+        assert [grade for grade, _ in told(service.answer(case), "socket")] == ["note", "fine"]
+        assert case.busy_process == os.getpid()
+        assert one(robot.boards(case)) == (
+            "note", f"not looked at: process {os.getpid()} may hold them | see socket, above"
+        )  # fmt: skip
+    locks.write_text(Path("/proc/locks").read_text())
+    assert [grade for grade, _ in told(service.answer(case), "socket")] == ["fine"]
+    assert one(robot.boards(case))[0] == "fine"
 
 
 def test_directories(world: World) -> None:

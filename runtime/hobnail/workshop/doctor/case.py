@@ -29,6 +29,7 @@ class Case:
     state: dict[str, Any] | None = None  # what the running service says
     described: dict[str, Any] | None = None
     is_mute: bool = False  # something is on the socket, or the unit is active, and it does not answer
+    busy_process: int | None = None  # it starts as the service, or calibrates: the boards are its
     robot: Robot | None = None
     is_hardware: bool = False  # the driver is one of real boards
 

@@ -128,6 +128,9 @@ def boards(case: Case) -> Iterator[Finding]:
         told = f"not looked at: the service holds them; it says {rates or 'nothing of them'}"
         yield fine("boards", f"{told}, {about.get('frames', 0)} frames sent")
         return
+    if case.busy_process is not None:
+        yield note("boards", f"not looked at: process {case.busy_process} may hold them", "see socket, above")
+        return
     if case.is_mute:
         yield note(
             "boards",

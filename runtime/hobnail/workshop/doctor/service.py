@@ -86,6 +86,13 @@ def _activity(case: Case, name: str, found: dict[str, str]) -> Finding:
 def answer(case: Case) -> Iterator[Finding]:
     """The socket: there, answering, and what the robot says of itself."""
     path = case.socket_path()
+    case.busy_process = _starting_or_calibrating(case, path.parent)
+    if case.busy_process is not None:
+        yield note(
+            "socket",
+            f"process {case.busy_process} starts as the service, or calibrates: it has locked {path.parent}",
+            "look again when it is done",
+        )
     try:
         kind = os.lstat(path).st_mode
     except FileNotFoundError:
@@ -110,6 +117,21 @@ def answer(case: Case) -> Iterator[Finding]:
         yield _mute(case, path, error)
         return
     yield from _well(case, path)
+
+
+def _starting_or_calibrating(case: Case, folder: Path) -> int | None:
+    """The process that holds the lock on the socket's directory, by proc(5): to try the lock would hold
+    up a start at that very moment."""
+    try:
+        status = folder.stat()
+        locks = case.world.path("/proc/locks").read_text().splitlines()
+    except OSError:
+        return None
+    place = f"{os.major(status.st_dev):02x}:{os.minor(status.st_dev):02x}:{status.st_ino}"
+    for words in map(str.split, locks):
+        if len(words) == 8 and words[1] == "FLOCK" and words[3] == "WRITE" and words[5] == place:
+            return int(words[4])
+    return None
 
 
 def _mute(case: Case, path: Path, error: HobnailError) -> Finding:
