@@ -4,21 +4,27 @@ from __future__ import annotations
 
 import csv
 import json
+import math
 import os
 import signal
 import socket
+import struct
 import subprocess
 import sys
+import zlib
 from pathlib import Path
 
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from command_line import subprocess_environment
 from hobnail.cli.main import main
 from hobnail.service.archive import RECORDINGS
-from hobnail.service.recorder import RING_NAME
+from hobnail.service.recorder import HEADER_BYTES, RING_NAME, _row_struct
 from hobnail.service.writer import LOG_NAME
 from hobnail.workshop.log import places
+from robots import examples
 from workshop.log.records import Life
 
 Output = pytest.CaptureFixture[str]
@@ -211,6 +217,39 @@ def test_a_damaged_part_is_told_and_the_rest_is_read(tmp_path: Path, capsys: Out
     assert "its last line is cut off" in out
     assert "bytes are cut off its end" in out
     assert "smoke at a knee" in out
+
+
+@given(
+    row=st.integers(0, 3),
+    numbers=st.dictionaries(
+        st.integers(1, 40), st.sampled_from([math.nan, math.inf, -1e38, 1e38, 0.0]), min_size=1
+    ),
+    time_s=st.sampled_from([math.nan, math.inf, -1e300, 1e300, 0.0]) | st.none(),
+)
+@examples(60)
+def test_numbers_that_make_no_sense_are_no_bug(
+    row: int, numbers: dict[int, float], time_s: float | None, tmp_path_factory: pytest.TempPathFactory
+) -> None:
+    """Rows with a right checksum, whatever is in them."""
+    directory = tmp_path_factory.mktemp("odd")
+    life = Life(directory)
+    life.stand()
+    life.recorder.close()
+    path = directory / RING_NAME
+    data = bytearray(path.read_bytes())
+    form = _row_struct(12)
+    start = HEADER_BYTES + row * (form.size + 4)
+    values = list(form.unpack_from(data, start))
+    for index, value in numbers.items():
+        if index < len(values) and index not in (3, 4):  # bits and state are whole numbers
+            values[index] = value
+    if time_s is not None:
+        values[1] = time_s
+    packed = form.pack(*values)
+    data[start : start + form.size + 4] = packed + struct.pack("<I", zlib.crc32(packed))
+    path.write_bytes(data)
+    for words in (["--json"], ["--csv", os.devnull], ["--all"]):
+        assert main(["log", str(path), *words]) == 0
 
 
 def test_where_a_service_keeps_it() -> None:

@@ -6,6 +6,7 @@ changes; what the wall clock showed then is worked out from the lines nearby.
 
 from __future__ import annotations
 
+import math
 from bisect import bisect_right
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
@@ -100,5 +101,9 @@ def _add_rows(run: Run, ring: Ring) -> None:
     run.header = run.header or ring.header
     if ring.header["joints"] != run.header["joints"]:
         return  # of a robot with other joints under the same name: no table holds both
-    rows = {row.number: row for row in run.rows} | {row.number: row for row in ring.rows}
+    rows = {row.number: row for row in run.rows}
+    # A checksum keeps no nonsense out that was written with it.
+    rows |= {
+        row.number: row for row in ring.rows if math.isfinite(row.time_s + row.lateness_us + row.slowdown)
+    }
     run.rows = sorted(rows.values(), key=lambda row: row.number)
