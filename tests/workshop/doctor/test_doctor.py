@@ -507,14 +507,15 @@ def test_while_another_program_calibrates_the_boards_are_left_alone(world: World
     case = loaded(replace(world, find_driver=lambda _: (RealBoards, "")))
     world.path("/proc").mkdir()
     locks = world.path("/proc/locks")
+    another = "1: FLOCK  ADVISORY  WRITE 4711 00:01:1 0 EOF\n"
     with kept_free(world.path("/run/hobnail/hobnail.sock")):
-        locks.write_text(Path("/proc/locks").read_text())
+        locks.write_text(another + Path("/proc/locks").read_text())
         assert [grade for grade, _ in told(service.answer(case), "socket")] == ["note", "fine"]
         assert case.busy_process == os.getpid()
         assert one(robot.boards(case)) == (
             "note", f"not looked at: process {os.getpid()} may hold them | see socket, above"
         )  # fmt: skip
-    locks.write_text(Path("/proc/locks").read_text())
+    locks.write_text(another + Path("/proc/locks").read_text())
     assert [grade for grade, _ in told(service.answer(case), "socket")] == ["fine"]
     assert one(robot.boards(case))[0] == "fine"
 
