@@ -20,6 +20,8 @@ from hobnail.errors import CommandError
 from hobnail.motion.planar import Pose, Twist, compose, exp_twist
 from hobnail.response import AS_MADE, feet_twist, log_pose, relative, true_twist
 from hobnail.robot import Robot, WalkResponse
+from hobnail.service.route import RouteRunner
+from hobnail.service.route_steps import Move
 from hobnail.workshop.trim import KINDS, Walk, improved, in_words
 from robots import examples, juniper
 
@@ -116,6 +118,7 @@ class Plant:
             self.pose = compose(self.pose, exp_twist(*true_twist(self.truly, step), 1.0))
             self._by_feet = made.pose
             self.odometry = tick.pose
+            self.tick = tick
         return tick.settled
 
 
@@ -158,6 +161,28 @@ def test_trimmed_it_goes_as_commanded() -> None:
     assert moved[0] == pytest.approx(0.1 * 400 * plant.period_s, abs=sway)
     assert moved[1] == pytest.approx(0.0, abs=sway)
     assert moved[2] == pytest.approx(0.0, abs=1e-3)
+
+
+def test_a_route_truly_ends_where_it_leads() -> None:
+    """800 mm along an arc of 40 degrees, on a floor that untrimmed leads somewhere else."""
+    step = Move(twist=(0.8, 0.0, math.radians(40.0)))
+    wanted = exp_twist(*step.twist, 1.0)
+    offs = []
+    for response in (AS_MADE, trimmed(1)):
+        robot = replace(juniper(), walk=response)
+        plant, runner = Plant(robot, TRUE), RouteRunner([step], robot)
+        plant.go(1)
+        while not runner.done:
+            plant.command(runner.update(plant.tick, plant.period_s).twist)
+            plant.go(1)
+        assert runner.failure == ""
+        x, y, yaw = relative(wanted, plant.pose)
+        offs.append((math.hypot(x, y), abs(yaw)))
+    (before_m, before_rad), (after_m, after_rad) = offs
+    assert before_m > 0.05
+    assert before_rad > 0.01
+    assert after_m < 0.004
+    assert after_rad < 0.004
 
 
 @pytest.mark.parametrize(

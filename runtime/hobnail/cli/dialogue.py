@@ -22,7 +22,7 @@ from hobnail.workshop.calibrate.effects import Ask
 
 LONGEST_ANSWER = 1000  # bytes; the rest of a line is dropped
 WIDEST = 100
-ENDING = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
+ENDING = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP, signal.SIGQUIT)
 
 
 class Dialogue:
@@ -73,7 +73,7 @@ def wrapped(line: str) -> str:
 
 @contextlib.contextmanager
 def ended_by_signals() -> Iterator[None]:
-    """The first SIGINT, SIGTERM or SIGHUP ends what is inside, by an exception; further ones are
+    """The first of the signals that end a program ends what is inside, by an exception; further ones are
     ignored, so that none keeps it from ending its pulses."""
     if threading.current_thread() is not threading.main_thread():
         yield
