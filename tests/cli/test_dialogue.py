@@ -50,7 +50,12 @@ def test_long_lines_are_wrapped_and_keep_their_indent(monkeypatch: pytest.Monkey
 
 @pytest.mark.parametrize(
     ("number", "end"),
-    [(signal.SIGINT, KeyboardInterrupt), (signal.SIGTERM, SystemExit), (signal.SIGHUP, SystemExit)],
+    [
+        (signal.SIGINT, KeyboardInterrupt),
+        (signal.SIGTERM, SystemExit),
+        (signal.SIGHUP, SystemExit),
+        (signal.SIGQUIT, SystemExit),
+    ],
 )
 def test_the_first_signal_ends_it_and_the_next_do_not_disturb(
     number: signal.Signals, end: type[BaseException]
