@@ -15,6 +15,7 @@ from hobnail.errors import HobnailError
 from hobnail.robot import Robot
 
 SPEED_M_S = 0.15
+EASE_S = 0.3  # after the last foot is down, for the body to come back over its feet
 MOVING: dict[str, dict[str, object]] = {
     "walk": {"vx": SPEED_M_S},
     "stand": {},
@@ -166,6 +167,12 @@ def still(world: World, seconds: float) -> None:
     world.witness.look()
     moved_us = world.witness.moved_us
     assert moved_us == 0.0, f"the servos moved by {moved_us:.1f} us in all"
+
+
+def still_once_eased(world: World, seconds: float) -> None:
+    """The same, after the time in which the body comes back over its feet, once the last is down."""
+    world.run(EASE_S)
+    still(world, seconds)
 
 
 def moves(world: World, seconds: float) -> None:

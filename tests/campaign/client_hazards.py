@@ -15,12 +15,20 @@ from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import Any
 
-from campaign.acts import LATCHED, end, expect_fault, heed, prove_latched, robot_in, silent, still
+from campaign.acts import (
+    LATCHED,
+    end,
+    expect_fault,
+    heed,
+    prove_latched,
+    robot_in,
+    silent,
+    still_once_eased,
+)
 from campaign.world import World, brisk, demo
 from hobnail.service.server import SocketServer
 
 GLIDE_S = 2.5  # from the certified top speed to a stand, with every foot put down
-EASE_S = 0.3  # after the last foot is down, for the body to come back over its feet
 CALL_S = 100e-6  # what a request costs
 
 
@@ -115,8 +123,7 @@ def _lost(state: str, *, leaves: bool) -> str:
             assert told["command"]["vx_m_s"] == 0.0, "the command outlives its time to live"
             expect_fault(world, "commander-lost")
             world.until("standing", GLIDE_S)
-            world.run(EASE_S)
-            still(world, 0.5)
+            still_once_eased(world, 0.5)
             world.until("resting", robot.safety.lost_rest_s + 2.0)
         else:
             world.run(0.5)

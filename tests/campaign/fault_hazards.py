@@ -16,7 +16,7 @@ from campaign.acts import (
     refused,
     robot_in,
     silent,
-    still,
+    still_once_eased,
 )
 from campaign.world import World
 from hobnail.service.faults import KINDS
@@ -76,7 +76,7 @@ def _held(world: World, state: str, name: str) -> None:
     expect_fault(world, name, cause=state not in LATCHED)
     if state == "walking":
         world.until("standing", 3.0)
-        still(world, 0.3)
+        still_once_eased(world, 0.3)
     else:
         world.run(0.3)
         assert (world.state == "stopped") == (state == "stopped")
