@@ -105,16 +105,20 @@ class LegCorrection:
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
             neutral_roll, neutral_shank = self._neutral
-            forward = radius * (shank - neutral_shank)
-            # Knee and hip that move the foot along x alone, in the plane of the leg.  A leg
-            # nearly straight cannot, and is left to roll a little farther.
+            ahead = radius * cos_roll * (shank - neutral_shank)
+            left = radius * (neutral_roll - roll)
+            # The roll that moves the foot along y, and in the plane of the leg what moves it
+            # along x and takes back the height that this roll costs.
+            depth, back = upper_down + lower_down, upper_back + lower_back
+            lower = y * left / depth
+            # A leg nearly straight cannot, and is left to roll a little farther.
             bend = sin(knee)
             if abs(bend) < LEAST_FOLD:
                 bend = copysign(LEAST_FOLD, bend)
-            turn = forward / (self._fold_m2 * bend)
-            a += radius * (roll - neutral_roll) / z
-            b -= turn * lower_back
-            c += turn * (upper_back + lower_back)
+            fold_m2 = self._fold_m2 * bend
+            a += left * cos_roll / depth
+            b += (lower_down * lower - lower_back * ahead) / fold_m2
+            c += (back * ahead - depth * lower) / fold_m2
         return roll + a, hip + b, knee + c
 
 
