@@ -23,6 +23,7 @@ from hobnail.motion.pacing import (
 )
 from hobnail.motion.plan import GaitPlan, joint_speeds_rad_s
 from hobnail.motion.planar import Twist
+from hobnail.motion.rocking import burden
 from hobnail.robot import Envelope, Gait, Robot, Vec2, Vec3
 from hobnail.servo import reachable_rad
 from robots import anvil, bramble, examples, fixed_robots, juniper, made_up, stilt
@@ -221,8 +222,9 @@ QUICK = pytest.mark.parametrize(
 @pytest.mark.parametrize("axis", [0, 1], ids=["ahead", "sideways"])
 def test_cycle_is_the_shortest_that_the_servos_can_follow(robot: Robot, name: str, axis: int) -> None:
     """With nine tenths of the speed (at full command up to 1.3 times that, for a moment in the
-    swing); a cycle a sixth shorter would ask for more, unless it is the shortest allowed."""
-    gait = replace(robot.gait(name), cycle_range_s=(0.1, 4.0))
+    swing); a cycle a sixth shorter would ask for more, unless it is the shortest allowed.  Without
+    a sway no cycle is kept from for rocking."""
+    gait = replace(robot.gait(name), cycle_range_s=(0.1, 4.0), body_shift=0.0)
     feet = feet_of(robot)
     plan = GaitPlan(robot, gait, feet)
     most = joint_speeds_rad_s(robot, robot.supply.nominal_v)
@@ -268,6 +270,20 @@ def test_automatic_cycles_are_whole_ticks(robot: Robot) -> None:
     short = replace(robot.gaits[0], cycle_range_s=(0.5 * longest_s, longest_s))
     _, rate_hz = GaitPlan(robot, short, feet_of(robot)).fit((robot.envelope.forward_m_s, 0.0, 0.0), 1.0)
     assert 1.0 / rate_hz <= longest_s * (1.0 + 1e-12)
+
+
+@pytest.mark.parametrize("robot", [juniper(), stilt()], ids=lambda robot: robot.name)
+def test_a_cycle_in_which_the_body_rocks_is_not_chosen(robot: Robot) -> None:
+    """Of a range to choose from, by servos that are quick enough for all of it: neither on the spot
+    nor on the way."""
+    gait = replace(robot.gait("trot"), cycle_range_s=(0.25, 0.8))
+    plan = GaitPlan(robot, gait, feet_of(robot))
+    tried = tuple(np.geomspace(*gait.cycle_range_s, 12).tolist())
+    heaviness = burden(robot, gait, tried)
+    for share in (0.0, 0.5):
+        _, rate_hz = plan.fit((share * robot.envelope.forward_m_s, 0.0, 0.0), 1.0)
+        chosen = float(np.interp(1.0 / rate_hz, tried, heaviness))
+        assert chosen <= np.median(heaviness)
 
 
 def test_joint_speeds_by_hand() -> None:

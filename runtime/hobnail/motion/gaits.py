@@ -37,9 +37,9 @@ class GaitPattern:
 # its supports: in a pace not over the feet of one side altogether.  A little beyond them it
 # would fall over; a little short of them it comes down on the feet that are to land anyhow.
 _SYMMETRICAL = {
-    "trot": (0.6, 0.5, (3.0, 4.5), 1.0),
+    "trot": (0.6, 0.5, (2.3, 4.6), 1.0),
     "crawl": (0.8, 0.25, (9.0, 30.0), 1.0),  # lateral sequence
-    "pace": (0.7, 0.0, (3.0, 4.5), 0.8),
+    "pace": (0.7, 0.0, (2.3, 4.6), 0.8),
     "amble": (0.7, 0.25, (4.0, 9.0), 1.0),
 }
 TRIPOD_TIMES = (4.0, 14.0)

@@ -7,7 +7,7 @@ Worked out with arrays once a gait is chosen; in the tick only looked up.
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 
 import numpy as np
 from numpy.typing import NDArray
@@ -29,6 +29,13 @@ SPEED_SHARE = 0.9
 FASTEST_LOAD = 1.3
 # Of a servo too slow for that even on the spot, more: the robot is to walk, however slowly.
 OVER_STANDING = 1.2
+# In the choice of a cycle, beside the burdens of `hobnail.motion.rocking`: load at full speed up
+# to which it costs nothing, what more costs, and how much is not told from still more.
+EASY_LOAD = 1.15
+OVERLOAD_COST = 8.0
+MOST_OVERLOAD = 10.0
+# Burden over that of the best cycle up to which a longer one may be gone over to at speed.
+HEAVIER = 0.5
 # Shares of the peak speed that are tried, close where an envelope asks far too much.
 LEVELS = np.array([0.0, 1 / 96, 1 / 48, 1 / 24, *(k / 12 for k in range(1, 13))])
 
@@ -81,7 +88,9 @@ class CycleTable:
     """The shortest cycle at which every joint can follow, by foot velocity.
 
     Quick, small steps tip a robot least (common practice); what bounds them is
-    the lift of the foot, and at speed the swing forward.  For each leg a grid
+    the lift of the foot, and at speed the swing forward.  A body that rocks on
+    its servos has cycles of its own to be kept from: the shortest of all is the
+    one at which it is expected to walk best.  For each leg a grid
     over the foot's velocity holds the shortest cycle within the gait's range
     whose straight step keeps all three joints within their speed; between grid
     points it is interpolated.  `fastest_m_s` is the greatest foot velocity along
@@ -98,21 +107,31 @@ class CycleTable:
         speeds_rad_s: Sequence[Vec3],
         peaks_m_s: Sequence[Vec2],
         reaches_m: Sequence[float],
+        burden: Callable[[tuple[float, ...]], Array] | None = None,
     ) -> None:
         """`neutrals_m` are relative to the hips; `speeds_rad_s` is what each joint may do;
         `peaks_m_s` the greatest foot velocity along x and y that commands can ask for;
-        `reaches_m` how far from neutral a stance may lead a foot."""
-        self.range_s = gait.cycle_range_s
+        `reaches_m` how far from neutral a stance may lead a foot; `burden` what speaks
+        against each cycle time (`hobnail.motion.rocking`)."""
         self.fastest_m_s: list[Vec2] = []
         self._tables: list[list[list[float]]] = []
         cycles = np.geomspace(*gait.cycle_range_s, CYCLES)
         levels = np.concatenate((-LEVELS[:0:-1], LEVELS))
         axis = np.linspace(-1.0, 1.0, GRID)
         nought = np.zeros(1)
-        for leg, neutral, speeds, peaks, reach in zip(
-            legs, neutrals_m, speeds_rad_s, peaks_m_s, reaches_m, strict=True
-        ):
-            step = _StraightStep(gait, leg, neutral, speeds, reach, cycles)
+        steps = [
+            _StraightStep(gait, leg, neutral, speeds, reach, cycles)
+            for leg, neutral, speeds, reach in zip(legs, neutrals_m, speeds_rad_s, reaches_m, strict=True)
+        ]
+        if burden:
+            burdens = burden(tuple(cycles.tolist()))
+            best = int(np.argmin(burdens + OVERLOAD_COST * _overload(steps, peaks_m_s)))
+            heavy = np.flatnonzero(burdens[best:] > burdens[best] + HEAVIER)
+            cycles = cycles[best : best + int(heavy[0]) if len(heavy) else None]
+            for step in steps:
+                step.take(cycles)
+        self.range_s: Span = (float(cycles[0]), gait.cycle_range_s[1])
+        for step, peaks in zip(steps, peaks_m_s, strict=True):
             fastest_x = _fastest(step.load(peaks[0] * levels, nought)[:, 0]) * peaks[0]
             fastest_y = _fastest(step.load(nought, peaks[1] * levels)[0]) * peaks[1]
             self.fastest_m_s.append((max(fastest_x, 1e-6), max(fastest_y, 1e-6)))
@@ -152,12 +171,16 @@ class _StraightStep:
         self._neutral = neutral_m
         self._speeds = speeds_rad_s
         self._reach = reach_m
-        self._cycles = cycles_s
         self._duty = gait.duty
         # Over the ground the foot goes one stride; the body goes on under it.
         self._ahead = shape[:, 0] - 0.5 * gait.duty - u * (1.0 - gait.duty)
         self._up = gait.lift_m * shape[:, 1]
-        self._step_s = (1.0 - gait.duty) * cycles_s / (SAMPLES - 1)
+        self.take(cycles_s)
+
+    def take(self, cycles_s: Array) -> None:
+        """Go on with these cycle times only."""
+        self._cycles = cycles_s
+        self._step_s = (1.0 - self._duty) * cycles_s / (SAMPLES - 1)
 
     def load(self, vx: Array, vy: Array) -> Array:
         """Greatest joint speed as a share of what is planned with, shape (x, y, cycles);
@@ -175,6 +198,19 @@ class _StraightStep:
         sweep = 0.5 * self._duty * cycle[:, 0] * np.hypot(vx, vy)[..., 0]
         out: Array = np.where(np.isnan(load) | (sweep > self._reach), np.inf, load)
         return out
+
+
+def _overload(steps: Sequence[_StraightStep], peaks_m_s: Sequence[Vec2]) -> Array:
+    """By how much the load at full speed is more than easy, for each cycle time."""
+    both, nought = np.array([-1.0, 1.0]), np.zeros(1)
+    loads = [
+        step.load(x * both, nought).max(axis=(0, 1)) for step, (x, _) in zip(steps, peaks_m_s, strict=True)
+    ]
+    loads += [
+        step.load(nought, y * both).max(axis=(0, 1)) for step, (_, y) in zip(steps, peaks_m_s, strict=True)
+    ]
+    overload: Array = np.clip(np.max(loads, axis=0) - EASY_LOAD, 0.0, MOST_OVERLOAD)
+    return overload
 
 
 def _fastest(load: Array) -> float:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from functools import partial
 
 from hobnail.motion.balance import GRAVITY_M_S2, centre_of_mass
 from hobnail.motion.foot import Foot
@@ -20,16 +21,19 @@ from hobnail.motion.pacing import (
 )
 from hobnail.motion.planar import Twist
 from hobnail.motion.reach import CycleReach, fit_shift
+from hobnail.motion.rocking import burden, rocks
 from hobnail.motion.schedule import load_ramp
 from hobnail.motion.steadiness import least_margin, steady_strides
 from hobnail.motion.support import support_centre
 from hobnail.motion.sway import Inertia, PeriodicSway
-from hobnail.robot import Gait, Robot, Vec2, Vec3
+from hobnail.robot import Gait, Robot, Span, Vec2, Vec3
 
 # Of a tick: that much is no reason to take one more.
 ROUNDING = 1e-6
 # Of a slow gait's margin on the spot, what speeding up and slowing down may use.
 SPEEDING_SHARE = 0.2
+# Ratio of the longest to the shortest cycle above which it matters which is chosen.
+WIDE = 1.1
 
 
 class GaitPlan:
@@ -90,6 +94,7 @@ class GaitPlan:
                 joint_speeds_rad_s(robot, robot.supply.nominal_v),
                 peak_foot_velocities(robot, self._neutral),
                 self.reach_m,
+                partial(burden, robot, gait) if rocks(gait) and _is_wide(gait.cycle_range_s) else None,
             )
 
     def fit(self, twist: Twist, slow_supply: float) -> tuple[Twist, float]:
@@ -119,6 +124,11 @@ class GaitPlan:
         ticks = cycle_s / self._robot.period_s
         whole = math.ceil(ticks - ROUNDING) * self._robot.period_s
         return whole if whole <= self._table.range_s[1] else cycle_s
+
+
+def _is_wide(cycle_range_s: Span) -> bool:
+    """Whether there is a choice to be made."""
+    return cycle_range_s[1] > WIDE * cycle_range_s[0]
 
 
 def joint_speeds_rad_s(robot: Robot, supply_v: float) -> list[Vec3]:
