@@ -93,14 +93,16 @@ class RobotJudge:
         x, y, z = pin.centerOfMass(self.model, self.data, self.configuration(joints_rad))
         return float(x), float(y), float(z)
 
-    def foot_jacobian(self, joints_rad: Sequence[Sequence[float]], leg: int) -> Any:
-        """d foot / d joints of that leg, 3 by 3, along the body's axes."""
+    def foot_jacobian(self, joints_rad: Sequence[Sequence[float]], leg: int, under_m: float = 0.0) -> Any:
+        """d foot / d joints of that leg, 3 by 3, along the body's axes; of the point of the lower
+        link that is so far under it."""
         q = self.configuration(joints_rad)
         full = pin.computeFrameJacobian(
             self.model, self.data, q, self.foot_frames[leg], pin.ReferenceFrame.LOCAL_WORLD_ALIGNED
         )
         first = 6 + 3 * leg
-        return full[:3, first : first + 3]
+        moves, turns = full[:3, first : first + 3], full[3:, first : first + 3]
+        return moves + np.cross(turns, (0.0, 0.0, -under_m), axisa=0, axisc=0)
 
     def static_torques(self, joints_rad: Sequence[Sequence[float]]) -> Any:
         """Torques that hold the robot's own links against gravity (9.81 m/s2 down), per leg."""

@@ -101,6 +101,24 @@ def test_torques_agree_with_pinocchio(robot: Robot, off: Vec3, force: Vec3, leg:
 
 
 @ROBOTS
+@examples(40)
+@given(off=angles_near, force=forces, leg=st.integers(0, 3))
+def test_a_round_foot_is_pushed_at_its_underside(robot: Robot, off: Vec3, force: Vec3, leg: int) -> None:
+    """By what a push changes: what rolling asks for is the same with and without."""
+    robot = plain(robot, radius_m=0.015)
+    joints = [list(angles) for angles in neutral_rad(robot)]
+    joints[leg] = [a + b for a, b in zip(joints[leg], off, strict=True)]
+    roll, hip, knee = joints[leg]
+    pushed, free = (
+        np.array(loaded(corrections(robot)[leg], robot.legs[leg], (roll, hip, knee), each))
+        for each in (force, STILL)
+    )
+    stiffness = np.array([joint.servo.stiffness_nm_rad for joint in robot.legs[leg].joints])
+    held = -judge_of(robot).foot_jacobian(joints, leg, 0.015).T @ np.array(force)
+    assert stiffness * (pushed - free) == pytest.approx(held, abs=1e-9)
+
+
+@ROBOTS
 @examples(20)
 @given(off=angles_near, force=forces)
 def test_a_springy_leg_so_commanded_rests_where_it_should(robot: Robot, off: Vec3, force: Vec3) -> None:

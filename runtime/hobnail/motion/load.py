@@ -87,9 +87,11 @@ class LegCorrection:
         cos_roll, sin_roll = cos(roll), sin(roll)
         push = up * cos_roll - left * sin_roll
         # Torques that hold: minus f . dp/dq, for the ground's push and the weights of the links.
-        c = lower_back * (cos_roll * at_foot - push) + lower_down * ahead
+        # A round foot is pushed at its underside.
+        radius = self._radius_m
+        c = lower_back * (cos_roll * at_foot - push) + (lower_down + radius * cos_roll) * ahead
         b = c + upper_back * (cos_roll * at_knee - push) + upper_down * ahead
-        a = left * z - up * y + side_nm * cos_roll
+        a = left * (z - radius) - up * y + side_nm * cos_roll
         a += sin_roll * (at_knee * upper_down + at_foot * lower_down)
         # How far the shafts stand off while they bear that and move, and to which side of their
         # slack that takes them.
@@ -101,7 +103,6 @@ class LegCorrection:
         a += slack_a * a / (abs(a) + sure_a)
         b += slack_b * b / (abs(b) + sure_b)
         c += slack_c * c / (abs(c) + sure_c)
-        radius = self._radius_m
         if radius:
             # Rolling about the y axis moves the centre along x, about the x axis along -y.
             neutral_roll, neutral_shank = self._neutral
