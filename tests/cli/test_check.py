@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from dataclasses import replace
 
 import pytest
@@ -12,6 +13,7 @@ from hobnail.cli.main import main
 from hobnail.workshop import check as module
 from hobnail.workshop.check import Check, Look, check, zero_moment_margin
 from robots import CONFIG, bramble, juniper
+from workshop.machines import sedge
 
 Output = pytest.CaptureFixture[str]
 
@@ -72,6 +74,19 @@ def test_a_slow_gait_that_tips_is_told(monkeypatch: pytest.MonkeyPatch) -> None:
     (crawl,) = (gait for gait in robot.gaits if gait.name == "crawl")
     (warning,) = check(replace(robot, gaits=(robot.gaits[0], crawl))).warnings
     assert "gait crawl has three feet or more down at any time, but at its fastest tips by 20 mm" in warning
+
+
+def test_a_trot_that_rocks_on_soft_servos_is_told_and_what_is_calmer(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Following what is told ends the warning."""
+    monkeypatch.setattr(module, "_border", lambda _: [(0.1, 0.0, 0.0)])
+    robot = sedge()
+    gait = replace(robot.gaits[0], cycle_s=0.38)
+    (warning,) = check(replace(robot, gaits=(gait,))).warnings
+    assert "gait trot: on its servos' springs the body rocks by about " in warning
+    told = re.search(r"with duty (\S+) and cycle_s (\S+) it would by about 0.0", warning)
+    assert told
+    calmer = replace(gait, duty=float(told[1]), cycle_s=float(told[2]))
+    assert check(replace(robot, gaits=(calmer,))).warnings == ()
 
 
 def test_slow_servos_are_told() -> None:

@@ -2,12 +2,15 @@
 
 `thistle` is tall: long thin legs, small feet, quick servos, a narrow trunk.
 `burdock` is squat: short legs, knees the other way, a wide heavy trunk, big feet.
+`sedge` is springy: soft servos, knees that point at each other, the built-in trot as it is.
 """
 
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
+from hobnail.motion.gaits import LIFT_SHARE, built_in_gait
 from hobnail.robot import (
     Board,
     Body,
@@ -114,6 +117,54 @@ def four_legs(
         posture_limits=PostureLimits(height_m=(height_m - 0.03, height_m + 0.02)),
         supply=Supply(nominal_v=supply_v),
     )
+
+
+def built_in_trot(height_m: float) -> Gait:
+    """As the configuration of a robot that stands so high has it when it names it only."""
+    corners = [(x, y, 0.0) for x in (0.1, -0.1) for y in (0.1, -0.1)]
+    pattern = built_in_gait("trot", corners)
+    return Gait(
+        name="trot",
+        duty=pattern.duty,
+        phases=pattern.phases,
+        cycle_range_s=pattern.cycle_range_s(height_m),
+        lift_m=LIFT_SHARE * height_m,
+        body_shift=pattern.body_shift,
+    )
+
+
+def sedge() -> Robot:
+    """Springy: it rocks where its cycle suits that."""
+    servo = Servo(
+        name="soft",
+        speed_rad_s=math.radians(60.0) / 0.12,
+        torque_nm=20 * KGF_CM,
+        rated_v=6.0,
+        stiffness_nm_rad=14.0,
+        dead_band_us=3.0,
+    )
+    hind, front = (
+        four_legs(
+            "sedge",
+            hips_m=(0.22, 0.11),
+            links_m=(0.04, 0.105, 0.11),
+            knee=knee,
+            trunk_kg=1.5,
+            leg_kg=(0.12, 0.09, 0.04),
+            com_m=(-0.01, 0.0, 0.0),
+            foot_radius_m=0.010,
+            servo=servo,
+            height_m=0.16,
+            rest_height_m=0.05,
+            belly_m=0.045,
+            spread_m=0.01,
+            envelope=Envelope(forward_m_s=0.2, sideways_m_s=0.1, turn_rad_s=0.8),
+            supply_v=6.0,
+            trot=built_in_trot(0.16),
+        )
+        for knee in (-1, 1)
+    )
+    return replace(hind, legs=(*front.legs[:2], *hind.legs[2:]))
 
 
 def thistle() -> Robot:

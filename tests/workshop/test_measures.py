@@ -136,8 +136,10 @@ def test_drift_over_less_than_a_metre_is_chance() -> None:
     assert short.failures() == []
 
 
-def test_straightness_is_asked_of_straight_walks_only() -> None:
-    assert measure(drawn((0.0, 0.1, 0.0), (0.0, 0.1, 0.01))).drift_rad_m == 0.0
+def test_straightness_is_asked_of_straight_walks_in_every_direction_and_of_no_other() -> None:
+    assert measure(drawn((0.0, 0.1, 0.0), (0.0, 0.1, 0.01))).drift_rad_m == pytest.approx(0.1)
+    assert measure(drawn((-0.3, 0.4, 0.0), (-0.3, 0.4, 0.01))).drift_rad_m == pytest.approx(0.02)
+    assert measure(drawn((0.1, 0.0, 0.5), (0.1, 0.0, 0.51))).drift_rad_m == 0.0
 
 
 def test_turning_too_far_is_told() -> None:

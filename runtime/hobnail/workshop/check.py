@@ -13,6 +13,7 @@ from dataclasses import dataclass, replace
 
 from hobnail.controller import Controller, Tick
 from hobnail.motion.balance import GRAVITY_M_S2, centre_of_mass, neutral_feet
+from hobnail.motion.rocking import burden, rocking_rad, rocks
 from hobnail.motion.steadiness import least_margin
 from hobnail.motion.support import stability_margin, support_centre
 from hobnail.robot import Gait, Robot, Vec2, Vec3, WalkResponse
@@ -23,6 +24,11 @@ REACHED = 0.98  # of the command: less counts as not reached
 # The zero-moment point may be outside the feet by this for moments, as in setting off, before
 # a body tips that takes a tenth of a second to begin to fall (common practice).
 TIPPING_M = 0.005
+# A body that rocks by more on its servos walks badly (our rehearsals).
+ROCKING_RAD = math.radians(1.0)
+# What is tried to find a calmer trot: duty factors, and cycles as shares of the pendulum's time.
+CALMER_DUTIES = (0.6, 0.65, 0.7)
+CALMER_TIMES = tuple(2.4 + 0.2 * k for k in range(12))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -219,7 +225,34 @@ def _warnings(robot: Robot, gaits: tuple[GaitCheck, ...]) -> list[str]:
                 f"{name} has three feet or more down at any time, but at its fastest tips by "
                 f"{-gait.margin_m * 1000:.0f} mm; walk it slower, or raise its duty or cycle_range_s"
             )
+    found += _rocking(robot, robot.gaits[0])
     return found
+
+
+def _rocking(robot: Robot, gait: Gait) -> list[str]:
+    """What is to be told of a gait in all of whose cycles the body rocks on its servos."""
+    if not rocks(gait):
+        return []
+    low, high = gait.cycle_range_s
+    own = (gait.cycle_s,) if gait.cycle_s else tuple(low + k / 4 * (high - low) for k in range(5))
+    least = min(rocking_rad(robot, gait, own))
+    if least <= ROCKING_RAD:
+        return []
+    pendulum_s = math.sqrt(robot.stance.height_m / GRAVITY_M_S2)
+    times = tuple(share * pendulum_s for share in CALMER_TIMES)
+    _, duty, cycle_s = min(
+        (cost, duty, cycle_s)
+        for duty in CALMER_DUTIES
+        for cost, cycle_s in zip(burden(robot, replace(gait, duty=duty), times).tolist(), times, strict=True)
+    )
+    (calmer,) = rocking_rad(robot, replace(gait, duty=duty), (cycle_s,))
+    told = f"gait {gait.name}: on its servos' springs the body rocks by about {math.degrees(least):.1f} deg"
+    if calmer > 0.5 * least:
+        return [f"{told}, and would in other cycles; use stiffer servos"]
+    return [
+        f"{told}; with duty {duty:g} and cycle_s {cycle_s:.2f} it would by about "
+        f"{math.degrees(calmer):.1f}: rehearse that, or use stiffer servos"
+    ]
 
 
 def _is_steady(robot: Robot, gait: Gait) -> bool:

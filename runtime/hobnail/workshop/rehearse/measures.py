@@ -36,8 +36,8 @@ MID_SWING = (0.25, 0.75)
 class Stretch:
     """One stretch of constant command: twists are (vx, vy, yaw rate) at the body origin.
 
-    `drift_rad_m` is the heading gained a metre of a walk straight ahead or back, 0 for any
-    other; `sideways_m_m` the way off to the side a metre, 0 for what turns or does not travel.
+    `drift_rad_m` is the heading gained a metre of a straight walk in whatever direction, and
+    `sideways_m_m` the way off to the side a metre; both 0 for what turns or does not travel.
     """
 
     start_s: float
@@ -272,7 +272,7 @@ def _stretches(r: Recording) -> list[Stretch]:
         speed = math.hypot(command[0], command[1])
         drift = sideways = 0.0
         if speed > 0.02 and not command[2]:
-            drift = float(mean[2]) / speed if not command[1] else 0.0
+            drift = float(mean[2]) / speed
             sideways = float(command[0] * mean[1] - command[1] * mean[0]) / speed**2
         found.append(
             Stretch(
