@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import subprocess
 import sys
@@ -23,3 +24,20 @@ def hobnail(*words: str, **changes: str) -> subprocess.CompletedProcess[str]:
         check=False,
         timeout=60,
     )
+
+
+def hobnail_on_a_terminal(*words: str) -> tuple[int, str]:
+    """Exit code and output of `hobnail` on a terminal of 80 columns without colours."""
+    main_end, terminal = os.openpty()
+    with subprocess.Popen(
+        [sys.executable, "-m", "hobnail.cli.main", *words],
+        env=subprocess_environment(COLUMNS="80", TERM="xterm", NO_COLOR="1"),
+        stdout=terminal,
+    ) as process:
+        os.close(terminal)
+        shown = b""
+        with contextlib.suppress(OSError):  # the other end is closed
+            while part := os.read(main_end, 65536):
+                shown += part
+        os.close(main_end)
+        return process.wait(timeout=60), shown.decode()

@@ -3,16 +3,13 @@
 from __future__ import annotations
 
 import json
-import os
 import socket
-import subprocess
-import sys
 from pathlib import Path
 from typing import Any
 
 import pytest
 
-from command_line import subprocess_environment
+from command_line import hobnail_on_a_terminal
 from fast_service import FastService
 from hobnail.cli.doctor import exit_code
 from hobnail.cli.main import main
@@ -145,21 +142,7 @@ def test_exit_codes() -> None:
 
 
 def test_it_fits_eighty_columns_on_a_terminal() -> None:
-    main_end, terminal = os.openpty()
-    done = subprocess.run(
-        [sys.executable, "-m", "hobnail.cli.main", "doctor", *UNIT, JUNIPER, "--driver", "pca9685"],
-        env=subprocess_environment(COLUMNS="80", TERM="xterm", NO_COLOR="1"),
-        stdout=terminal,
-        check=False,
-    )
-    os.close(terminal)
-    shown = b""
-    try:
-        while part := os.read(main_end, 65536):
-            shown += part
-    except OSError:  # the other end is closed
-        pass
-    os.close(main_end)
-    assert done.returncode in (0, 69)  # 0 on a machine that has such a board
-    assert max(map(len, shown.decode().splitlines())) < 80
-    assert b"\x1b" not in shown
+    code, shown = hobnail_on_a_terminal("doctor", *UNIT, JUNIPER, "--driver", "pca9685")
+    assert code in (0, 69)  # 0 on a machine that has such a board
+    assert max(map(len, shown.splitlines())) < 80
+    assert "\x1b" not in shown

@@ -18,7 +18,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from command_line import subprocess_environment
+from command_line import hobnail_on_a_terminal, subprocess_environment
 from hobnail.cli.main import main
 from hobnail.service.archive import RECORDINGS
 from hobnail.service.recorder import HEADER_BYTES, RING_NAME, _row_struct
@@ -76,24 +76,10 @@ def test_the_incident_comes_first_then_the_story_then_the_tick_before(tmp_path: 
 
 def test_it_fits_eighty_columns_on_a_terminal(tmp_path: Path) -> None:
     stopped(tmp_path)
-    main_end, terminal = os.openpty()
-    done = subprocess.run(
-        [sys.executable, "-m", "hobnail.cli.main", "log"],
-        env=subprocess_environment(COLUMNS="80", TERM="xterm", NO_COLOR="1"),
-        stdout=terminal,
-        check=False,
-    )
-    os.close(terminal)
-    shown = b""
-    try:
-        while part := os.read(main_end, 65536):
-            shown += part
-    except OSError:  # the other end is closed
-        pass
-    os.close(main_end)
-    assert done.returncode == 0
-    assert max(map(len, shown.decode().splitlines())) < 80
-    assert b"\x1b" not in shown
+    code, shown = hobnail_on_a_terminal("log")
+    assert code == 0
+    assert max(map(len, shown.splitlines())) < 80
+    assert "\x1b" not in shown
 
 
 def test_as_json(tmp_path: Path, capsys: Output) -> None:

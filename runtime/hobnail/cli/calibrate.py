@@ -15,7 +15,7 @@ from pathlib import Path
 from time import sleep
 from typing import TYPE_CHECKING
 
-from hobnail.cli.options import Parser, add_json, number, print_json, whole
+from hobnail.cli.options import Parser, add_driver, add_json, number, print_json, whole
 from hobnail.errors import EX_USAGE, CommandError, ConfigError, ServiceError
 
 if TYPE_CHECKING:
@@ -42,12 +42,7 @@ def configure(parser: Parser) -> None:
         type=number("--measured-hz", "Hz", above=0),
         help="with --clock: the frame rate as measured already; nothing is driven",
     )
-    parser.add_argument(
-        "--driver",
-        metavar="NAME[:ARGUMENT]",
-        default="simulated",
-        help="what the pulses go to: simulated (default), pca9685, chip-model, or another that is installed",
-    )
+    add_driver(parser)
     parser.add_argument(
         "--who", metavar="NAME", default=None, help="who measures, for the record (default: the login)"
     )

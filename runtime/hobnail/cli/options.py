@@ -94,6 +94,16 @@ def add_socket(parser: argparse.ArgumentParser) -> None:
     )
 
 
+def add_driver(parser: Parser) -> None:
+    """--driver NAME[:ARGUMENT]."""
+    parser.add_argument(
+        "--driver",
+        metavar="NAME[:ARGUMENT]",
+        default="simulated",
+        help="what the pulses go to: simulated (default), pca9685, chip-model, or another that is installed",
+    )
+
+
 def add_json(parser: argparse.ArgumentParser, what: str = "print JSON instead of text") -> None:
     """`--json`."""
     parser.add_argument("--json", action="store_true", help=what)

@@ -7,18 +7,13 @@ import sys
 from argparse import Namespace
 from pathlib import Path
 
-from hobnail.cli.options import Parser, add_json, print_json
+from hobnail.cli.options import Parser, add_driver, add_json, print_json
 
 
 def configure(parser: Parser) -> None:
     """Arguments and help."""
     parser.add_argument("config", metavar="CONFIG", help="the robot, such as config/juniper.yaml")
-    parser.add_argument(
-        "--driver",
-        metavar="NAME[:ARGUMENT]",
-        default="simulated",
-        help="what the pulses go to: simulated (default), pca9685, chip-model, or another that is installed",
-    )
+    add_driver(parser)
     parser.add_argument(
         "--route",
         metavar="FILE",
