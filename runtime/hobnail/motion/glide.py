@@ -12,13 +12,20 @@ quintic from rest is the minimum-jerk profile of Flash & Hogan (1985).
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import TypeVar
+
+import numpy as np
+from numpy.typing import NDArray
 
 # Time in which a slope at its full rate is taken off when hardly any way is left.
 EASE_S = 0.1
 
 
-def minimum_jerk(u: float) -> float:
-    """10 u^3 - 15 u^4 + 6 u^5 for u in 0..1 (Flash & Hogan 1985)."""
+Number = TypeVar("Number", float, NDArray[np.float64])
+
+
+def minimum_jerk(u: Number) -> Number:
+    """10 u^3 - 15 u^4 + 6 u^5 for u in 0..1, one or an array (Flash & Hogan 1985)."""
     return u * u * u * (10.0 + u * (6.0 * u - 15.0))
 
 

@@ -92,18 +92,25 @@ def rocking_rad(robot: Robot, gait: Gait, cycles_s: tuple[float, ...]) -> tuple[
     case = np.zeros((*cycle.shape[:2], 12 + 3 * len(robot.legs)))
     state, place, speed, push = case[..., :12], case[..., :6], case[..., 6:12], case[..., 12:]
     feet_push = push.reshape(*push.shape[:2], -1, 3)
+    up = feet_push[..., 2:]
+    down, change, step = np.empty(up.shape, dtype=bool), np.empty_like(speed), np.empty_like(place)
     place[..., 3], place[..., 4] = FIRST_TILT_RAD
     time = cycle / steps
     tilt = np.zeros(cycle.shape[:2])
     for count in range(CYCLES):
-        for k in range(steps):  # speeds first, then places by the new speeds: no energy is made
-            np.subtract(sent[k], state @ held, out=push)
-            feet_push *= feet_push[..., 2:] > 0.0
-            change = case @ moves
-            change -= rest[k]
-            change *= time
-            speed += change
-            place += time * speed
+        # Speeds first, then places by the new speeds: no energy is made.  In place, for this
+        # is most of what a plan takes.
+        for sent_now, rest_now in zip(sent, rest, strict=True):
+            np.matmul(state, held, out=push)
+            np.subtract(sent_now, push, out=push)
+            np.greater(up, 0.0, out=down)
+            np.multiply(feet_push, down, out=feet_push)
+            np.matmul(case, moves, out=change)
+            np.subtract(change, rest_now, out=change)
+            np.multiply(change, time, out=change)
+            np.add(speed, change, out=speed)
+            np.multiply(time, speed, out=step)
+            np.add(place, step, out=place)
             if count >= CYCLES - JUDGED:
                 tilt += place[..., 3] ** 2 + place[..., 4] ** 2
         np.clip(state, -FARTHEST, FARTHEST, out=state)
@@ -161,7 +168,7 @@ def _schedule(gait: Gait, steps: int) -> tuple[Array, Array, Array]:
     """Over a cycle, foot by foot: share of the weight, lift (m) and rise (m for each cycle)."""
     clocks = (np.arange(steps) + 0.5) / steps
     since = (clocks[:, None] - np.array(gait.phases)) % 1.0
-    loads = np.array([[carried(share, gait.duty) for share in row] for row in since.tolist()])
+    loads = carried(since, gait.duty)
     loads /= np.maximum(loads.sum(axis=1, keepdims=True), 1e-9)
     path = FootPath(gait.swing)
     in_air = np.clip((since - gait.duty) / (1.0 - gait.duty), 0.0, 1.0)

@@ -9,7 +9,12 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+import numpy as np
+from numpy.typing import NDArray
+
 from hobnail.motion.glide import minimum_jerk
+
+Array = NDArray[np.float64]
 
 # Share of a cycle over which a foot takes up and gives off its load: the time in
 # which both of two alternating sets of feet are down, within these bounds.
@@ -21,11 +26,11 @@ def load_ramp(duty: float) -> float:
     return max(min(duty - 0.5, LOAD_RAMP[1]), LOAD_RAMP[0])
 
 
-def carried(since: float, duty: float) -> float:
-    """How much a foot carries, 0 to 1, at a share of the cycle since its touch-down: taken up
-    and given off along minimum-jerk ramps."""
-    u = min(since, duty - since) / load_ramp(duty)
-    return minimum_jerk(min(max(u, 0.0), 1.0))
+def carried(since: Array, duty: float) -> Array:
+    """How much feet carry, 0 to 1, at shares of the cycle since their touch-down: taken up and
+    given off along minimum-jerk ramps; of the same shape."""
+    u = np.clip(np.minimum(since, duty - since) / load_ramp(duty), 0.0, 1.0)
+    return minimum_jerk(u)
 
 
 def leg_phase(clock: float, phase: float) -> float:

@@ -10,13 +10,17 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
 
 from hobnail.motion.schedule import leg_phase
 from hobnail.motion.support import stability_margin
 from hobnail.motion.sway import Inertia, PeriodicSway
 from hobnail.robot import Gait, Vec2, Vec3
 
-INSTANTS = 40  # of the cycle, at which the margin is taken
+CLOCKS = (np.arange(40) + 0.5) / 40  # of the cycle, at which the margin is taken
 HALVINGS = 6  # of the longest stride, to find where the margin ends
 MARGIN_M = 0.015
 # Of a gait's margin on the spot, where that is small already, this much must be left.
@@ -26,20 +30,27 @@ MARGIN_SHARE = 0.65
 def least_margin(feet: Sequence[Vec2], gait: Gait, centre: Vec2, stride: Vec3) -> float:
     """Least margin (m) over a cycle of the zero-moment point that the sway asks for, for
     neutral `feet` and a body whose mass is over `centre`; negative outside the feet."""
-    wanted = PeriodicSway(feet, gait, Inertia(1.0, 0.0))  # without height the shift is the point itself
     sx, sy, turn = stride
+    on_the_spot, by_ahead, by_left, by_turn = _zero_moment_ways(tuple(feet), gait)
+    point = on_the_spot + sx * by_ahead + sy * by_left + turn * by_turn
+    point += np.array(centre)[:, None]
     least = math.inf
-    for step in range(INSTANTS):
-        clock = (step + 0.5) / INSTANTS
+    for clock, (x0, y0) in zip(CLOCKS.tolist(), point.T.tolist(), strict=True):
         standing = []
         for (x, y), phase in zip(feet, gait.phases, strict=True):
             since = leg_phase(clock, phase)
             if since < gait.duty:
                 ahead = 0.5 * gait.duty - since
                 standing.append((x + ahead * (sx - turn * y), y + ahead * (sy + turn * x)))
-        shift_x, shift_y, _, _ = wanted.at(clock, (sx, sy, turn, 1.0))
-        least = min(least, stability_margin(standing, (centre[0] + shift_x, centre[1] + shift_y)))
+        least = min(least, stability_margin(standing, (x0, y0)))
     return least
+
+
+@lru_cache(maxsize=8)
+def _zero_moment_ways(feet: tuple[Vec2, ...], gait: Gait) -> NDArray[np.float64]:
+    """As `PeriodicSway.over_cycle`, in m of stride and rad of turn in a cycle: without height the
+    shift is the zero-moment point itself."""
+    return PeriodicSway(feet, gait, Inertia(1.0, 0.0)).over_cycle(CLOCKS, 1.0)
 
 
 def steady_strides(feet: Sequence[Vec2], gait: Gait, centre: Vec2, longest: Vec3) -> Vec3 | None:

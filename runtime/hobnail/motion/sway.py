@@ -150,7 +150,7 @@ class PeriodicSway:
 def _centroid(feet: Sequence[Vec2], since: Array, duty: float) -> Array:
     """Centroid of the feet over a cycle, each as much as it carries, about the body's pose;
     `since` is the share of the cycle since touch-down, foot by foot."""
-    loads = np.array([[carried(share, duty) for share in foot] for foot in since.tolist()])
+    loads = carried(since, duty)
     loads /= np.maximum(loads.sum(axis=0), NOTHING)
     x, y = (np.array(feet).T[:, :, None] * loads).sum(axis=1)
     swept = loads * (0.5 * duty - since)
@@ -164,8 +164,9 @@ def _foot_ways(since: Array, gait: Gait) -> Series:
     stride, and up; shape (feet, 2, harmonics)."""
     path = FootPath(gait.swing)
     in_air = np.clip((since - gait.duty) / (1.0 - gait.duty), 0.0, 1.0)
-    flown = np.array([[path.at(u)[:2] for u in leg] for leg in in_air.tolist()])
-    along = 0.5 * gait.duty - since + np.where(in_air > 0.0, flown[..., 0], 0.0)
+    flown = np.zeros((*in_air.shape, 2))
+    flown[in_air > 0.0] = [path.at(u)[:2] for u in in_air[in_air > 0.0].tolist()]
+    along = 0.5 * gait.duty - since + flown[..., 0]
     return _series(np.stack((along, gait.lift_m * flown[..., 1]), axis=1))
 
 
