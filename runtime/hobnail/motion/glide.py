@@ -12,16 +12,17 @@ quintic from rest is the minimum-jerk profile of Flash & Hogan (1985).
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import TypeVar
+from typing import TYPE_CHECKING, TypeVar
 
-import numpy as np
-from numpy.typing import NDArray
+if TYPE_CHECKING:  # configurations are read without it
+    import numpy as np
+    from numpy.typing import NDArray
 
 # Time in which a slope at its full rate is taken off when hardly any way is left.
 EASE_S = 0.1
 
 
-Number = TypeVar("Number", float, NDArray[np.float64])
+Number = TypeVar("Number", float, "NDArray[np.float64]")
 
 
 def minimum_jerk(u: Number) -> Number:

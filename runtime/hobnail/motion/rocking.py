@@ -25,7 +25,7 @@ from hobnail.motion.balance import GRAVITY_M_S2, centre_of_mass, link_masses, ne
 from hobnail.motion.foot_path import FootPath
 from hobnail.motion.gaits import fewest_feet_down
 from hobnail.motion.leg import LegKinematics
-from hobnail.motion.schedule import carried
+from hobnail.motion.sway import carried
 from hobnail.robot import Gait, Joint, Leg, Robot, Vec2, Vec3
 
 FIRST_TILT_RAD = (0.016, 0.012)  # roll and pitch

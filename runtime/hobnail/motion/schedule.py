@@ -9,13 +9,6 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-import numpy as np
-from numpy.typing import NDArray
-
-from hobnail.motion.glide import minimum_jerk
-
-Array = NDArray[np.float64]
-
 # Share of a cycle over which a foot takes up and gives off its load: the time in
 # which both of two alternating sets of feet are down, within these bounds.
 LOAD_RAMP = (0.05, 0.1)
@@ -24,13 +17,6 @@ LOAD_RAMP = (0.05, 0.1)
 def load_ramp(duty: float) -> float:
     """Share of the cycle over which a foot takes up its load, and gives it off."""
     return max(min(duty - 0.5, LOAD_RAMP[1]), LOAD_RAMP[0])
-
-
-def carried(since: Array, duty: float) -> Array:
-    """How much feet carry, 0 to 1, at shares of the cycle since their touch-down: taken up and
-    given off along minimum-jerk ramps; of the same shape."""
-    u = np.clip(np.minimum(since, duty - since) / load_ramp(duty), 0.0, 1.0)
-    return minimum_jerk(u)
 
 
 def leg_phase(clock: float, phase: float) -> float:

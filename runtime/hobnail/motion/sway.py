@@ -16,8 +16,8 @@ from numpy.typing import NDArray
 
 from hobnail.motion.balance import GRAVITY_M_S2
 from hobnail.motion.foot_path import FootPath
-from hobnail.motion.glide import AT_REST, Motion, settle
-from hobnail.motion.schedule import carried
+from hobnail.motion.glide import AT_REST, Motion, minimum_jerk, settle
+from hobnail.motion.schedule import load_ramp
 from hobnail.motion.swung import SwungLeg
 from hobnail.robot import Gait, Vec2
 
@@ -157,6 +157,13 @@ def _centroid(feet: Sequence[Vec2], since: Array, duty: float) -> Array:
     by_x, by_y = np.array(feet).T @ swept
     both, none = swept.sum(axis=0), np.zeros_like(x)
     return np.stack((x, y, both, none, none, both, -by_y, by_x))
+
+
+def carried(since: Array, duty: float) -> Array:
+    """How much feet carry, 0 to 1, at shares of the cycle since their touch-down: taken up and
+    given off along minimum-jerk ramps; of the same shape."""
+    u = np.clip(np.minimum(since, duty - since) / load_ramp(duty), 0.0, 1.0)
+    return minimum_jerk(u)
 
 
 def _foot_ways(since: Array, gait: Gait) -> Series:
