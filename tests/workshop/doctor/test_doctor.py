@@ -235,6 +235,14 @@ def test_real_time_scheduling(
     assert one(machine.scheduling(Case(changed, unit=unit)))[0] == grade
 
 
+@pytest.mark.parametrize(("uid", "advice"), [(0, "hobnail log --all"), (1000, "as root")])
+def test_real_time_of_a_service_that_no_unit_runs(world: World, uid: int, advice: str) -> None:
+    """Who is root already is not sent to become it."""
+    changed = replace(world, find_user=lambda _: User("anyone", uid, frozenset()))
+    grade, told = one(machine.scheduling(Case(changed, state={})))
+    assert (grade, advice in told) == ("note", True)
+
+
 def test_locked_memory(world: World) -> None:
     gardener = User("gardener", 1000, frozenset())
     case = Case(replace(world, limit=lambda _: 8_388_608, find_user=lambda _: gardener))

@@ -75,7 +75,13 @@ def scheduling(case: Case) -> Iterator[Finding]:
             )
         return
     if case.state is not None:
-        yield note("real time", "not known: nothing says which process the service is", "run this as root")
+        yield note(
+            "real time",
+            "not known: the service manager does not say which process the service is",
+            "a service started by hand says it itself, with --realtime: `hobnail log --all`"
+            if _is_root(case)
+            else "run this as root",
+        )
         return
     allowed, who = _allowed(case, "LimitRTPRIO", resource.RLIMIT_RTPRIO)
     if allowed is None or allowed >= FIFO_PRIORITY or (not case.is_installed and _is_root(case)):
